@@ -1,0 +1,124 @@
+"""Decoded programs: what the decoder produces and every later room works on.
+
+Addresses of code are byte addresses of operation words: word i stands at ``i * core.words.bytes``. A position counts
+bundles in program order, an idle word of k beats counting k.
+"""
+
+from __future__ import annotations
+
+import enum
+from collections.abc import Mapping
+from functools import cached_property
+
+import attrs
+
+from vliwsim.description.core import Core
+from vliwsim.description.operations import Operation
+
+
+@attrs.frozen
+class Register:
+    """A register operand: its number in the core, and for a half operand which one (0 low, 1 high). Pairs name the even one."""
+
+    number: int
+    half: int | None = None
+
+
+@attrs.frozen
+class Immediate:
+    """A constant operand, as the raw unsigned 32-bit value the operation receives (16-bit for a half operand).
+
+    As a target it is the byte address of a bundle.
+    """
+
+    value: int
+
+
+@attrs.frozen
+class Label:
+    """A target not yet placed; only between the assembler and the encoder, never in decoded code."""
+
+    name: str
+
+
+class Mode(enum.Enum):
+    """How an address operand makes its address and what it leaves in the base."""
+
+    OFFSET = "offset"  # [base + step]: address base + step, base unchanged
+    AFTER = "after"  # [base then +step]: address base, then base becomes base + step
+    BEFORE = "before"  # [+step then base]: base becomes base + step, and that is the address
+
+
+@attrs.frozen
+class Address:
+    """An address operand. ``ring`` is the size in bytes of a power-of-two ring (AFTER only), 0 for none.
+
+    In a ring of N bytes the base becomes ``base & ~(N - 1) | (base + step) & (N - 1)``.
+    """
+
+    base: int
+    mode: Mode
+    step: Register | Immediate
+    ring: int = 0
+
+
+Place = Register | Immediate | Address | Label
+
+
+@attrs.frozen
+class Guard:
+    """On when the register is not 0, or with ``negated`` when it is 0."""
+
+    register: int
+    negated: bool = False
+
+
+@attrs.frozen
+class Instruction:
+    """One operation in a bundle: its slot index in the core, guard, and one place an operand of the operation."""
+
+    operation: Operation
+    slot: int
+    places: tuple[Place, ...]
+    guard: Guard | None = None
+
+
+@attrs.frozen
+class Bundle:
+    """One bundle, or an idle word of ``beats`` empty bundles (then ``instructions`` is empty).
+
+    ``address``: byte address of its first word. ``position``: in program order. ``words``: operation words it takes,
+    extensions included. ``straddles``: its words cross a fetch-group boundary. Instructions stand in slot order, those
+    of one slot as written.
+    """
+
+    address: int
+    position: int
+    instructions: tuple[Instruction, ...] = ()
+    beats: int = 1
+    words: int = 1
+    straddles: bool = False
+
+
+@attrs.frozen
+class Program:
+    """Decoded code for one core, in program order; execution enters at the first bundle.
+
+    ``code_bytes`` is the encoded size, padding included.
+    """
+
+    core: Core
+    bundles: tuple[Bundle, ...]
+    code_bytes: int
+    labels: Mapping[str, int] = attrs.field(factory=dict)
+    """Label name → byte address, for people; the machine does not use it."""
+
+    @cached_property
+    def index_at(self) -> Mapping[int, int]:
+        """Bundle index by byte address."""
+        return {bundle.address: k for k, bundle in enumerate(self.bundles)}
+
+    @cached_property
+    def index_at_position(self) -> Mapping[int, int]:
+        """Bundle index by program-order position of its first beat."""
+        return {bundle.position: k for k, bundle in enumerate(self.bundles)}
