@@ -189,10 +189,7 @@ def parse_toml(file: str, text: str, error: type[VliwsimError]) -> TomlFile:
 def _scan(text: str) -> Iterator[tuple[KeyPath, int, int]]:
     """(key path, offset, length) of every table, key and array element of a well-formed TOML text, in file order."""
     tokens = [m for m in _TOKEN.finditer(text) if m.lastgroup != "space"]
-    table: LONGEST_EXCERPT = 240
-"""Characters of a line that is shown in a diagnostic."""
-
-KeyPath = ()
+    table: KeyPath = ()
     counts: dict[KeyPath, int] = {}
     open_values: list[tuple[str, KeyPath, int]] = []  # bracket, path of the array or inline table, elements seen
     k = 0
