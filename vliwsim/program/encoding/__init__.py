@@ -1,0 +1,1 @@
+"""Words: their layout on a core, the encoder, the decoder, and the image file."""

@@ -1,0 +1,273 @@
+"""Where every field of an operation word stands: computed from the core, drawn by :func:`picture`.
+
+A word, from bit 0 up::
+
+    last | extended | slot | operation | guard | the operation's own operand fields | immediate
+
+Widths come from the core's numbers of slots and registers, positions from the widths; the numeric codes of operations
+are in the operation tables. So one core has one layout for ever, whatever operations it has or lacks. What an operation
+does with the bits above the header is its :class:`Format`, built when first asked for.
+
+Code points of the fields:
+
+last        1 in the last operation of a bundle
+extended    1 when the next word is an extension: 32 bits of immediate, zeros above
+slot        index of the slot in the core
+operation   the code of the tables; 0 is an idle word, whose bits above this field count its beats (0: padding)
+guard       0 none; 1 + 2 r on when register r is not 0; 2 + 2 r on when it is 0
+register    the register's number; one code more, the number of registers, is *immediate* where that may stand
+half        0 the low half, 1 the high one; 0 beside an immediate
+mode        0 ``[base + step]``, 1 ``[base then +step]``, 2 ``[+step then base]``
+ring        0 none, else the base-2 logarithm of its bytes
+immediate   two's complement; 0 when the operation has none here
+"""
+
+from __future__ import annotations
+
+from functools import cached_property, lru_cache
+
+import attrs
+
+from vliwsim.description.core import Core
+from vliwsim.description.operations import Operand, Operation, OperationSet, Role
+from vliwsim.problems import CoreError, OperationError, problem
+from vliwsim.program.code import Mode
+
+CODE_BITS = 10
+IMMEDIATE_BITS = 32
+BEAT_BITS = 31
+RING_BITS = 5
+MOST_OPERATIONS = 64
+"""The most operations a bundle may hold, legal or not."""
+
+MODES = (Mode.OFFSET, Mode.AFTER, Mode.BEFORE)
+"""Address modes by their code."""
+
+
+@attrs.frozen
+class Field:
+    """``width`` bits of a word from bit ``low`` up."""
+
+    name: str
+    low: int
+    width: int
+
+    @property
+    def end(self) -> int:
+        """The first bit above the field."""
+        return self.low + self.width
+
+    @property
+    def mask(self) -> int:
+        """The largest value the field holds."""
+        return (1 << self.width) - 1
+
+    def take(self, word: int) -> int:
+        """The field's value in ``word``."""
+        return word >> self.low & self.mask
+
+
+@attrs.frozen
+class AddressFields:
+    """The fields of an address operand, in this order."""
+
+    mode: Field
+    base: Field
+    step: Field
+    ring: Field
+
+
+@attrs.frozen
+class Part:
+    """The fields of one operand: a register, perhaps with a half; or an address; or, of a constant, none at all.
+
+    ``immediate``: the register (or ``step``) field may hold the code for an immediate. ``value_bits``: width of an
+    immediate given here, 16 or 32.
+    """
+
+    operand: Operand
+    register: Field | None = None
+    half: Field | None = None
+    address: AddressFields | None = None
+    immediate: bool = False
+    value_bits: int = 32
+
+    @property
+    def fields(self) -> tuple[Field, ...]:
+        """The part's fields from the low bits up."""
+        if self.address is not None:
+            return (self.address.mode, self.address.base, self.address.step, self.address.ring)
+        return tuple(field for field in (self.register, self.half) if field is not None)
+
+
+@attrs.frozen
+class Format:
+    """How one operation uses the bits above the header: a part for each operand, then the short immediate.
+
+    ``immediate`` has width 0 where no bit is left (every immediate then takes an extension word) or none is possible.
+    """
+
+    operation: Operation
+    parts: tuple[Part, ...]
+    immediate: Field
+
+    @property
+    def fields(self) -> tuple[Field, ...]:
+        """Operand fields and, where there is one, the short immediate, from the low bits up."""
+        fields = tuple(field for part in self.parts for field in part.fields)
+        return (*fields, self.immediate) if self.immediate.width else fields
+
+    @property
+    def end(self) -> int:
+        """The first bit that is always 0."""
+        return self.immediate.end
+
+
+def may_be_immediate(operand: Operand) -> bool:
+    """Whether a register operand may be an immediate instead (of an address operand, its step)."""
+    return operand.role in (Role.ADDRESS, Role.TARGET) or (operand.role is Role.SOURCE and not operand.pair)
+
+
+@attrs.frozen(eq=False, slots=False)
+class Layout:
+    """The layout of a core's words. ``formats`` fills as operations are asked for."""
+
+    core: Core
+    operations: OperationSet
+    formats: dict[str, Format] = attrs.field(factory=dict, repr=False)
+
+    @cached_property
+    def header(self) -> tuple[Field, ...]:
+        """The fields every operation word has, from bit 0 up."""
+        registers = len(self.core.register_names)
+        widths = {
+            "last": 1,
+            "extended": 1,
+            "slot": (len(self.core.slots) - 1).bit_length(),
+            "operation": CODE_BITS,
+            "guard": (2 * registers).bit_length(),
+        }
+        fields: list[Field] = []
+        for name, width in widths.items():
+            fields.append(Field(name, fields[-1].end if fields else 0, width))
+        return tuple(fields)
+
+    @cached_property
+    def slot(self) -> Field:
+        return self.header[2]
+
+    @cached_property
+    def code(self) -> Field:
+        return self.header[3]
+
+    @cached_property
+    def guard(self) -> Field:
+        return self.header[4]
+
+    @cached_property
+    def beats(self) -> Field:
+        """The beat count of an idle word."""
+        return Field("beats", self.code.end, min(BEAT_BITS, self.core.words.bits - self.code.end))
+
+    @cached_property
+    def immediate_code(self) -> int:
+        """The code that says *immediate* in a register field."""
+        return len(self.core.register_names)
+
+    @cached_property
+    def pair_starts(self) -> tuple[bool, ...]:
+        """For every register number, whether a pair may be named by it: even in its cluster, with a register behind."""
+        return tuple(
+            local % 2 == 0 and local + 1 < cluster.registers
+            for cluster in self.core.clusters
+            for local in range(cluster.registers)
+        )
+
+    def format_of(self, operation: Operation) -> Format:
+        """The format of ``operation``; raises :class:`CoreError` when it does not fit the core's words."""
+        found = self.formats.get(operation.name)
+        if found is None:
+            found = self._build(operation)
+            if found.end > self.core.words.bits:
+                raise self._too_narrow()
+            self.formats[operation.name] = found
+        return found
+
+    def _build(self, operation: Operation) -> Format:
+        """A format whose operand fields may still reach beyond the word."""
+        constants = sum(operand.role is Role.CONSTANT for operand in operation.operands)
+        if constants > 1:
+            raise OperationError(
+                problem(
+                    "two-constants",
+                    f"{operation.name} has {constants} constant operands",
+                    "one immediate an operation",
+                    "make one of them a register operand, or put both into one constant",
+                )
+            )
+        low = self.guard.end
+        parts: list[Part] = []
+        for operand in operation.operands:
+            part = self._part(operand, low, constants > 0)
+            parts.append(part)
+            low = max([low, *(field.end for field in part.fields)])
+        wanted = constants > 0 or any(part.immediate for part in parts)
+        room = min(IMMEDIATE_BITS, max(0, self.core.words.bits - low)) if wanted else 0
+        return Format(operation, tuple(parts), Field("immediate", low, room))
+
+    def _part(self, operand: Operand, low: int, constant: bool) -> Part:
+        """The fields of ``operand`` from bit ``low`` up; ``constant``: another operand is the immediate already."""
+        registers = len(self.core.register_names)
+        immediate = may_be_immediate(operand) and not constant
+        narrow, wide = (registers - 1).bit_length(), registers.bit_length()
+        if operand.role is Role.CONSTANT:
+            return Part(operand, immediate=True)
+        if operand.role is Role.ADDRESS:
+            mode = Field("mode", low, 2)
+            base = Field("base", mode.end, narrow)
+            step = Field("step", base.end, wide if immediate else narrow)
+            ring = Field("ring", step.end, RING_BITS)
+            return Part(operand, address=AddressFields(mode, base, step, ring), immediate=immediate)
+        register = Field(operand.name, low, wide if immediate else narrow)
+        half = Field(f"{operand.name} half", register.end, 1) if operand.half else None
+        return Part(operand, register, half, None, immediate, 16 if operand.half else 32)
+
+    def check(self) -> None:
+        """Raise :class:`CoreError` unless every operation of the core fits; builds all of them."""
+        for operation in self.operations.by_name.values():
+            self.format_of(operation)
+
+    def _too_narrow(self) -> CoreError:
+        """The complaint names the widest operation, so that one change of ``words.bits`` is enough."""
+        needs = {name: self._build(operation).end for name, operation in self.operations.by_name.items()}
+        widest = max(needs, key=lambda name: needs[name])
+        return CoreError(
+            problem(
+                "words-too-narrow",
+                f"words.bits = {self.core.words.bits}, and {widest} needs {needs[widest]} bits",
+                f"words of at least {needs[widest]} bits",
+                f"words.bits = {-(-needs[widest] // 8) * 8}, or fewer registers",
+                key="words.bits",
+            )
+        )
+
+
+@lru_cache(maxsize=8)
+def layout(core: Core, operations: OperationSet) -> Layout:
+    """The layout of ``core``'s words; its formats are built as they are asked for.
+
+    Raises :class:`CoreError` when a word has no room for the header or for a 32-bit extension.
+    """
+    found = Layout(core, operations)
+    least = max(IMMEDIATE_BITS, found.guard.end)
+    if core.words.bits < least or core.words.bits % 8:
+        raise CoreError(
+            problem(
+                "words-too-narrow",
+                f"words.bits = {core.words.bits}",
+                f"a multiple of 8, at least {least} (header {found.guard.end} bits, extension words 32)",
+                f"words.bits = {-(-max(least, core.words.bits) // 8) * 8}",
+                key="words.bits",
+            )
+        )
+    return found
