@@ -7,7 +7,7 @@ g and h of 24 registers, g0 is 0 and h0 is 24. Latencies and busy times are in b
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from functools import cached_property
 
 import attrs
@@ -91,7 +91,7 @@ class Branch:
 
 @attrs.frozen
 class Issue:
-    """``rule``: ``exposed`` or ``interlocked``. ``early``: an early read gets the ``old`` value, ``warn`` or ``reject``."""
+    """``rule``: ``exposed`` or ``interlocked``. ``early``, what an early read gets: ``old`` value, ``warn``, ``reject``."""
 
     rule: str = "exposed"
     early: str = "old"
@@ -165,6 +165,12 @@ class Core:
     interrupt: Interrupt = Interrupt()
     operations: tuple[str, ...] = ()
     """Operation files: shipped families by name, a user's own by path (already made absolute)."""
+
+    def evolve(self, changes: Mapping[str, object] | Sequence[str]) -> Core:
+        """This core with some values changed (``{"latency.load": 5}``); raises CoreError, see :mod:`.corefile`."""
+        from vliwsim.description.corefile import evolve
+
+        return evolve(self, changes)
 
     @cached_property
     def interlocked(self) -> bool:
