@@ -91,7 +91,7 @@ class Branch:
 
 @attrs.frozen
 class Issue:
-    """``rule``: ``exposed`` or ``interlocked``. ``early``, what an early read gets: ``old`` value, ``warn``, ``reject``."""
+    """``rule``: ``exposed`` or ``interlocked``. ``early``, for an early read: ``old`` value, ``warn``, ``reject``."""
 
     rule: str = "exposed"
     early: str = "old"

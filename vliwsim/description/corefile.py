@@ -9,10 +9,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-import operator
-import re
-import tomllib
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -20,28 +17,11 @@ import attrs
 
 from vliwsim.description.core import Core
 from vliwsim.description.corebuild import PARTS, build_core, most
-from vliwsim.description.coreparts import Finding, described
-from vliwsim.description.places import isa_folder
-from vliwsim.description.toml_places import KeyPath, TomlFile, key_text, listed, nearest, read_toml, shown
+from vliwsim.description.corelayers import Changes, Layer, Plain, chain, changed, core_names, file_of, lay
+from vliwsim.description.toml_places import key_text
 from vliwsim.problems import CoreError, Problem
 
-LONGEST_CHAIN = 16
-"""Files in a chain of bases."""
-
-Changes = Mapping[str, object] | Sequence[str]
-"""``{"latency.load": 5}`` or ``["latency.load=5"]``, the values of the second form written as in TOML."""
-
-Plain = dict[str, Any]
-
-_WORD = re.compile(r"\s*[A-Za-z_][\w.+-]*\s*")
-
-
-# Public
-
-
-def core_names() -> list[str]:
-    """Names of the shipped cores, sorted."""
-    return sorted(path.stem for path in (isa_folder() / "cores").glob("*.toml"))
+__all__ = ["core_digest", "core_names", "describe", "evolve", "load_core"]
 
 
 def load_core(name_or_path: str, changes: Changes = ()) -> Core:
@@ -49,13 +29,14 @@ def load_core(name_or_path: str, changes: Changes = ()) -> Core:
 
     Raises :class:`~vliwsim.problems.CoreError` with every mistake of the file, its bases and the changes.
     """
-    layers = _chain(_file_of(str(name_or_path)))
-    return _build(layers, changes)
+    problems: list[Problem] = []
+    layers = chain(file_of(str(name_or_path)), problems)
+    return _build(layers, changes, problems)
 
 
 def evolve(core: Core, changes: Changes) -> Core:
     """``core`` with some values changed, checked as a whole again; also :meth:`Core.evolve`."""
-    return _build([_Layer(_plain(core), None)], changes)
+    return _build([Layer(_plain(core), None)], changes, [])
 
 
 def describe(core: Core) -> Plain:
@@ -84,349 +65,22 @@ def core_digest(core: Core, operations: str = "") -> str:
     return hashlib.sha256(text.encode()).hexdigest()
 
 
-# Layers
-
-
-@attrs.frozen(eq=False)
-class _Layer:
-    """Plain data and the file it is from; None for the changes a user asks for and for an existing core."""
-
-    data: Plain
-    source: TomlFile | None
-
-    def depth(self, path: KeyPath) -> int:
-        """How many parts of ``path`` this layer says."""
-        if self.source:
-            return self.source.known(path)
-        here: Any = self.data
-        known = 0
-        for part in _address(path):
-            within = isinstance(part, int) and part < len(here) if isinstance(here, list) else False
-            if not within and not (isinstance(here, dict) and part in here):
-                break
-            here = here[part]
-            known += 2 if known == 1 and path[0] == "slot" else 1
-        return known
-
-    def problem(self, finding: Finding) -> Problem:
-        if self.source:
-            return self.source.problem(finding.name, finding.path, finding.found, finding.allowed, finding.remedy)
-        return Problem(finding.name, finding.found, finding.allowed, finding.remedy, key=key_text(finding.path))
-
-
-def _build(layers: list[_Layer], changes: Changes) -> Core:
-    problems: list[Problem] = []
-    if changed := _changes(changes, problems):
-        layers = [*layers, _Layer(changed, None)]
+def _build(layers: list[Layer], changes: Changes, problems: list[Problem]) -> Core:
+    """The core that the layers and changes make; raises :class:`CoreError` with ``problems`` and all others."""
+    if own := changed(changes, problems):
+        layers = [*layers, Layer(own, None)]
     plain: Plain = {}
     for layer in layers:
-        problems += [layer.problem(finding) for finding in _lay(plain, layer.data)]
+        problems += [layer.problem(finding) for finding in lay(plain, layer.data)]
+    said = {problem.key for problem in problems}
     core, findings = build_core(plain)
     for finding in most(findings):
         owner = max(reversed(layers), key=lambda layer: layer.depth(finding.path))
-        problems.append(owner.problem(finding))
+        if key_text(finding.path) not in said:
+            problems.append(owner.problem(finding))
     if problems:
         raise CoreError(problems)
     return core
-
-
-def _file_of(name_or_path: str) -> Path:
-    if name_or_path.endswith(".toml"):
-        return Path(name_or_path)
-    names = core_names()
-    if name_or_path not in names:
-        allowed = f"a shipped core ({listed(names)}) or the path of a .toml file"
-        raise CoreError(Problem("unknown-core", shown(name_or_path), allowed, nearest(name_or_path, names)))
-    return isa_folder() / "cores" / f"{name_or_path}.toml"
-
-
-def _chain(path: Path) -> list[_Layer]:
-    """The layers of a file, the lowest base first."""
-    layers: list[_Layer] = []
-    seen: list[Path] = []
-    while True:
-        source = read_toml(path, CoreError)
-        seen.append(path.resolve())
-        findings: list[Finding] = []
-        base = source.data.get("base")
-        data = _normal(source, findings)
-        _own_operations(data, path.parent, findings)
-        if base is not None and not isinstance(base, str):
-            findings.append(Finding("wrong-type", ("base",), described(base), "the name or path of a core", ""))
-        below = _base(base, path, findings) if isinstance(base, str) else None
-        if below and below.resolve() in seen:
-            findings.append(Finding("base-cycle", ("base",), f"{shown(base)}, which is based on this file", "no cycle"))
-        if len(seen) > LONGEST_CHAIN:
-            findings.append(Finding("base-cycle", ("base",), f"more than {LONGEST_CHAIN} bases", "a shorter chain"))
-        layer = _Layer(data, source)
-        layers.insert(0, layer)
-        if findings:
-            raise CoreError([layer.problem(finding) for finding in findings])
-        if below is None:
-            layers[-1].data.setdefault("name", _name_of(layers[-1]))
-            return layers
-        path = below
-
-
-def _name_of(layer: _Layer) -> str:
-    """The name of a core whose file gives none: the file's."""
-    assert layer.source
-    return re.sub(r"[^a-z0-9_-]", "_", Path(layer.source.file).stem.lower())[:40]
-
-
-def _base(base: str, path: Path, findings: list[Finding]) -> Path | None:
-    """The file that ``base`` in the file ``path`` names."""
-    if not base.endswith(".toml"):
-        try:
-            return _file_of(base)
-        except CoreError as why:
-            problem = why.problems[0]
-            findings.append(Finding("unknown-core", ("base",), problem.found, problem.allowed, problem.remedy))
-            return None
-    return _inside(base, path.parent, ("base",), findings)
-
-
-def _inside(entry: str, folder: Path, path: KeyPath, findings: list[Finding]) -> Path | None:
-    """The file ``entry`` names in ``folder``. A core file from a stranger reaches no file outside its own folder."""
-    try:
-        found = (folder / entry).resolve()
-        inside = found.is_relative_to(folder.resolve()) and not Path(entry).is_absolute()
-    except (OSError, ValueError, RuntimeError):
-        findings.append(Finding("unknown-file", path, shown(entry), "the path of a file in the core file's folder"))
-        return None
-    if not inside:
-        allowed = "a file in the core file's folder or below it"
-        findings.append(Finding("outside-folder", path, shown(entry), allowed, "copy it there"))
-        return None
-    if not found.is_file():
-        findings.append(Finding("unknown-file", path, f"no file {shown(entry)}", "a file in the core file's folder"))
-        return None
-    return found
-
-
-def _own_operations(data: Plain, folder: Path, findings: list[Finding]) -> None:
-    """Make the paths of a file's own operation files absolute."""
-    entries = data.get("operations")
-    if not isinstance(entries, list):
-        return
-    for k, entry in enumerate(entries):
-        if isinstance(entry, str) and entry.endswith(".toml"):
-            found = _inside(entry, folder, ("operations", k), findings)
-            entries[k] = str(found) if found else entry
-
-
-def _lay(plain: Plain, data: Plain) -> list[Finding]:
-    """Lay ``data`` over ``plain``: first what it removes, then what it says; tables merge, all else replaces."""
-    findings: list[Finding] = []
-    removed = data.get("remove", [])
-    if not isinstance(removed, list) or not all(isinstance(entry, str) for entry in removed):
-        findings.append(
-            Finding("wrong-type", ("remove",), described(removed), 'an array of key paths: ["slot.g.flow"]')
-        )
-        removed = []
-    for k, entry in enumerate(removed[:1000]):
-        try:
-            path = _key_path(entry)
-        except ValueError:
-            findings.append(Finding("bad-name", ("remove", k), shown(entry), 'a key path such as "slot.g.flow"'))
-            continue
-        if not _remove(plain, path):
-            known = [key_text(there) for there in _paths(plain)]
-            remedy = nearest(entry, known)
-            findings.append(Finding("nothing-to-remove", ("remove", k), shown(entry), "what the base has", remedy))
-    _merge(plain, {key: value for key, value in data.items() if key not in ("base", "remove")})
-    return findings
-
-
-def _merge(plain: Plain, data: Plain, depth: int = 4) -> None:
-    for key, value in data.items():
-        if isinstance(value, dict):
-            if isinstance(plain.get(key), dict) and depth:
-                _merge(plain[key], value, depth - 1)
-            elif depth:
-                plain[key] = {}
-                _merge(plain[key], value, depth - 1)
-            else:
-                plain[key] = value
-        else:
-            plain[key] = value
-
-
-def _remove(plain: Plain, path: KeyPath) -> bool:
-    """Take ``path`` out of the plain form; false if it is not there."""
-    if len(path) == 2 and path[0] == "slot" and isinstance(plain.get("slot"), dict):
-        slots = [name for name in plain["slot"] if name.startswith(f"{path[1]}.")]
-        for name in slots:
-            del plain["slot"][name]
-        return bool(slots)
-    *above, last = _address(path)
-    here: Any = plain
-    for part in above:
-        here = here.get(part) if isinstance(here, dict) else None
-    if not isinstance(here, dict) or last not in here:
-        return False
-    del here[last]
-    return True
-
-
-def _paths(plain: Plain) -> Iterable[KeyPath]:
-    """Key paths of all tables and values of a plain form, for suggestions."""
-    for part, table in plain.items():
-        yield (part,)
-        for name, value in table.items() if isinstance(table, dict) else ():
-            path = (part, *name.split(".", 1)) if part == "slot" else (part, name)
-            yield path
-            yield from ((*path, key) for key in value) if isinstance(value, dict) else ()
-
-
-# Key paths: as files write them, and as the plain form holds them
-
-
-def _address(path: KeyPath) -> KeyPath:
-    """Where the plain form holds what a file says at ``path``: slots by full name, operation names in one piece."""
-    if path[:1] == ("slot",) and len(path) >= 3 and isinstance(path[2], str):
-        path = ("slot", f"{path[1]}.{path[2]}", *path[3:])
-        head = 3 if path[2:3] == ("busy",) else len(path)
-    else:
-        head = 2 if path[:2] == ("latency", "operations") else len(path)
-    names = path[head:]
-    return (*path[:head], ".".join(str(name) for name in names)) if names else path
-
-
-def _key_path(text: str) -> KeyPath:
-    """The parts of a dotted TOML key. Raises ValueError for anything else."""
-    if "\n" in text or "=" in text or len(text) > 400:
-        raise ValueError(text)
-    here: Any = tomllib.loads(f"{text} = 0")
-    path: list[str] = []
-    while isinstance(here, dict):
-        (key, here), *others = here.items()
-        assert not others
-        path.append(key)
-    return tuple(path)
-
-
-def _normal(source: TomlFile, findings: list[Finding]) -> Plain:
-    """A file's data in the plain form."""
-    data = {key: value for key, value in source.data.items() if key != "slot"}
-    if isinstance(data.get("operations"), list):
-        data["operations"] = list(data["operations"])  # type: ignore[call-overload]
-    latency = data.get("latency")
-    if isinstance(latency, dict) and isinstance(latency.get("operations"), dict):
-        data["latency"] = {**latency, "operations": _names_in_one(latency["operations"])}
-    slots = source.data.get("slot")
-    if slots is not None:
-        data["slot"] = _slots_in_one(slots, source)
-    return data
-
-
-def _names_in_one(table: Plain, name: str = "", depth: int = 8) -> Plain:
-    """Operation names: ``mul.half = 2`` without quotes is a table in a table to TOML."""
-    out: Plain = {}
-    for key, value in table.items():
-        whole = f"{name}.{key}" if name else key
-        if isinstance(value, dict) and value and depth:
-            out |= _names_in_one(value, whole, depth - 1)
-        else:
-            out[whole] = value
-    return out
-
-
-def _slots_in_one(slots: object, source: TomlFile | None = None) -> object:
-    """Tables of units in tables of clusters as one table by full names, in file order."""
-    if not isinstance(slots, dict):
-        return slots
-    flat: Plain = {}
-    for cluster, units in slots.items():
-        if not isinstance(units, dict) or "." in cluster:
-            flat[cluster] = units
-            continue
-        for unit, table in units.items():
-            busy = table.get("busy") if isinstance(table, dict) else None
-            flat[f"{cluster}.{unit}"] = {**table, "busy": _names_in_one(busy)} if isinstance(busy, dict) else table
-    if source and len(slots) > 1:
-        order = {path: k for k, path in enumerate(source.places)}
-        last = len(order)
-        flat = dict(sorted(flat.items(), key=lambda item: order.get(("slot", *item[0].split(".", 1)), last)))
-    return flat
-
-
-# Changes
-
-
-def _changes(changes: Changes, problems: list[Problem]) -> Plain:
-    """Changes as one layer of plain data; what is wrong with their form goes to ``problems``."""
-    if isinstance(changes, str):
-        changes = [changes]
-    pairs: Iterable[tuple[object, object]]
-    pairs = changes.items() if isinstance(changes, Mapping) else ((text, None) for text in changes)
-    layer: Plain = {}
-    for key, value in pairs:
-        try:
-            named = isinstance(changes, Mapping)
-            path, value = (_key_path(str(key)), _ordinary(value)) if named else _split_change(str(key))
-        except (ValueError, RecursionError):
-            allowed = "KEY=VALUE with the value as in TOML, such as latency.load=5"
-            if isinstance(changes, Mapping):
-                allowed = "a key path such as latency.load"
-            problems.append(Problem("bad-change", shown(key), allowed))
-            continue
-        if path[0] == "base":
-            problems.append(Problem("bad-change", shown(key), "any key but base", "load the other core instead"))
-            continue
-        _put(layer, path, value)
-    if isinstance(layer.get("operations"), list):
-        layer["operations"] = [
-            str(Path(entry).absolute()) if isinstance(entry, str) and entry.endswith(".toml") else entry
-            for entry in layer["operations"]
-        ]
-    return layer
-
-
-def _split_change(text: str) -> tuple[KeyPath, object]:
-    key, equals, value = text.partition("=")
-    if not equals or "\n" in text or len(text) > 1 << 16:
-        raise ValueError(text)
-    path = _key_path(key)
-    try:
-        return path, tomllib.loads(f"it = {value}")["it"]
-    except tomllib.TOMLDecodeError:
-        if not _WORD.fullmatch(value):
-            raise
-        return path, value.strip()  # a word without quotes, which shells take away: issue.rule=interlocked
-
-
-def _ordinary(value: object) -> object:
-    """Integers of other libraries as plain ones, tuples as arrays."""
-    if isinstance(value, Mapping):
-        return {str(key): _ordinary(inner) for key, inner in value.items()}
-    if isinstance(value, list | tuple):
-        return [_ordinary(inner) for inner in value]
-    if not isinstance(value, bool) and hasattr(value, "__index__"):
-        return operator.index(value)
-    return value
-
-
-def _put(layer: Plain, path: KeyPath, value: object) -> None:
-    """Set ``path`` of a layer in the plain form."""
-    if path == ("slot",):
-        value = _slots_in_one(value)
-    elif path[0] == "slot" and len(path) == 2:
-        path, value = ("slot",), _slots_in_one({path[1]: value})
-    here = layer
-    *above, last = _address(path)
-    for part in above:
-        inner = here.setdefault(str(part), {})
-        if not isinstance(inner, dict):
-            inner = here[str(part)] = {}
-        here = inner
-    if isinstance(value, dict) and isinstance(here.get(str(last)), dict):
-        _merge(here[str(last)], value)
-    else:
-        here[str(last)] = value
-
-
-# From a core back to plain data
 
 
 def _plain(core: Core) -> Plain:
