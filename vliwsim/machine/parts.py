@@ -1,0 +1,95 @@
+"""Instructions made ready for the machine: effects, operand-file indices and write numbers, known before any run.
+
+A write number stands for one register written by one instruction of the program, so that whatever is in flight knows
+where it came from. The operand file is the registers, then the program's constants, then one place for results that go
+nowhere.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import attrs
+
+from vliwsim.description.operations import Kind, Operation
+from vliwsim.program.code import Instruction, Mode
+from vliwsim.program.effects import Effects, Write
+
+WORD = 0xFFFFFFFF
+
+
+@attrs.frozen
+class WriteSite:
+    """A write number's meaning: ``write`` of instruction ``instruction`` in bundle ``bundle``."""
+
+    bundle: int
+    instruction: int
+    write: Write
+
+
+@attrs.frozen
+class Input:
+    """Where one input of an operation comes from: operand-file index (two for a pair), and the half it reads.
+
+    ``index`` is -1 for what the machine makes itself (a loaded value, a link).
+    """
+
+    name: str
+    index: int
+    pair: bool
+    half: int | None
+
+
+@attrs.frozen
+class Reach:
+    """An address operand: operand-file indices of base and step, and how they combine."""
+
+    base: int
+    step: int
+    mode: Mode
+    ring: int
+    update: int | None
+    """Write number of the updated base."""
+
+    def address(self, base: int, step: int) -> int:
+        return base if self.mode is Mode.AFTER else (base + step) & WORD
+
+    def updated(self, base: int, step: int) -> int:
+        if self.ring:
+            return base & ~(self.ring - 1) & WORD | (base + step) & (self.ring - 1)
+        return (base + step) & WORD
+
+
+@attrs.frozen
+class Part:
+    """One instruction, prepared. ``results``: for every output that is a register, its write numbers (two for a pair).
+
+    ``target``: bundle index a direct branch goes to (None: nowhere), or for an indirect one the operand-file index in
+    ``target_register``. ``link``: the link value of a call, None where no word begins there.
+    """
+
+    instruction: Instruction
+    effects: Effects
+    inputs: tuple[Input, ...]
+    results: tuple[tuple[int, ...], ...]
+    reach: Reach | None
+    target: int | None
+    target_register: int | None
+    link: int | None
+    function: Callable[..., object]
+
+    @property
+    def operation(self) -> Operation:
+        return self.instruction.operation
+
+    @property
+    def halves(self) -> tuple[int | None, ...]:
+        return tuple(i.half for i in self.inputs)
+
+    @property
+    def uses_link(self) -> bool:
+        return "link" in self.operation.inputs
+
+    @property
+    def branches(self) -> bool:
+        return self.operation.kind is Kind.BRANCH
