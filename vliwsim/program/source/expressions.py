@@ -275,11 +275,11 @@ class Formula:
     place: Place
     names: frozenset[str]
     references: frozenset[str]
-    bound: Mapping[str, object]
-    excerpt: str = ""
+    bound: Mapping[str, object] = attrs.field(repr=False)
+    excerpt: str = attrs.field(default="", repr=False)
     _evaluate: Evaluate = attrs.field(repr=False, default=lambda env: None)
 
-    def value(self, names: Mapping[str, object] = {}) -> Any:  # noqa: B006 - never changed
+    def value(self, names: Mapping[str, object] = {}) -> Any:
         """The value with these names: an int, float or bool.
 
         Raises :class:`~vliwsim.problems.SourceError` when a name is missing or there is no value (division by zero…).
@@ -318,7 +318,7 @@ class Formula:
         return (formula, (self.text, self.place, dict(self.bound), self.excerpt))
 
 
-def formula(text: str, place: Place | None = None, bound: Mapping[str, object] = {}, excerpt: str = "") -> Formula:  # noqa: B006
+def formula(text: str, place: Place | None = None, bound: Mapping[str, object] = {}, excerpt: str = "") -> Formula:
     """Parse an expression.
 
     ``place`` is where ``text`` begins. ``bound``: names (and ``latency(…)`` references) with fixed values.

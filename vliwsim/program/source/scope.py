@@ -9,7 +9,7 @@ from vliwsim.description.core import Core
 from vliwsim.description.operations import OperationSet
 from vliwsim.problems import SourceError
 from vliwsim.program.source.complaints import Complaints, nearest
-from vliwsim.program.source.expressions import RESERVED, Formula, Refused, formula
+from vliwsim.program.source.expressions import RESERVED, Formula, formula
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.tree import Let, Name
 
@@ -118,7 +118,7 @@ class Scope:
 
     def define(self, let: Let) -> None:
         """Take a ``let``."""
-        if not self._free(let.name):
+        if self.taken(let.name):
             return
         value = self.value(let.expression)
         self.constants[let.name.text] = self.environment[let.name.text] = 0 if value is None else value
@@ -127,15 +127,15 @@ class Scope:
         """Take a ``name``."""
         text = name.name.text
         number = self.register(name.register)
-        if not self._free(name.name):
+        if self.taken(name.name):
             return
         if number is not None:
             self.names[text] = self.registers[text] = number
         else:
             self.registers[text] = 0
 
-    def _free(self, name: Piece) -> bool:
-        """Whether a name may be taken; if not, the reason is told."""
+    def taken(self, name: Piece) -> bool:
+        """Whether a name has a meaning already; if so, that is told."""
         text = name.text
         taken = (
             "a register"
@@ -150,7 +150,7 @@ class Scope:
         )
         if taken:
             self.complaints.add("name-taken", name.where, f"{text} is {taken}", "a name that is free")
-        return not taken
+        return bool(taken)
 
     def register(self, piece: Piece) -> int | None:
         """The number of a register or alias; None, with the problem told, when there is none."""
@@ -167,6 +167,3 @@ class Scope:
         self.complaints.add(
             "unknown-register", piece.where, f"{piece.text or 'nothing'} is no register", allowed, remedy
         )
-
-
-__all__ = ["Refused", "Scope", "latencies"]
