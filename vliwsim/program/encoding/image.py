@@ -28,7 +28,7 @@ MOST_BYTES = 1 << 28
 """The largest image file that is read, in bytes."""
 
 _DIGEST_BYTES = 32
-_LABEL = re.compile(r"[A-Za-z_][A-Za-z0-9_.]{0,199}\Z")
+_LABEL = re.compile(r"[A-Za-z_]\w*\Z")
 
 
 @attrs.frozen

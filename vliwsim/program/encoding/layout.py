@@ -128,6 +128,16 @@ def may_be_immediate(operand: Operand) -> bool:
     return operand.role in (Role.ADDRESS, Role.TARGET) or (operand.role is Role.SOURCE and not operand.pair)
 
 
+def slot_bits(core: Core) -> int:
+    """Width of the slot field."""
+    return (len(core.slots) - 1).bit_length()
+
+
+def longest_idle(core: Core) -> int:
+    """The most beats one idle word counts: what the bits above the operation code hold, at most 2**31 - 1."""
+    return (1 << min(BEAT_BITS, core.words.bits - 2 - slot_bits(core) - CODE_BITS)) - 1
+
+
 @attrs.frozen(eq=False, slots=False)
 class Layout:
     """The layout of a core's words. ``formats`` fills as operations are asked for."""
@@ -143,7 +153,7 @@ class Layout:
         widths = {
             "last": 1,
             "extended": 1,
-            "slot": (len(self.core.slots) - 1).bit_length(),
+            "slot": slot_bits(self.core),
             "operation": CODE_BITS,
             "guard": (2 * registers).bit_length(),
         }
@@ -167,7 +177,7 @@ class Layout:
     @cached_property
     def beats(self) -> Field:
         """The beat count of an idle word."""
-        return Field("beats", self.code.end, min(BEAT_BITS, self.core.words.bits - self.code.end))
+        return Field("beats", self.code.end, longest_idle(self.core).bit_length())
 
     @cached_property
     def immediate_code(self) -> int:

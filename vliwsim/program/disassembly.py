@@ -1,0 +1,155 @@
+"""From decoded code back to source text: one instruction for a message, a whole program as a source file."""
+
+from __future__ import annotations
+
+import struct
+from collections.abc import Iterator, Mapping
+
+from vliwsim.description.core import Core
+from vliwsim.description.operations import Operand, Role
+from vliwsim.program.code import Address, Bundle, Immediate, Instruction, Label, Mode, Place, Program, Register
+from vliwsim.program.encoding.layout import longest_idle
+
+DECIMAL_LIMIT = 1 << 16
+"""Packed and unsigned immediates from here up are written in hexadecimal."""
+
+
+def text_of(core: Core, instruction: Instruction, labels: Mapping[str, int] | None = None, slot: bool = False) -> str:
+    """The instruction as the source writes it: ``lw g2, [g10 then +8] if g20``.
+
+    labels: name → byte address, for targets; one that has no label is written as its address. slot: add the pin
+    (``on g.mem``).
+    """
+    operation = instruction.operation
+    names = core.register_names
+    places = [
+        _place(names, operand, place, labels or {}) for operand, place in zip(operation.operands, instruction.places)
+    ]
+    text = f"{operation.name} {', '.join(places)}" if places else operation.name
+    guard = instruction.guard
+    if guard is not None:
+        text += f" if {'not ' if guard.negated else ''}{names[guard.register]}"
+    return f"{text} on {core.slots[instruction.slot].name}" if slot else text
+
+
+def disassemble(program: Program, kernel: str = "disassembled") -> str:
+    """A source file that assembles to the very words of ``program``.
+
+    Every operation is pinned to its slot; the program's labels are kept, and names are made up where a target, the
+    beginning or an idle run that must not melt into the one before it has none. kernel: the name to give.
+    """
+    labels = _labels(program)
+    named: dict[int, list[str]] = {}
+    for name, address in labels.items():
+        named.setdefault(address, []).append(name)
+    lines = [f"kernel {kernel}", f"core   {program.core.name}"]
+    beat = 0
+    bundles = program.bundles
+    for index, bundle in enumerate(bundles):
+        if bundle.address in named:
+            lines.append("")
+            lines += [f"{name}:" for name in named[bundle.address]]
+            beat = 0
+        beat += bundle.beats
+        following = bundles[index + 1].address if index + 1 < len(bundles) else None
+        if bundle.instructions:
+            lines += _bundle_lines(program.core, bundle, beat - 1, labels)
+        elif following is None or following in named:
+            lines.append(f"@{beat - 1:<3} idle")
+    return "\n".join(lines) + "\n"
+
+
+def address_text(core: Core, address: Address) -> str:
+    """An address operand as the source writes it."""
+    return _address(core.register_names, address)
+
+
+def immediate_text(value: int, operand: Operand) -> str:
+    """A raw immediate in the form that suits the operand's type."""
+    kind = operand.type
+    if kind == "f32":
+        return _float(value)
+    bits = 16 if operand.half else 32
+    if kind.startswith("u") or "x" in kind:
+        return f"{value:#x}" if value >= DECIMAL_LIMIT else str(value)
+    return str(_signed(value, bits))
+
+
+def _bundle_lines(core: Core, bundle: Bundle, beat: int, labels: Mapping[str, int]) -> Iterator[str]:
+    stamp = f"@{beat:<3}"
+    for instruction in bundle.instructions:
+        yield f"{stamp} {text_of(core, instruction, labels, slot=True)}"
+        stamp = " " * len(stamp)
+
+
+def _labels(program: Program) -> dict[str, int]:
+    """The program's labels by address, with made-up ones where the text needs more."""
+    found = dict(sorted(program.labels.items(), key=lambda pair: pair[1]))
+    known = set(found.values())
+    wanted = {program.bundles[0].address} if program.bundles else set()
+    run, full = 0, longest_idle(program.core)
+    for bundle in program.bundles:
+        for instruction in bundle.instructions:
+            wanted |= set(_targets(instruction))
+        # An idle run becomes a gap in the stamps, and a gap one word, or several full ones and a rest.
+        if run and not bundle.instructions and run != full:
+            wanted.add(bundle.address)
+        run = 0 if bundle.instructions else bundle.beats
+    number = 0
+    for address in sorted(wanted - known):
+        while f"place{number}" in found:
+            number += 1
+        found[f"place{number}"] = address
+    return dict(sorted(found.items(), key=lambda pair: pair[1]))
+
+
+def _targets(instruction: Instruction) -> Iterator[int]:
+    """Byte addresses of direct targets."""
+    for operand, place in zip(instruction.operation.operands, instruction.places):
+        if operand.role is Role.TARGET and isinstance(place, Immediate):
+            yield place.value
+
+
+def _place(names: tuple[str, ...], operand: Operand, place: Place, labels: Mapping[str, int]) -> str:
+    if isinstance(place, Register):
+        return names[place.number] + ("" if place.half is None else (".lo", ".hi")[place.half])
+    if isinstance(place, Address):
+        return _address(names, place)
+    if isinstance(place, Label):
+        return place.name
+    if operand.role is Role.TARGET:
+        return next((name for name, address in labels.items() if address == place.value), f"{place.value:#x}")
+    return immediate_text(place.value, operand)
+
+
+def _address(names: tuple[str, ...], address: Address) -> str:
+    base, step = names[address.base], address.step
+    negative = isinstance(step, Immediate) and _signed(step.value, 32) < 0
+    amount = names[step.number] if isinstance(step, Register) else str(abs(_signed(step.value, 32)))
+    sign = "-" if negative else "+"
+    if address.mode is Mode.BEFORE:
+        return f"[{sign}{amount} then {base}]"
+    if address.mode is Mode.AFTER:
+        return f"[{base} then {sign}{amount}{f' in ring {address.ring}' if address.ring else ''}]"
+    return f"[{base}]" if amount == "0" else f"[{base} {sign} {amount}]"
+
+
+def _signed(value: int, bits: int) -> int:
+    return value - (1 << bits) if value >> bits - 1 else value
+
+
+def _float(bits: int) -> str:
+    """The shortest decimal number that rounds to these binary32 bits; the bits themselves where there is none."""
+    value = struct.unpack("<f", struct.pack("<I", bits))[0]
+    if value - value != 0:  # an infinity or not a number
+        return f"{bits:#010x}"
+    text = next(text for digits in range(1, 18) if _bits_of(text := f"{value:.{digits}g}") == bits)
+    return repr(float(text))
+
+
+def _bits_of(text: str) -> int | None:
+    """The binary32 bits of a decimal number, None for one that is too large."""
+    try:
+        return int.from_bytes(struct.pack("<f", float(text)), "little")
+    except OverflowError:
+        return None
