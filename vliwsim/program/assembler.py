@@ -115,7 +115,9 @@ def _core(tree: Tree, load: LoadCore | None, changes: Any, complaints: Complaint
     if not tree.cores:
         complaints.raise_if_any()
     if load is None:
-        from vliwsim.description.corefile import load_core as load
+        from vliwsim.description.corefile import load_core
+
+        load = load_core
     named = tree.cores[0]
     try:
         return load(named.text, changes)

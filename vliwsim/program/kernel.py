@@ -20,10 +20,21 @@ from vliwsim.program.code import Program
 class Formula(Protocol):
     """A parsed expression of the source language (:mod:`vliwsim.program.source.expressions`)."""
 
-    text: str
-    place: Place
-    names: frozenset[str]
-    """Free names, functions excluded."""
+    @property
+    def text(self) -> str: ...
+
+    @property
+    def place(self) -> Place: ...
+
+    @property
+    def names(self) -> frozenset[str]:
+        """Free names, functions excluded."""
+        ...
+
+    @property
+    def references(self) -> frozenset[str]:
+        """What stands in it like ``addr(x)`` and ``len(x)``, so spelled: keys of ``value``'s mapping."""
+        ...
 
     def value(self, names: Mapping[str, object]) -> object:
         """The value with these names; raises :class:`~vliwsim.problems.SourceError` for a bad one."""

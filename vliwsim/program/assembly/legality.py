@@ -1,6 +1,6 @@
 """What the core forbids and a bundle alone shows: slots, classes, guards, read ports, links.
 
-The machine judges the same rules when it runs (design, section 3.2, step 3); here they become diagnostics of the source.
+The machine judges the same rules when it runs (design, section 3.2, step 3); here they become diagnostics.
 """
 
 from __future__ import annotations
@@ -58,7 +58,8 @@ class Judge:
         self.illegal("slot-taken", ready, found, "one operation a slot a bundle", remedy)
 
     def _guard(self, ready: Ready) -> None:
-        assert ready.guard and ready.call.guard
+        assert ready.guard
+        assert ready.call.guard
         name = self.core.register_names[ready.guard.register]
         allowed = "guards " + (" ".join(self.core.guards) or "are not allowed on this core")
         found = f"guard {name}"

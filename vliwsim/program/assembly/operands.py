@@ -250,8 +250,8 @@ class OperandReader:
             if before.text[:1] in ("+", "-"):
                 return self._finish(piece, after, Mode.BEFORE, before, None)
             in_ring = _RING.search(after.text)
-            step = after.part(0, in_ring.start()) if in_ring else after
-            return self._finish(piece, before, Mode.AFTER, step, after.part(in_ring.end()) if in_ring else None)
+            moved = after.part(0, in_ring.start()) if in_ring else after
+            return self._finish(piece, before, Mode.AFTER, moved, after.part(in_ring.end()) if in_ring else None)
         match = _SUM.match(inner.text)
         if not match:
             self._bad_address(piece)

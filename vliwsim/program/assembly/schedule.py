@@ -133,11 +133,11 @@ class _Maker:
             self.sections[-1].bundles.setdefault(beat, []).append(ready)
 
     def repeat(self, node: Repeat, variables: frozenset[str]) -> None:
-        count = self.reader.integer(node.count)
+        count = self.reader.integer(node.times)
         if count is None:
             count = 1
         elif count < 0:
-            self.complaints.add("bad-repeat", node.count.where, f"repeat {count} times", "0 times or more")
+            self.complaints.add("bad-repeat", node.times.where, f"repeat {count} times", "0 times or more")
             count = 0
         environment, name = self.scope.environment, node.variable.text if node.variable else None
         if node.variable and (name in environment or name in self.scope.registers):
@@ -148,7 +148,7 @@ class _Maker:
         for index in range(count):
             self.steps += 1
             if self.steps > MOST_STEPS:
-                raise TooMuch(node.count.where)
+                raise TooMuch(node.times.where)
             if name:
                 environment[name] = index
             self.walk(node.body, inside)
@@ -160,7 +160,7 @@ class _Maker:
     def _look(self, node: Repeat, inside: frozenset[str], name: str | None) -> None:
         """Read the lines of a repeat of no passes for their problems, and place nothing."""
         sections, beat, has_stamp = self.sections, self.beat, self.has_stamp
-        self.sections = [Section(node.count)]
+        self.sections = [Section(node.times)]
         if name:
             self.scope.environment[name] = 0
         self.walk(node.body, inside)

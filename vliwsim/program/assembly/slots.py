@@ -155,7 +155,7 @@ def _merged(chosen: list[int | None], slots: dict[int, int]) -> list[int]:
 
 
 def _greedy(options: dict[int, list[tuple[int, int]]]) -> dict[int, int] | None:
-    """Each operation, those with fewest options first, takes its best free slot; None unless none costs more than it must."""
+    """Each operation, fewest options first, takes its best free slot; None unless none costs more than it must."""
     taken: set[int] = set()
     slots: dict[int, int] = {}
     for k in sorted(options, key=lambda k: (len(options[k]), k)) if len(options) > 1 else options:
@@ -186,7 +186,7 @@ def _matching(options: dict[int, list[tuple[int, int]]]) -> dict[int, int]:
 
 
 def _crowd(options: dict[int, list[tuple[int, int]]], matched: dict[int, int]) -> Crowd:
-    """Operations that together have fewer slots than they are: all that an unmatched one can reach by changing places."""
+    """Operations with fewer slots than they are: all that an unmatched one can reach by changing places."""
     user = {slot: k for k, slot in matched.items()}
     first = min(k for k in options if k not in matched)
     operations, slots = [first], set[int]()

@@ -9,9 +9,8 @@ from pathlib import PurePosixPath
 
 import attrs
 
-from vliwsim.program.kernel import Item
+from vliwsim.program.kernel import Formula, Item
 from vliwsim.program.source.complaints import Complaints, nearest
-from vliwsim.program.source.expressions import Formula
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
 from vliwsim.program.source.tree import ItemLine, Tree

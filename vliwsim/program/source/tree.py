@@ -52,9 +52,9 @@ class Call(NamedTuple):
 
 
 class Repeat(NamedTuple):
-    """``repeat count as variable`` … ``end``."""
+    """``repeat times as variable`` … ``end``."""
 
-    count: Piece
+    times: Piece
     variable: Piece | None
     body: list[Node]
 
