@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import itertools
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -209,40 +209,47 @@ class _Builder:
         own = {key: table.pop(key) for key in ("otherwise", "operations") if key in table}
         findings: list[Finding] = []
         made = structure(Latency, {"classes": table} | own, ("latency",), findings)
-        # the file has no table "classes": its keys stand in [latency] itself
+        # "classes" is no key of the file: what it holds stands in [latency] itself
         for f in findings:
             self.findings.append(attrs.evolve(f, path=("latency", *f.path[2:])) if f.path[1:2] == ("classes",) else f)
         assert made is not None
         return made
 
     def judge_classes(self, core: Core) -> None:
-        """Class and operation names in slots, ``busy`` and latencies."""
+        """Class and operation names in slots, ``busy`` and latencies: in all that is written, well or badly."""
         own = any(entry.endswith(".toml") for entry in core.operations)
-        names = _OperationNames(core.operations)
+        names = _OperationNames(() if self.suspect(("operations",)) else core.operations)
         for slot in core.slots:
             path = slot_path(slot.name)
-            for k, word in enumerate(slot.classes if not self.suspect((*path, "classes")) else ()):
-                if word not in CLASSES and not own:
+            table = self.plain["slot"][slot.name]  # type: ignore[index]
+            classes = _strings(table.get("classes")) if isinstance(table, dict) else []
+            for k, word in classes:
+                if IDENTIFIER.fullmatch(word) and word not in CLASSES and not own:
                     self.add(
                         "unknown-class", (*path, "classes", k), shown(word), listed(CLASSES), nearest(word, CLASSES)
                     )
-            for word in slot.busy:
-                here = (*path, "busy", word)
-                if self.suspect((*path, "classes")) or word in slot.classes or (word not in CLASSES and word in names):
-                    continue
-                self.unknown_operation(here, word, slot.classes, "a class of this slot", names)
-        for word in core.latency.classes:
-            if word not in (*CLASSES, "update") and not (own and IDENTIFIER.fullmatch(word)):
-                known = (*CLASSES, "update", "otherwise", "operations")
+            self.judge_busy(table, (*path, "busy"), [word for _, word in classes], names)
+        latency = self.plain.get("latency")
+        latency = latency if isinstance(latency, dict) else {}
+        known = (*CLASSES, "update", "otherwise", "operations")
+        for word in latency:
+            if word not in known and not (own and IDENTIFIER.fullmatch(word)):
                 remedy = "branch.latency" if word == "branch" else nearest(word, known)
                 self.add("unknown-class", ("latency", word), shown(word), listed(known), remedy)
-        for word in core.latency.operations:
-            if word not in names:
+        for word in _keys(latency.get("operations")):
+            if OPERATION.fullmatch(word) and word not in names:
                 self.unknown_operation(("latency", "operations", word), word, (), "", names)
 
+    def judge_busy(self, table: object, path: KeyPath, classes: Sequence[str], names: _OperationNames) -> None:
+        for word in _keys(table.get("busy") if isinstance(table, dict) else None):
+            if OPERATION.fullmatch(word) and word not in classes and (word in CLASSES or word not in names):
+                self.unknown_operation((*path, word), word, classes, "a class of this slot", names)
+
     def unknown_operation(
-        self, path: KeyPath, word: str, classes: tuple[str, ...], what: str, names: _OperationNames
+        self, path: KeyPath, word: str, classes: Sequence[str], what: str, names: _OperationNames
     ) -> None:
+        if not names.entries:  # no files that could be asked
+            return
         allowed = f"{what} ({listed(classes)}) or " if what else ""
         remedy = nearest(word, [*classes, *names.all()])
         self.add("unknown-operation", path, shown(word), f"{allowed}the name of an operation of this core", remedy)
@@ -345,6 +352,16 @@ class _OperationNames:
 
     def __contains__(self, name: str) -> bool:
         return name in self.all()
+
+
+def _strings(value: object) -> list[tuple[int, str]]:
+    """The strings of what should be an array of strings, with their indices."""
+    return [(k, v) for k, v in enumerate(value) if isinstance(v, str)][:64] if isinstance(value, list) else []
+
+
+def _keys(value: object) -> list[str]:
+    """The first keys of what should be a table."""
+    return list(value)[:MOST_FINDINGS] if isinstance(value, dict) else []
 
 
 def _collect(table: Table, name: str, found: set[str], depth: int = 0) -> None:

@@ -7,8 +7,6 @@ Every problem is reported at the layer that said the wrong thing.
 
 from __future__ import annotations
 
-import hashlib
-import json
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -55,6 +53,9 @@ def core_digest(core: Core, operations: str = "") -> str:
     Name and summary do not count: cores that behave alike have one digest. Nor do folders: files of operations count by
     name, and by what ``operations`` says of their contents.
     """
+    import hashlib
+    import json
+
     plain = _plain(core)
     for label in ("name", "summary"):
         del plain[label]

@@ -46,7 +46,7 @@ class Layer:
     def depth(self, path: KeyPath) -> int:
         """How many parts of ``path`` this layer says."""
         if self.source:
-            return self.source.known(path)
+            return self.source.known(_spelled(path, self.source))
         here: Any = self.data
         known = 0
         for part in _address(path):
@@ -59,7 +59,8 @@ class Layer:
 
     def problem(self, finding: Finding) -> Problem:
         if self.source:
-            return self.source.problem(finding.name, finding.path, finding.found, finding.allowed, finding.remedy)
+            path = _spelled(finding.path, self.source)
+            return self.source.problem(finding.name, path, finding.found, finding.allowed, finding.remedy)
         return Problem(finding.name, finding.found, finding.allowed, finding.remedy, key=key_text(finding.path))
 
 
@@ -229,6 +230,14 @@ def _address(path: KeyPath) -> KeyPath:
         head = 2 if path[:2] == ("latency", "operations") else len(path)
     names = path[head:]
     return (*path[:head], ".".join(str(name) for name in names)) if names else path
+
+
+def _spelled(path: KeyPath, source: TomlFile) -> KeyPath:
+    """``path`` as the file spells it: an operation's name may stand there without quotes, as keys of nested tables."""
+    last = path[-1] if path else 0
+    if isinstance(last, str) and "." in last and path not in source.places:
+        return (*path[:-1], *last.split("."))
+    return path
 
 
 def _key_path(text: str) -> KeyPath:
