@@ -198,7 +198,7 @@ def complaints(words: list[int], on: Core = PLAIN, labels: dict[str, int] | None
 
 # Field positions on the plain core: slot 2, operation 4, guard 14, first operand 21, then 27, 33; add's immediate 39.
 ADD = 1 | 1 << 4
-LW = 1 | 130 << 4  # d 21, mode 27, base 29, step 35, ring 41, immediate 46
+LW = 1 | 130 << 4  # d 21, mode 27, base 29, step 35, immediate 41, of which a ring takes 5 bits
 
 
 @pytest.mark.parametrize(
@@ -222,8 +222,12 @@ LW = 1 | 130 << 4  # d 21, mode 27, base 29, step 35, ring 41, immediate 46
         ([ADD | 2 | 48 << 33], ["cut-off: word 0 (byte 0): the end of the code"]),
         ([ADD ^ 1], ["cut-off: word 0 (byte 0): the end of the code inside a bundle"]),
         ([(ADD ^ 1) | 1 << 2, ADD], ["slot-order: word 1 (byte 8): slot 0 behind slot 1"]),
-        ([LW | 3 << 27], ["bad-word: word 0 (byte 0): mode = 3"]),
-        ([LW | 2 << 27 | 5 << 41], ["bad-word: word 0 (byte 0): ring = 5 in mode 2"]),
+        ([LW | 3 << 27], ["bad-word: word 0 (byte 0): a ring of 1 byte"]),
+        ([LW | 2 << 27 | 5 << 41], ["bad-word: word 0 (byte 0): immediate = 0x5, which no operand uses"]),
+        (
+            [LW | 3 << 27 | 1 << 29 | 1 << 46 | 5 << 41],
+            ["bad-word: word 0 (byte 0): immediate = 0x1, which no operand uses"],
+        ),
         ([LW | 1 << 27], ["names-twice: word 0 (byte 0): lw writes g0 twice"]),
         ([1 | 131 << 4 | 3 << 21], ["bad-word: word 0 (byte 0): d = g3"]),
         ([1 | 131 << 4 | 2 << 21 | 1 << 27 | 3 << 29], ["names-twice: word 0 (byte 0): ld writes g3 twice"]),

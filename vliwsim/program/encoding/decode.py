@@ -14,7 +14,17 @@ from vliwsim.problems import ImageError, Problem, problem
 from vliwsim.program.code import Address, Bundle, Guard, Immediate, Instruction, Mode, Place, Program, Register
 from vliwsim.program.encoding.encode import fits, place_after
 from vliwsim.program.encoding.image import Image
-from vliwsim.program.encoding.layout import MODES, MOST_OPERATIONS, AddressFields, Field, Format, Layout, Part, layout
+from vliwsim.program.encoding.layout import (
+    MODES,
+    MOST_OPERATIONS,
+    RING_MODE,
+    AddressFields,
+    Field,
+    Format,
+    Layout,
+    Part,
+    layout,
+)
 
 MOST_PROBLEMS = 20
 """Complaints given for one image; a last one counts the rest."""
@@ -187,14 +197,16 @@ class _Reader:
         self.extension = extension
         self.given: Part | None = None
         """The part that turned out to be an immediate."""
+        self.short = Field("immediate", 0, 0)
+        """The short immediate of this word."""
 
     def instruction(self) -> Instruction:
         """The instruction; raises :class:`_Bad` at the first thing wrong."""
         shape = self._format()
         slot, guard = self._slot(), self._guard()
-        self._spare(shape)
+        self._spare()
         places = tuple([self._place(part, shape) for part in shape.parts])
-        self._idle_immediate(shape)
+        self._unused_immediate()
         instruction = Instruction(shape.operation, slot, places, guard)
         self._named_once(shape.operation, places)
         return instruction
@@ -215,9 +227,9 @@ class _Reader:
         try_out(self._guard)
         shape = try_out(self._format)
         if isinstance(shape, Format):
-            try_out(lambda: self._spare(shape))
+            try_out(self._spare)
             places = [try_out(lambda part=part: self._place(part, shape)) for part in shape.parts]  # type: ignore[misc]
-            try_out(lambda: self._idle_immediate(shape))
+            try_out(self._unused_immediate)
             if not found:
                 try_out(lambda: self._named_once(shape.operation, tuple(places)))  # type: ignore[arg-type]
         return found
@@ -227,7 +239,13 @@ class _Reader:
         operation = self.layout.operations.by_code.get(code)
         if operation is None:
             raise _Bad(f"operation code {code:#x}", f"the code of an operation of {self.core.name}")
-        return self.layout.format_of(operation)
+        shape = self.layout.format_of(operation)
+        self.short = shape.immediate
+        if shape.ring is not None and shape.ring_immediate is not None:
+            mode = next(part.address.mode for part in shape.parts if part.address)
+            if mode.take(self.word) == RING_MODE:
+                self.short = shape.ring_immediate
+        return shape
 
     def _slot(self) -> int:
         slot = self.layout.slot.take(self.word)
@@ -243,22 +261,23 @@ class _Reader:
             raise _Bad(f"guard code {code}", f"0 to {2 * self.layout.immediate_code}")
         return Guard((code - 1) // 2, code % 2 == 0)
 
-    def _spare(self, shape: Format) -> None:
-        if self.word >> shape.end:
-            raise _Bad(f"{self.word >> shape.end:#x} above bit {shape.end - 1}", "0 where the operation has no field")
+    def _spare(self) -> None:
+        end = self.short.end
+        if self.word >> end:
+            raise _Bad(f"{self.word >> end:#x} above bit {end - 1}", "0 where the operation has no field")
 
     def _place(self, part: Part, shape: Format) -> Place:
         if part.address is not None:
             return self._address(part, part.address, shape)
         word, field = self.word, part.register
         if field is None:
-            return self._immediate(part, shape)
+            return self._immediate(part)
         number = word >> field.low & field.mask
         half = None if part.half is None else part.half.take(word)
         if part.immediate and number == self.layout.immediate_code:
             if half:
                 raise _Bad(f"{part.operand.name} half = 1 beside an immediate", "0")
-            return self._immediate(part, shape)
+            return self._immediate(part)
         self._register(field, number)
         if part.operand.pair and not self.layout.pair_starts[number]:
             raise _Bad(f"{part.operand.name} = {self.core.register_names[number]}", "the even register of a pair")
@@ -270,25 +289,26 @@ class _Reader:
 
     def _address(self, part: Part, fields: AddressFields, shape: Format) -> Address:
         base, mode = fields.base.take(self.word), fields.mode.take(self.word)
-        step, ring = fields.step.take(self.word), fields.ring.take(self.word)
+        step, ring = fields.step.take(self.word), 0
         self._register(fields.base, base)
-        if mode >= len(MODES):
-            raise _Bad(f"mode = {mode}", f"0 to {len(MODES) - 1}")
-        if ring and MODES[mode] is not Mode.AFTER:
-            raise _Bad(f"ring = {ring} in mode {mode}", "a ring only in mode 1, '[base then +step]'")
+        if mode == RING_MODE:
+            assert shape.ring is not None
+            ring = shape.ring.take(self.word)
+            if not ring:
+                raise _Bad("a ring of 1 byte", "ring = 1 to 31 in mode 3")
         if part.immediate and step == self.layout.immediate_code:
-            by: Register | Immediate = self._immediate(part, shape)
+            by: Register | Immediate = self._immediate(part)
         else:
             self._register(fields.step, step)
             by = Register(step)
-        return Address(base, MODES[mode], by, 1 << ring if ring else 0)
+        return Address(base, Mode.AFTER if ring else MODES[mode], by, 1 << ring if ring else 0)
 
-    def _immediate(self, part: Part, shape: Format) -> Immediate:
+    def _immediate(self, part: Part) -> Immediate:
         """The one immediate, from the short field or from the extension word, whichever it must be in."""
         if self.given is not None:
             raise _Bad(f"immediates as {self.given.operand.name} and {part.operand.name}", "one an operation")
         self.given = part
-        bits, field = part.value_bits, shape.immediate
+        bits, field = part.value_bits, self.short
         short = field.take(self.word)
         signed = short - (1 << field.width) if short >> (field.width - 1) & 1 and field.width else short
         if self.extension is None:
@@ -305,12 +325,12 @@ class _Reader:
             raise _Bad(f"{self.extension:#x} in an extension word", f"what does not fit {field.width} bits")
         return Immediate(self.extension)
 
-    def _idle_immediate(self, shape: Format) -> None:
+    def _unused_immediate(self) -> None:
         if self.given is None:
             if self.extension is not None:
                 raise _Bad("extended = 1 without an immediate", "0")
-            if shape.immediate.take(self.word):
-                raise _Bad(f"immediate = {shape.immediate.take(self.word):#x}, which no operand uses", "0")
+            if self.short.take(self.word):
+                raise _Bad(f"immediate = {self.short.take(self.word):#x}, which no operand uses", "0")
 
     def _named_once(self, operation: Operation, places: tuple[Place, ...]) -> None:
         twice = named_twice(operation, places)

@@ -14,9 +14,9 @@ from vliwsim.description.core import Core, Words
 from vliwsim.description.operations import OperationSet
 from vliwsim.problems import ImageError, Problem, problem
 from vliwsim.problems import Place as SourcePlace
-from vliwsim.program.code import Address, Immediate, Instruction, Label, Place, Register
+from vliwsim.program.code import Address, Immediate, Instruction, Label, Mode, Place, Register
 from vliwsim.program.encoding.image import Image
-from vliwsim.program.encoding.layout import MODES, MOST_OPERATIONS, Format, Layout, Part, layout
+from vliwsim.program.encoding.layout import MODES, MOST_OPERATIONS, RING_MODE, Field, Format, Layout, Part, layout
 
 Draft = Sequence[Instruction] | int
 """A bundle's instructions, or the number of beats of an idle run."""
@@ -30,10 +30,10 @@ MOST_CODE_BYTES = 1 << 31
 
 @attrs.define
 class _Word:
-    """An operation word on its way: ``value`` in the immediate field or, ``extended``, in the next word."""
+    """An operation word on its way: ``value`` in the field ``short`` or, ``extended``, in the next word."""
 
     bits: int
-    format: Format
+    short: Field
     label: str | None = None
     value: int | None = None
     value_bits: int = 32
@@ -159,12 +159,14 @@ class _Encoder:
             if not 0 <= guard.register < registers:
                 raise _Unsayable(f"guard register {guard.register}", f"0 to {registers - 1}")
             bits |= (1 + 2 * guard.register + guard.negated) << to.guard.low
-        word = _Word(bits, shape)
+        word = _Word(bits, shape.immediate)
         for part, place in zip(shape.parts, instruction.places):
-            self._place(word, part, place)
+            self._place(word, shape, part, place)
+        if word.value is not None:
+            word.extended = not fits(word.value, word.value_bits, word.short.width)
         return word
 
-    def _place(self, word: _Word, part: Part, place: Place) -> None:
+    def _place(self, word: _Word, shape: Format, part: Part, place: Place) -> None:
         """Put one operand into ``word``."""
         registers, field = self.layout.immediate_code, part.register
         if isinstance(place, Address) is not (part.address is not None):
@@ -172,7 +174,13 @@ class _Encoder:
             raise _Unsayable(f"{place} as {part.operand.name}", wanted)
         if isinstance(place, Address):
             assert part.address is not None
-            word.bits |= MODES.index(place.mode) << part.address.mode.low | _ring(place) << part.address.ring.low
+            if place.ring:
+                assert shape.ring is not None
+                assert shape.ring_immediate is not None
+                word.bits |= RING_MODE << part.address.mode.low | _ring(place) << shape.ring.low
+                word.short = shape.ring_immediate
+            else:
+                word.bits |= MODES.index(place.mode) << part.address.mode.low
             word.bits |= _register(place.base, registers) << part.address.base.low
             field, place = part.address.step, place.step
         if isinstance(place, Register):
@@ -204,7 +212,6 @@ class _Encoder:
         if not 0 <= place.value < 1 << value_bits:
             raise _Unsayable(f"immediate {place.value}", f"a raw value of {value_bits} bits")
         word.value, word.value_bits = place.value, value_bits
-        word.extended = not fits(place.value, value_bits, word.format.immediate.width)
 
     def _settle(self) -> list[int]:
         """Word index of every bundle, with every label's form chosen: short until it no longer fits, then extended.
@@ -219,7 +226,7 @@ class _Encoder:
             grown = [
                 word
                 for word in waiting
-                if not word.extended and not fits(self._address(word, starts), 32, word.format.immediate.width)
+                if not word.extended and not fits(self._address(word, starts), 32, word.short.width)
             ]
             if not grown:
                 return starts
@@ -271,7 +278,7 @@ class _Encoder:
     def _short(word: _Word, value: int | None) -> int:
         if value is None:
             return 0
-        field = word.format.immediate
+        field = word.short
         signed = value - (1 << word.value_bits) if value >> word.value_bits - 1 else value
         return (signed & field.mask) << field.low
 
@@ -294,9 +301,7 @@ def _register(number: int, registers: int) -> int:
 def _ring(address: Address) -> int:
     """The ring field's value."""
     ring = address.ring
-    if not ring:
-        return 0
     power = ring.bit_length() - 1
-    if ring != 1 << power or not 1 <= power <= 31 or address.mode is not MODES[1]:
+    if ring != 1 << power or not 1 <= power <= 31 or address.mode is not Mode.AFTER:
         raise _Unsayable(f"ring {ring}", "a power of two from 2 to 2147483648, with 'then +step'")
     return power

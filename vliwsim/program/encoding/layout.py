@@ -17,8 +17,8 @@ operation   the code of the tables; 0 is an idle word, whose bits above this fie
 guard       0 none; 1 + 2 r on when register r is not 0; 2 + 2 r on when it is 0
 register    the register's number; one code more, the number of registers, is *immediate* where that may stand
 half        0 the low half, 1 the high one; 0 beside an immediate
-mode        0 ``[base + step]``, 1 ``[base then +step]``, 2 ``[+step then base]``
-ring        0 none, else the base-2 logarithm of its bytes
+mode        0 ``[base + step]``, 1 ``[base then +step]``, 2 ``[+step then base]``, 3 ``[base then +step in ring N]``
+ring        the base-2 logarithm of N, 1 to 31; it is there in mode 3 only, in the lowest bits of the immediate
 immediate   two's complement; 0 when the operation has none here
 """
 
@@ -41,7 +41,10 @@ MOST_OPERATIONS = 64
 """The most operations a bundle may hold, legal or not."""
 
 MODES = (Mode.OFFSET, Mode.AFTER, Mode.BEFORE)
-"""Address modes by their code."""
+"""Address modes without a ring by their code."""
+
+RING_MODE = 3
+"""The code of :attr:`Mode.AFTER` in a ring."""
 
 
 @attrs.frozen
@@ -74,7 +77,6 @@ class AddressFields:
     mode: Field
     base: Field
     step: Field
-    ring: Field
 
 
 @attrs.frozen
@@ -96,7 +98,7 @@ class Part:
     def fields(self) -> tuple[Field, ...]:
         """The part's fields from the low bits up."""
         if self.address is not None:
-            return (self.address.mode, self.address.base, self.address.step, self.address.ring)
+            return (self.address.mode, self.address.base, self.address.step)
         return tuple(field for field in (self.register, self.half) if field is not None)
 
 
@@ -105,11 +107,15 @@ class Format:
     """How one operation uses the bits above the header: a part for each operand, then the short immediate.
 
     ``immediate`` has width 0 where no bit is left (every immediate then takes an extension word) or none is possible.
+    ``ring``: of an operation with an address, where a ring's size is in mode 3; ``ring_immediate`` is what is then left
+    of the immediate.
     """
 
     operation: Operation
     parts: tuple[Part, ...]
     immediate: Field
+    ring: Field | None = None
+    ring_immediate: Field | None = None
 
     @property
     def fields(self) -> tuple[Field, ...]:
@@ -118,9 +124,9 @@ class Format:
         return (*fields, self.immediate) if self.immediate.width else fields
 
     @property
-    def end(self) -> int:
-        """The first bit that is always 0."""
-        return self.immediate.end
+    def needs(self) -> int:
+        """The least number of bits of a word that holds the operand fields."""
+        return self.immediate.low if self.ring is None else self.ring.end
 
 
 def may_be_immediate(operand: Operand) -> bool:
@@ -198,7 +204,7 @@ class Layout:
         found = self.formats.get(operation.name)
         if found is None:
             found = self._build(operation)
-            if found.end > self.core.words.bits:
+            if found.needs > self.core.words.bits:
                 raise self._too_narrow()
             self.formats[operation.name] = found
         return found
@@ -222,8 +228,16 @@ class Layout:
             parts.append(part)
             low = max([low, *(field.end for field in part.fields)])
         wanted = constants > 0 or any(part.immediate for part in parts)
-        room = min(IMMEDIATE_BITS, max(0, self.core.words.bits - low)) if wanted else 0
-        return Format(operation, tuple(parts), Field("immediate", low, room))
+        ring = Field("ring", low, RING_BITS)
+        immediate = self._immediate(low, wanted)
+        if not any(part.address for part in parts):
+            return Format(operation, tuple(parts), immediate)
+        return Format(operation, tuple(parts), immediate, ring, self._immediate(ring.end, wanted))
+
+    def _immediate(self, low: int, wanted: bool) -> Field:
+        """A short immediate of all bits from ``low`` up, at most 32."""
+        room = max(0, self.core.words.bits - low)
+        return Field("immediate", low, min(IMMEDIATE_BITS, room) if wanted else 0)
 
     def _part(self, operand: Operand, low: int, constant: bool) -> Part:
         """The fields of ``operand`` from bit ``low`` up; ``constant``: another operand is the immediate already."""
@@ -236,8 +250,7 @@ class Layout:
             mode = Field("mode", low, 2)
             base = Field("base", mode.end, narrow)
             step = Field("step", base.end, wide if immediate else narrow)
-            ring = Field("ring", step.end, RING_BITS)
-            return Part(operand, address=AddressFields(mode, base, step, ring), immediate=immediate)
+            return Part(operand, address=AddressFields(mode, base, step), immediate=immediate)
         register = Field(operand.name, low, wide if immediate else narrow)
         half = Field(f"{operand.name} half", register.end, 1) if operand.half else None
         return Part(operand, register, half, None, immediate, 16 if operand.half else 32)
@@ -249,7 +262,7 @@ class Layout:
 
     def _too_narrow(self) -> CoreError:
         """The complaint names the widest operation, so that one change of ``words.bits`` is enough."""
-        needs = {name: self._build(operation).end for name, operation in self.operations.by_name.items()}
+        needs = {name: self._build(operation).needs for name, operation in self.operations.by_name.items()}
         widest = max(needs, key=lambda name: needs[name])
         return CoreError(
             problem(

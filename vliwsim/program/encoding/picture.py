@@ -6,7 +6,7 @@ import textwrap
 from collections.abc import Sequence
 
 from vliwsim.description.operations import Operation
-from vliwsim.program.encoding.layout import IMMEDIATE_BITS, Field, Format, Layout
+from vliwsim.program.encoding.layout import IMMEDIATE_BITS, RING_BITS, Field, Format, Layout
 
 WIDTH = 100
 """Columns a picture keeps to where it can."""
@@ -102,8 +102,8 @@ def _notes(of: Layout, shapes: Sequence[Format]) -> list[str]:
     if any(part.half for shape in shapes for part in shape.parts):
         notes["half"] = "0 low, 1 high"
     if "mode" in there:
-        notes["mode"] = "0 [base + step], 1 [base then +step], 2 [+step then base]"
-        notes["ring"] = "0 none, else its bytes are 2 to this"
+        notes["mode"] = "0 [base + step], 1 [base then +step], 2 [+step then base], 3 [base then +step in ring N]"
+        notes["N"] = f"in mode 3 the lowest {RING_BITS} bits of the immediate are its base-2 logarithm"
     if "immediate" in there:
         notes["immediate"] = "two's complement; what it cannot hold goes into an extension word"
     wide = max(map(len, notes))
