@@ -5,11 +5,13 @@ Used by the machine, the checks and the bounds alike, so that none of them knows
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import attrs
 
 from vliwsim.description.core import Core
-from vliwsim.description.operations import Kind, Role
-from vliwsim.program.code import Address, Instruction, Mode, Register
+from vliwsim.description.operations import Kind, Operation, Role
+from vliwsim.program.code import Address, Instruction, Mode, Place, Register
 
 
 @attrs.frozen
@@ -47,6 +49,41 @@ class Effects:
     busy: int
 
 
+Touched = tuple[list[tuple[int, str]], list[tuple[int, str, str]]]
+"""(register, operand) of every read, a pair as two; (register, operand, what) of every write, the base update last."""
+
+
+def touched(operation: Operation, places: Sequence[Place]) -> Touched:
+    """The registers an operation reads through ports and writes, in whatever slot it stands."""
+    reads: list[tuple[int, str]] = []
+    writes: list[tuple[int, str, str]] = []
+    base_update: tuple[int, str, str] | None = None
+    for operand, place in zip(operation.operands, places, strict=True):
+        kind = type(place)
+        if kind is Register:
+            number, name, role = place.number, operand.name, operand.role  # type: ignore[union-attr]
+            registers = (number, number + 1) if operand.pair else (number,)
+            if role is not Role.RESULT and role is not Role.STICKY:
+                reads += [(r, name) for r in registers]
+            if role is Role.RESULT:
+                writes += [(r, name, "result") for r in registers]
+            elif role is Role.STICKY:
+                writes += [(r, name, "sticky") for r in registers]
+            elif role is Role.INOUT:
+                what = "count" if operation.kind is Kind.BRANCH else "result"
+                writes += [(r, name, what) for r in registers]
+        elif kind is Address:
+            base, step = place.base, place.step  # type: ignore[union-attr]
+            reads.append((base, "base"))
+            if type(step) is Register:
+                reads.append((step.number, "step"))
+            if place.mode is not Mode.OFFSET:  # type: ignore[union-attr]
+                base_update = (base, "base", "update")
+    if base_update:
+        writes.append(base_update)
+    return reads, writes
+
+
 def effects(core: Core, instruction: Instruction) -> Effects:
     """The effects of ``instruction`` on ``core``."""
     operation = instruction.operation
@@ -54,31 +91,14 @@ def effects(core: Core, instruction: Instruction) -> Effects:
     clusters = core.register_clusters
     latency = core.latency.of(operation.name, operation.operation_class)
     update = core.latency.of_class("update")
-    reads: list[Read] = []
-    writes: list[Write] = []
-    base_update: Write | None = None
-
-    def read(register: int, name: str, width: int = 1) -> None:
-        reads.extend(Read(r, name, clusters[r] != home) for r in range(register, register + width))
-
-    for operand, place in zip(operation.operands, instruction.places, strict=True):
-        width = 2 if operand.pair else 1
-        if isinstance(place, Address):
-            read(place.base, "base")
-            if isinstance(place.step, Register):
-                read(place.step.number, "step")
-            if place.mode is not Mode.OFFSET:
-                base_update = Write(place.base, "base", update, "update", clusters[place.base] != home)
-        elif isinstance(place, Register):
-            if operand.role not in (Role.RESULT, Role.STICKY):
-                read(place.number, operand.name, width)
-            if operand.role in (Role.RESULT, Role.INOUT, Role.STICKY):
-                counts = operand.role is Role.INOUT and operation.kind is Kind.BRANCH
-                what = "count" if counts else "sticky" if operand.role is Role.STICKY else "result"
-                writes.extend(
-                    Write(r, operand.name, update if counts else latency, what, clusters[r] != home)
-                    for r in range(place.number, place.number + width)
-                )
-    if base_update:
-        writes.append(base_update)
-    return Effects(tuple(reads), tuple(writes), core.busy(instruction.slot, operation.name, operation.operation_class))
+    reads, writes = touched(operation, instruction.places)
+    return Effects(
+        tuple([Read(register, name, clusters[register] != home) for register, name in reads]),
+        tuple(
+            [
+                Write(r, name, update if what in ("update", "count") else latency, what, clusters[r] != home)
+                for r, name, what in writes
+            ]
+        ),
+        core.busy(instruction.slot, operation.name, operation.operation_class),
+    )

@@ -74,23 +74,23 @@ class Judge:
         if ready.operation.operation_class not in unit.classes:
             found = f"{ready.operation.name} ({ready.operation.operation_class}) in {unit.name}"
             self.illegal("slot-class", ready, found, f"{unit.name} executes {' '.join(unit.classes)}", remedy)
-        for write in ready.effects.writes:
-            if core.register_clusters[write.register] != home:
-                name = core.register_names[write.register]
+        for register, _, _ in ready.writes:
+            if core.register_clusters[register] != home:
+                name = core.register_names[register]
                 found = f"{name} written from {unit.name}"
                 self.illegal("links", ready, found, f"results of {unit.name} in cluster {unit.cluster}", remedy)
                 return
-        for read in ready.effects.reads:
-            source = core.register_clusters[read.register]
+        for register, operand in ready.reads:
+            source = core.register_clusters[register]
             if source == home:
                 continue
-            name = core.register_names[read.register]
+            name = core.register_names[register]
             if (source, home) not in core.link_table:
                 allowed = f"links to {unit.cluster} from {self._sources(home)}"
                 self.illegal("links", ready, f"{name} read by {unit.name}", allowed, remedy)
                 return
-            if read.operand not in unit.crossing:
-                found = f"{name} as {read.operand} of {call.mnemonic.text} in {unit.name}"
+            if operand not in unit.crossing:
+                found = f"{name} as {operand} of {call.mnemonic.text} in {unit.name}"
                 allowed = f"over a link in {unit.name}: {' '.join(unit.crossing) or 'nothing'}"
                 self.illegal("links", ready, found, allowed, remedy)
                 return
@@ -100,22 +100,22 @@ class Judge:
         return " ".join(names) or "nowhere"
 
     def _read_ports(self, placed: Placed) -> None:
-        reads = sum([len(ready.effects.reads) for ready, _ in placed])
+        reads = sum([len(ready.reads) for ready, _ in placed])
         if reads <= self._fewest_ports:
             return
         seen: dict[int, set[int]] = {}
         for ready, _ in placed:
-            for read in ready.effects.reads:
-                cluster = self.core.register_clusters[read.register]
+            for register, _ in ready.reads:
+                cluster = self.core.register_clusters[register]
                 registers = seen.setdefault(cluster, set())
-                registers.add(read.register)
+                registers.add(register)
                 if len(registers) > self._ports[cluster]:
                     name, ports = self.core.clusters[cluster].name, self._ports[cluster]
                     total = {
-                        r.register
+                        other_register
                         for other, _ in placed
-                        for r in other.effects.reads
-                        if self.core.register_clusters[r.register] == cluster
+                        for other_register, _ in other.reads
+                        if self.core.register_clusters[other_register] == cluster
                     }
                     found = f"{len(total)} registers of {name} read in one bundle"
                     self.illegal("read-ports", ready, found, f"{ports} read ports in cluster {name}")
@@ -162,8 +162,8 @@ class Judge:
             found = f"{operation.name} is {operation.operation_class}, which no slot of {core.name} executes"
             self.illegal("no-slot", ready, found, "classes " + " ".join(classes))
             return
-        written = [core.register_names[write.register] for write in ready.effects.writes]
-        read = [core.register_names[r.register] for r in ready.effects.reads]
+        written = [core.register_names[register] for register, _, _ in ready.writes]
+        read = [core.register_names[register] for register, _ in ready.reads]
         parts = [f"writes {' '.join(written)}"] if written else []
         parts += [f"reads {' '.join(read)}"] if read else []
         found = f"{operation.name} {' and '.join(parts)}, which no slot reaches together"

@@ -9,8 +9,8 @@ from collections.abc import Collection
 import attrs
 
 from vliwsim.description.operations import Operand, Operation, Role
-from vliwsim.program.code import Address, Guard, Immediate, Instruction, Label, Mode, Place, Register
-from vliwsim.program.effects import Effects, effects
+from vliwsim.program.code import Address, Guard, Immediate, Label, Mode, Place, Register
+from vliwsim.program.effects import touched
 from vliwsim.program.source.complaints import nearest
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
@@ -33,7 +33,7 @@ _WRITTEN = (Role.RESULT, Role.INOUT, Role.STICKY)
 class Ready:
     """An operation with its places found, not yet in a slot. ``pin``: the slot index it asks for.
 
-    ``effects`` are those it has in any slot: its crossings and busy beats mean nothing here.
+    ``reads`` and ``writes`` are those of :func:`~vliwsim.program.effects.touched`.
     """
 
     operation: Operation
@@ -41,7 +41,8 @@ class Ready:
     guard: Guard | None
     pin: int | None
     call: Call
-    effects: Effects
+    reads: list[tuple[int, str]]
+    writes: list[tuple[int, str, str]]
 
 
 class OperandReader:
@@ -79,8 +80,7 @@ class OperandReader:
                 places.append(place)
         if len(places) < len(call.operands) or len(self.complaints.problems) > before:
             return None
-        instruction = Instruction(operation, 0, tuple(places), guard)
-        ready = Ready(operation, instruction.places, guard, pin, call, effects(self.scope.core, instruction))
+        ready = Ready(operation, tuple(places), guard, pin, call, *touched(operation, places))
         self._check_whole(ready)
         return ready
 
@@ -324,17 +324,14 @@ class OperandReader:
                 found = f"a second immediate, {piece.text}"
                 allowed = "one immediate an operation, an offset or a label included"
                 self.complaints.add("two-immediates", piece.where, found, allowed, "one of them in a register")
-        writes = ready.effects.writes
-        if len(writes) < 2:
-            return
-        seen: set[int] = set()
-        for write in writes:
-            if write.register in seen:
-                name = core.register_names[write.register]
-                found = f"{ready.operation.name} writes {name} twice"
-                allowed = "different registers as results and updated base"
-                self.complaints.add("names-twice", call.mnemonic.where, found, allowed, kind="illegal")
-            seen.add(write.register)
+        if len(ready.writes) > 1:
+            seen: set[int] = set()
+            for register, _, _ in ready.writes:
+                if register in seen:
+                    found = f"{ready.operation.name} writes {core.register_names[register]} twice"
+                    allowed = "different registers as results and updated base"
+                    self.complaints.add("names-twice", call.mnemonic.where, found, allowed, kind="illegal")
+                seen.add(register)
 
 
 def immediate_range(operand: Operand) -> tuple[int, int, int]:

@@ -38,12 +38,11 @@ class SlotChooser:
     def fitting(self, ready: Ready) -> tuple[tuple[int, int], ...]:
         """(crossing operands, slot) for every slot that can carry out ``ready``, best first."""
         clusters = self.core.register_clusters
-        effects = ready.effects
         key = (
             ready.operation.operation_class,
-            *[clusters[write.register] for write in effects.writes],
+            *[clusters[register] for register, _, _ in ready.writes],
             None,
-            *[(clusters[read.register], read.operand) for read in effects.reads],
+            *[(clusters[register], operand) for register, operand in ready.reads],
         )
         found = self._fits.get(key)
         if found is None:
@@ -56,14 +55,14 @@ class SlotChooser:
         if ready.operation.operation_class not in self.core.slots[slot].classes:
             return None
         clusters, home = self.core.register_clusters, self.core.slot_clusters[slot]
-        if any(clusters[write.register] != home for write in ready.effects.writes):
+        if any(clusters[register] != home for register, _, _ in ready.writes):
             return None
         cost = 0
-        for read in ready.effects.reads:
-            source = clusters[read.register]
+        for register, operand in ready.reads:
+            source = clusters[register]
             if source != home:
                 link = self.core.link_table.get((source, home))
-                if link is None or not link.operands or read.operand not in self.core.slots[slot].crossing:
+                if link is None or not link.operands or operand not in self.core.slots[slot].crossing:
                     return None
                 cost += 1
         return cost
@@ -140,13 +139,13 @@ def link_load(core: Core, placed: Sequence[tuple[Ready, int]]) -> dict[tuple[int
         return load
     for k, (ready, slot) in enumerate(placed):
         home = core.slot_clusters[slot]
-        for read in ready.effects.reads:
-            source = clusters[read.register]
+        for register, _ in ready.reads:
+            source = clusters[register]
             if source == home or (source, home) not in links:
                 continue
             carried = load.setdefault((source, home), [])
-            if not links[source, home].shared or all(read.register != other for _, other in carried):
-                carried.append((k, read.register))
+            if not links[source, home].shared or all(register != other for _, other in carried):
+                carried.append((k, register))
     return load
 
 
