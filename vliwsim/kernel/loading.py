@@ -63,4 +63,11 @@ def assemble_source(path: str, core: str | Core | None = None, changes: Changes 
     """
     from vliwsim.program.assembler import assemble
 
-    return assemble(str(find_source(path)), core, changes)
+    source = str(find_source(path))
+    if core is None:
+        return assemble(source, changes=changes)
+    from vliwsim.description.corefile import evolve, load_core
+
+    if isinstance(core, str):
+        return assemble(source, load_core(core, changes))
+    return assemble(source, evolve(core, changes) if changes else core)

@@ -1,8 +1,8 @@
 """The reference of a kernel: ``reference.py`` beside its source, a function of the kernel's name.
 
 Loading it executes it: it is the one file of a kernel that is code, not data, so only commands that compare load it.
-The function gets copies of the given arrays, scalars and sizes by the names of its parameters, and returns the outputs as
-a dict by name, as a tuple in interface order, or, where there is one, as the value itself.
+The function gets copies of the given arrays, scalars and sizes by the names of its parameters, and returns the outputs
+as a dict by name, as a tuple in interface order, or, where there is one, as the value itself.
 """
 
 from __future__ import annotations

@@ -1,0 +1,135 @@
+"""The command line: its commands, found lazily, and how it ends.
+
+Exit status: 0 all held; 1 the kernel is wrong, illegal or over budget; 2 the request or an input file is bad; 130 the
+user stopped it. A mistake of the user is said as found, allowed, try on standard error, never as a traceback.
+"""
+
+from __future__ import annotations
+
+import os
+import sys
+from collections.abc import Iterable, Sequence
+from importlib import import_module
+from typing import NoReturn
+
+import click
+
+from vliwsim.problems import Problem, VliwsimError, problem
+
+COMMANDS = {
+    "run": ("vliwsim.faces.run", "Run a kernel: compare it with its reference, account for every cycle."),
+    "assemble": ("vliwsim.faces.images", "Assemble a kernel into an image."),
+    "disassemble": ("vliwsim.faces.images", "Turn an image back into a source."),
+    "layout": ("vliwsim.faces.catalogue", "Draw the bit fields of a core's operation words."),
+    "cores": ("vliwsim.faces.catalogue", "List the cores, or describe one."),
+    "ops": ("vliwsim.faces.catalogue", "List the operations, or show one's manual page."),
+}
+"""Commands in the order of the help: the module each is in, and what it does."""
+
+STOPPED = 130
+
+
+class _Commands(click.Group):
+    """Imports a command's module only when that command is asked for."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, name: str) -> click.Command | None:
+        if name not in COMMANDS:
+            return None
+        command = getattr(import_module(COMMANDS[name][0]), name)
+        assert isinstance(command, click.Command)
+        return command
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl([(name, says) for name, (_, says) in COMMANDS.items()])
+
+
+@click.group(
+    cls=_Commands, no_args_is_help=False, invoke_without_command=True, context_settings={"max_content_width": 100}
+)
+@click.option("--version", is_flag=True, help="Show the version and leave.")
+@click.pass_context
+def cli(ctx: click.Context, version: bool) -> None:
+    """Simulate hand-scheduled kernels on a parameterizable VLIW core, cycle by cycle.
+
+    A kernel is a .vliw file; `vliwsim run energy` runs a shipped one. Exit status: 0 all held, 1 the kernel is wrong,
+    illegal or over budget, 2 the request or an input file is bad.
+    """
+    if version:
+        import vliwsim
+
+        click.echo(f"vliwsim {vliwsim.__version__}")
+    elif ctx.invoked_subcommand is None:
+        click.echo(ctx.get_help())
+
+
+def main(arguments: Sequence[str] | None = None) -> NoReturn:
+    """Run the command line and leave with its exit status."""
+    sys.exit(status_of(arguments))
+
+
+def status_of(arguments: Sequence[str] | None = None) -> int:
+    """Run the command line; the exit status."""
+    try:
+        result = cli.main(
+            args=None if arguments is None else list(arguments), prog_name="vliwsim", standalone_mode=False
+        )
+        sys.stdout.flush()
+        return result if isinstance(result, int) else 0
+    except VliwsimError as error:
+        complain(error.problems)
+        return error.status
+    except click.exceptions.Exit as leave:
+        return leave.exit_code
+    except (click.Abort, KeyboardInterrupt):
+        click.echo("stopped", err=True)
+        return STOPPED
+    except click.ClickException as error:
+        complain([usage_problem(error)])
+        return 2
+    except BrokenPipeError:
+        # whoever read our output has gone; keep the interpreter's own flush at exit quiet too
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+
+
+def complain(problems: Iterable[Problem]) -> None:
+    """Print problems on standard error, a blank line between them."""
+    click.echo("\n\n".join(str(p) for p in problems), err=True)
+
+
+def usage_problem(error: click.ClickException) -> Problem:
+    """A mistake in the arguments, as click found it, in our form."""
+    context = getattr(error, "ctx", None)
+    path = context.command_path if context else "vliwsim"
+    remedy = f"{path} --help"
+    if isinstance(error, click.NoSuchOption):
+        options = [o for p in context.command.params for o in p.opts if o.startswith("-")] if context else []
+        return problem(
+            "no-such-option",
+            f"option {error.option_name}",
+            ", ".join(options),
+            _near(error.option_name, options, remedy),
+        )
+    if isinstance(error, click.MissingParameter):
+        what = error.param.human_readable_name if error.param else "an argument"
+        return problem("missing-argument", f"nothing for {what}", f"{path} {what}", remedy)
+    if isinstance(error, click.BadParameter):
+        name = error.param.opts[0] if error.param else "an argument"
+        kind = error.param.type if error.param else None
+        allowed = f"a whole number, {kind.min} or more" if isinstance(kind, click.IntRange) else ""
+        return problem("bad-option", f"{name}: {error.message.rstrip('.')}", allowed, remedy)
+    if isinstance(error, click.UsageError) and error.message.startswith("No such command"):
+        given = error.message.split("'")[1] if "'" in error.message else ""
+        near = _near(given, list(COMMANDS), "--help")
+        return problem("no-such-command", f"command {given}", ", ".join(COMMANDS), f"vliwsim {near}")
+    return problem("bad-usage", error.format_message().rstrip("."), "", remedy)
+
+
+def _near(text: str, known: Sequence[str], otherwise: str) -> str:
+    import difflib
+
+    return next(iter(difflib.get_close_matches(text, known, 1)), otherwise)

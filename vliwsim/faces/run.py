@@ -1,0 +1,184 @@
+"""``vliwsim run``: one run of a kernel, or one for each of its cases."""
+
+from __future__ import annotations
+
+import contextlib
+import json as json_format
+import sys
+from collections.abc import Callable, Iterator
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from vliwsim.faces.options import core_options, given_values, load, save_outputs, save_targets
+from vliwsim.problems import OptionError, VliwsimError, problem
+
+if TYPE_CHECKING:
+    from vliwsim.kernel.cases import Case
+    from vliwsim.kernel.reference import Reference
+    from vliwsim.kernel.runner import KernelRun
+    from vliwsim.machine.recorder import Record
+    from vliwsim.program.kernel import Kernel
+
+STOPPED = 130
+
+
+@click.command(short_help="Run a kernel.")
+@click.argument("kernel")
+@click.option(
+    "--give",
+    multiple=True,
+    metavar="NAME=VALUE",
+    help="An input: x=FILE.npy, n=40, k=0.5, x=1,2,3. Sizes follow from arrays.",
+)
+@click.option("--case", metavar="NAME", help="Run a case by its name, or `all` of them. --give changes single inputs.")
+@click.option("--cases", is_flag=True, help="List the cases and leave.")
+@core_options
+@click.option(
+    "--no-reference", is_flag=True, help="Do not load reference.py (which is Python code) and compare nothing."
+)
+@click.option("--limit", type=click.IntRange(min=1), metavar="CYCLES", help="Give a run up after so many cycles.")
+@click.option(
+    "--interrupt-at",
+    type=click.IntRange(min=0),
+    metavar="CYCLE",
+    help="Take one interrupt at or after this cycle, from 0.",
+)
+@click.option("--save", multiple=True, metavar="NAME=FILE.npy", help="Write an output to a new file.")
+@click.option("--replace", is_flag=True, help="Let --save replace files.")
+@click.option("--trace", is_flag=True, help="Print a line a beat: what issued, what landed.")
+@click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of the report.")
+def run(kernel: str, as_json: bool, **options: Any) -> int:
+    """Run KERNEL, compare its outputs with reference.py beside it, and account for every cycle.
+
+    KERNEL is a .vliw file, a folder with one, or the name of a shipped kernel. With no inputs given its first case is
+    run. Loading reference.py executes it: it is code; every other file of a kernel is data.
+    """
+    try:
+        with contextlib.redirect_stdout(sys.stderr) if as_json else contextlib.nullcontext():
+            job = _Job(kernel, as_json, options)
+            result = job.result()
+    except VliwsimError as error:
+        if as_json:
+            _print_json({"kernel": kernel, "diagnostics": [p.as_json() for p in error.problems]})
+        raise
+    if as_json:
+        _print_json(result)
+    return job.status
+
+
+def _print_json(data: object) -> None:
+    click.echo(json_format.dumps(data, indent=2, ensure_ascii=False, allow_nan=False))
+
+
+class _Job:
+    """One invocation. ``status`` is the exit status, once :meth:`result` has run."""
+
+    def __init__(self, path: str, as_json: bool, options: dict[str, Any]) -> None:
+        self.path, self.as_json, self.options = path, as_json, options
+        self.status = 0
+
+    def result(self) -> object:
+        """Do it; the data for ``--json``."""
+        options = self.options
+        if options["cases"] and (options["give"] or options["case"]):
+            raise OptionError(problem("bad-option", "--cases with --give or --case", "--cases alone"))
+        if options["case"] == "all" and (options["save"] or options["trace"]):
+            raise OptionError(
+                problem("bad-option", "--case all with --save or --trace", "one case with --save or --trace")
+            )
+        given = given_values(options["give"])
+        kernel = load(self.path, options["core"], options["changes"])
+        from vliwsim.kernel.interface import interface_of
+        from vliwsim.kernel.reference import load_reference
+
+        outputs = list(interface_of(kernel).outputs)
+        targets = save_targets(options["save"], outputs, options["replace"])
+        reference = None if options["no_reference"] else load_reference(kernel)
+        if options["cases"]:
+            return self._list(kernel, reference)
+        if options["case"] == "all":
+            return self._all(kernel, reference, given)
+        from vliwsim.kernel.cases import case_with
+
+        run = self._run(kernel, reference, case_with(kernel, reference, options["case"], given))
+        self._say(lambda: _report(run))
+        if run.reason == "halt" and targets:
+            save_outputs(targets, dict(run.outputs), options["replace"])
+        elif targets:
+            self._say(lambda: "  nothing saved: the run did not finish")
+        return run.as_json()
+
+    def _say(self, text: Callable[[], str]) -> None:
+        if not self.as_json:
+            click.echo(text())
+
+    def _run(self, kernel: Kernel, reference: Reference | None, case: Case) -> KernelRun:
+        from vliwsim.faces.progress import Watcher
+        from vliwsim.kernel.runner import LIMIT, run_kernel
+
+        with Watcher(f"{kernel.name} on {kernel.core.name}") as watcher:
+            run = run_kernel(
+                kernel,
+                case.inputs,
+                case=case.name,
+                reference=reference,
+                limit=self.options["limit"] or LIMIT,
+                interrupt_at=self.options["interrupt_at"],
+                watch=watcher,
+                listen=self._listener(kernel) if self.options["trace"] else None,
+            )
+        if run.reason == "stopped":
+            self.status = STOPPED
+        elif not run.ok:
+            self.status = max(self.status, 1)
+        return run
+
+    def _listener(self, kernel: Kernel) -> Callable[[Record], None]:
+        from vliwsim.faces.trace_lines import lines
+
+        def listen(record: Record) -> None:
+            for line in lines(kernel, record):
+                click.echo(line)  # with --json this goes to standard error
+
+        return listen
+
+    def _list(self, kernel: Kernel, reference: Reference | None) -> object:
+        from vliwsim.kernel.cases import cases_of
+
+        cases = list(cases_of(kernel, reference))
+        self._say(lambda: "\n".join(_described(cases)) or "no cases")
+        return {"kernel": kernel.name, "core": kernel.core.name, "cases": [case.name for case in cases]}
+
+    def _all(self, kernel: Kernel, reference: Reference | None, given: dict[str, Any]) -> object:
+        from vliwsim.faces.run_report import line
+        from vliwsim.kernel.cases import Case, cases_of
+
+        runs: list[KernelRun] = []
+        for case in cases_of(kernel, reference):
+            run = self._run(kernel, reference, Case(case.name, {**case.inputs, **given}))
+            runs.append(run)
+            self._say(lambda: line(runs[-1]))
+            if run.reason == "stopped":
+                break
+        bad = [run for run in runs if not run.ok]
+        for run in bad:
+            self._say(lambda run=run: f"\n{run.case}: {_report(run)}")  # type: ignore[misc]
+        self._say(lambda: f"\n{len(runs) - len(bad)} of {len(runs)} cases right, legal and within budget.")
+        return {"kernel": kernel.name, "core": kernel.core.name, "cases": [run.as_json() for run in runs]}
+
+
+def _report(run: KernelRun) -> str:
+    from vliwsim.faces.run_report import report
+
+    return report(run)
+
+
+def _described(cases: list[Case]) -> Iterator[str]:
+    """A case a line: its name and what it gives."""
+    import numpy as np
+
+    width = max((len(case.name) for case in cases), default=0)
+    for case in cases:
+        inputs = [f"{n} {np.asarray(v).size} values" if np.ndim(v) else f"{n} = {v}" for n, v in case.inputs.items()]
+        yield f"  {case.name:<{width}}  {', '.join(inputs)}"
