@@ -5,16 +5,19 @@ from __future__ import annotations
 import struct
 
 import pytest
-from hypothesis import given
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
+from vliwsim.description.core import Core
+from vliwsim.program.assembler import assemble
 from vliwsim.program.code import Address, Guard, Immediate, Instruction, Label, Mode, Register
 from vliwsim.program.disassembly import address_text, disassemble, immediate_text, text_of
 from vliwsim.program.encoding.decode import decode
 from vliwsim.program.encoding.encode import encode
+from vliwsim.program.encoding.image import Image, read_image
 from vliwsim.program.encoding.layout import longest_idle
 
-from .encoding_samples import BY_NAME, HALT, OPERATIONS, PLAIN, R, S, add, core, jump, o
+from .encoding_samples import BY_NAME, CORES, HALT, OPERATIONS, PLAIN, R, S, add, core, jump, o, programs
 
 
 @pytest.mark.parametrize(
@@ -136,3 +139,45 @@ def test_a_full_idle_word_needs_no_label_behind_it() -> None:
 
 def test_labels_of_a_message_may_be_absent() -> None:
     assert text_of(PLAIN, Instruction(BY_NAME["jump"], 0, (Label("far"),)), {}) == "jump far"
+
+
+def assembled(on: Core, text: str) -> Image:
+    return read_image(assemble("again.vliw", on, text=text, operations=OPERATIONS, allow_illegal=True).image)
+
+
+@pytest.mark.parametrize("on", CORES, ids=lambda c: f"{c.words.bits}-{c.words.straddle}")
+@settings(max_examples=60, deadline=None)
+@given(data=st.data())
+def test_a_disassembled_program_assembles_to_the_same_words(on: Core, data: st.DataObject) -> None:
+    drafts, labels = data.draw(programs(on))
+    if not on.words.straddle:
+        drafts = [d if isinstance(d, int) else d[: on.words.group // 2] for d in drafts]
+    image = encode(on, OPERATIONS, drafts, labels)
+    operations = [i for d in drafts if not isinstance(d, int) for i in d]
+    assume(not any(i.operation.name == "fadd" and infinite(i) for i in operations))
+    text = disassemble(decode(on, OPERATIONS, image))
+    once = assembled(on, text)
+    assert once.words == image.words
+    assert labels.keys() <= once.labels.keys()
+    # What an assembler has made comes back whole, labels included.
+    assert disassemble(decode(on, OPERATIONS, once)) == text
+    assert assembled(on, text) == once
+
+
+def infinite(instruction: Instruction) -> bool:
+    """Whether an immediate is an infinity or not a number, which no decimal number can say."""
+    return any(isinstance(p, Immediate) and p.value >> 23 & 255 == 255 for p in instruction.places)
+
+
+def test_a_strangers_labels_are_left_out_where_the_language_has_no_room_for_them() -> None:
+    words = ("given", "idle", "if", "ring", "g3", "let")
+    image = encode(PLAIN, OPERATIONS, [[HALT], [HALT]], dict.fromkeys(words, 1))
+    text = disassemble(decode(PLAIN, OPERATIONS, image))
+    assert [line for line in text.splitlines() if line.endswith(":")] == ["place0:"]
+    assert assembled(PLAIN, text).words == image.words
+
+
+def test_very_long_idle_runs_are_cut_into_sections() -> None:
+    image = encode(PLAIN, OPERATIONS, [3 * longest_idle(PLAIN), [HALT]], {})
+    text = disassemble(decode(PLAIN, OPERATIONS, image))
+    assert assembled(PLAIN, text).words == image.words

@@ -206,7 +206,7 @@ LW = 1 | 130 << 4  # d 21, mode 27, base 29, step 35, immediate 41, of which a r
     [
         ([0], ["bad-word: word 0 (byte 0): operation 0 in 0x0, which is no idle word"]),
         ([1 | 1 << 14 | 1 << 2], ["bad-word: word 0 (byte 0): operation 0 in 0x4005, which is no idle word"]),
-        ([1 | 1 << 45], ["bad-word: word 0 (byte 0): operation 0 in 0x200000000001, which is no idle word"]),
+        ([1 | 1 << 38], ["bad-word: word 0 (byte 0): operation 0 in 0x4000000001, which is no idle word"]),
         ([1 | 900 << 4], ["bad-word: word 0 (byte 0): operation code 0x384"]),
         ([ADD | 97 << 14], ["bad-word: word 0 (byte 0): guard code 97"]),
         ([ADD | 48 << 21, ADD | 63 << 27], ["bad-word: word 0 (byte 0): d = 48", "bad-word: word 1 (byte 8): a = 63"]),

@@ -61,7 +61,7 @@ def test_the_layout_does_not_depend_on_the_other_operations() -> None:
 
 
 def test_the_longest_idle_run() -> None:
-    assert longest_idle(PLAIN) == layout(PLAIN, OPERATIONS).beats.mask == 2**31 - 1
+    assert longest_idle(PLAIN) == layout(PLAIN, OPERATIONS).beats.mask == 2**24 - 1
     assert longest_idle(core(32, registers=(4,), slots=1)) == 2**20 - 1
 
 

@@ -10,6 +10,9 @@ from vliwsim.description.operations import Operand, Role
 from vliwsim.program.code import Address, Bundle, Immediate, Instruction, Label, Mode, Place, Program, Register
 from vliwsim.program.encoding.layout import longest_idle
 
+OPERAND_WORDS = ("if", "not", "on", "then", "in", "ring")
+"""Words inside a statement; like the words that begin a line they cannot be labels."""
+
 DECIMAL_LIMIT = 1 << 16
 """Packed and unsigned immediates from here up are written in hexadecimal."""
 
@@ -84,16 +87,24 @@ def _bundle_lines(core: Core, bundle: Bundle, beat: int, labels: Mapping[str, in
 
 def _labels(program: Program) -> dict[str, int]:
     """The program's labels by address, with made-up ones where the text needs more."""
-    found = dict(sorted(program.labels.items(), key=lambda pair: pair[1]))
+    from vliwsim.program.assembly.schedule import MOST_BEATS
+    from vliwsim.program.source.header import HEADER_WORDS
+    from vliwsim.program.source.parser import BODY_WORDS
+
+    unusable = {*HEADER_WORDS, *BODY_WORDS, *OPERAND_WORDS} | program.core.register_numbers.keys()
+    found = {name: address for name, address in program.labels.items() if name not in unusable}
     known = set(found.values())
-    wanted = {program.bundles[0].address} if program.bundles else set()
+    wanted = {program.bundles[0].address}
     run, full = 0, longest_idle(program.core)
+    section = 0
     for bundle in program.bundles:
         for instruction in bundle.instructions:
             wanted |= set(_targets(instruction))
         # An idle run becomes a gap in the stamps, and a gap one word, or several full ones and a rest.
-        if run and not bundle.instructions and run != full:
+        melts = bool(run) and not bundle.instructions and run != full
+        if melts or section + bundle.beats > MOST_BEATS:
             wanted.add(bundle.address)
+        section = bundle.beats + (0 if bundle.address in wanted or bundle.address in known else section)
         run = 0 if bundle.instructions else bundle.beats
     number = 0
     for address in sorted(wanted - known):

@@ -35,7 +35,7 @@ from vliwsim.program.code import Mode
 
 CODE_BITS = 10
 IMMEDIATE_BITS = 32
-BEAT_BITS = 31
+BEAT_BITS = 24
 RING_BITS = 5
 MOST_OPERATIONS = 64
 """The most operations a bundle may hold, legal or not."""
@@ -140,7 +140,7 @@ def slot_bits(core: Core) -> int:
 
 
 def longest_idle(core: Core) -> int:
-    """The most beats one idle word counts: what the bits above the operation code hold, at most 2**31 - 1."""
+    """The most beats one idle word counts: what the bits above the operation code hold, at most 2**24 - 1."""
     return (1 << min(BEAT_BITS, core.words.bits - 2 - slot_bits(core) - CODE_BITS)) - 1
 
 
