@@ -3,19 +3,20 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable, Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
 from vliwsim.description.core import Core
 from vliwsim.description.operations import Kind, OperationSet
-from vliwsim.problems import CoreError, OptionError, Place, SourceError, problem
+from vliwsim.problems import CoreError, ImageError, OptionError, Place, SourceError, problem
 from vliwsim.program.assembly.legality import Judge
 from vliwsim.program.assembly.operands import Ready
 from vliwsim.program.assembly.schedule import Section as Stretch
 from vliwsim.program.assembly.schedule import schedule
-from vliwsim.program.assembly.slots import Crowd, SlotChooser
+from vliwsim.program.assembly.slots import NoSlots, SlotChooser
 from vliwsim.program.code import Instruction, Program
+from vliwsim.program.encoding.layout import MOST_OPERATIONS
 from vliwsim.program.kernel import Kernel, Section, SourceMap
 from vliwsim.program.source.complaints import Complaints
 from vliwsim.program.source.interface import interface
@@ -38,7 +39,7 @@ def assemble(
     *,
     text: str | None = None,
     load_core: LoadCore | None = None,
-    changes: Mapping[str, Any] | Iterable[str] = (),
+    changes: Mapping[str, Any] | Sequence[str] = (),
     operations: OperationSet | None = None,
     allow_illegal: bool = False,
 ) -> Kernel:
@@ -63,7 +64,11 @@ def assemble(
     _check_header(tree, complaints)
     if core is None:
         core = _core(tree, load_core, changes, complaints)
-    elif tree.cores and core.name not in [named.text for named in tree.cores]:
+    elif changes:
+        from vliwsim.description.corefile import evolve
+
+        core = evolve(core, changes)
+    if tree.cores and core.name not in [named.text for named in tree.cores]:
         where, found = tree.cores[0].where, f"assembled for {core.name}"
         complaints.add("other-core", where, found, "named here: " + ", ".join(c.text for c in tree.cores), kind="note")
     if operations is None:
@@ -164,7 +169,8 @@ class _Assembly:
         header = interface(tree, scope)
         sections = schedule(tree.body, scope)
         for section in sections:
-            self._place(section)
+            if not self.complaints.full:
+                self._place(section)
         self._check_ends(sections)
         self.complaints.raise_if_any()
         assert tree.kernel
@@ -209,14 +215,20 @@ class _Assembly:
     def _slots(self, bundle: list[Ready], beat: int, free_at: dict[int, int]) -> list[tuple[Ready, int]]:
         """The bundle's operations with slots, in slot order; what is illegal is told.
 
+        bundle: at least one operation.
+
         free_at: for slots with units that are not pipelined, the beat of this section from which they are free.
         """
-        busy = frozenset(slot for slot, free in free_at.items() if free > beat) if free_at else frozenset()
-        slots = self.chooser.choose(bundle, busy)
-        if isinstance(slots, Crowd):
-            self.judge.no_slot(bundle, slots)
+        if len(bundle) > MOST_OPERATIONS:
+            found = f"{len(bundle)} operations in one bundle"
+            self.judge.illegal("bundle-too-long", bundle[MOST_OPERATIONS], found, f"at most {MOST_OPERATIONS}")
             return []
-        placed = list(zip(bundle, slots))
+        busy = frozenset(slot for slot, free in free_at.items() if free > beat) if free_at else frozenset()
+        try:
+            placed = list(zip(bundle, self.chooser.choose(bundle, busy)))
+        except NoSlots as none:
+            self.judge.no_slot(bundle, none.crowds)
+            return []
         if len(placed) > 1:
             placed.sort(key=lambda pair: pair[1])
         for ready, slot in placed:
@@ -260,7 +272,14 @@ class _Assembly:
             for draft in self.drafts
         ]
         digest = core_digest(self.core, self.operations.digest)
-        image = encode(self.core, self.operations, drafts, self.first_draft, digest, self._where)
+        try:
+            image = encode(self.core, self.operations, drafts, self.first_draft, digest, self._where)
+        except ImageError as error:
+            for fault in error.problems:
+                place = fault.place or self.complaints.place(1)
+                self.complaints.add(fault.name, place, fault.found, fault.allowed, fault.remedy, "illegal")
+            self.complaints.raise_if_any()
+            raise
         return decode(self.core, self.operations, image), to_bytes(image), image.draft_bundles
 
     def _where(self, draft: int, instruction: int) -> Place | None:

@@ -132,26 +132,34 @@ class Judge:
                 allowed = f"{link.operands} a bundle{shared}"
                 self.illegal("links", ready, found, allowed)
 
-    def no_slot(self, bundle: Sequence[Ready], crowd: Crowd) -> None:
-        """Tell which operations compete for which slots."""
-        core = self.core
-        last = bundle[crowd.operations[-1]]
-        if len(crowd.operations) == 1 and not self.chooser.fitting(last):
-            self._nowhere(last)
-            return
-        pinned = {ready.pin: ready for ready in bundle if ready.pin is not None}
-        if len(crowd.operations) == 1 and not crowd.slots:
-            fits = [k for _, k in self.chooser.fitting(last)]
-            names = " ".join(core.slots[k].name for k in fits)
-            found = f"{last.operation.name} fits only {names}, pinned to " + ", ".join(
-                f"{pinned[k].operation.name} (line {pinned[k].call.mnemonic.line})" for k in fits if k in pinned
+    def no_slot(self, bundle: Sequence[Ready], crowds: Sequence[Crowd]) -> None:
+        """Tell which operations compete for which slots, and the guards that are not allowed."""
+        for ready in bundle:
+            if ready.guard and ready.guard.register not in self._guards:
+                self._guard(ready)
+        pins = {ready.pin: ready for ready in bundle if ready.pin is not None}
+        for crowd in crowds:
+            rivals = [bundle[k] for k in crowd.operations]
+            if len(rivals) == 1 and not self.chooser.fitting(rivals[0]):
+                self._nowhere(rivals[0])
+            else:
+                self._crowded(rivals, crowd, pins)
+
+    def _crowded(self, rivals: list[Ready], crowd: Crowd, pins: dict[int, Ready]) -> None:
+        names = [slot.name for slot in self.core.slots]
+        pinned = sorted({k for ready in rivals for _, k in self.chooser.fitting(ready)} & pins.keys())
+        who = ", ".join(f"{ready.operation.name} (line {ready.call.mnemonic.line})" for ready in rivals)
+        if crowd.slots:
+            found = f"{len(rivals)} operations compete for {' '.join(names[k] for k in crowd.slots)}: {who}"
+            allowed = f"{len(crowd.slots)} of them in one bundle"
+        else:
+            found, allowed = f"no slot left for {who}", "one operation a slot a bundle"
+        if pinned:
+            told = ", ".join(
+                f"{names[k]} to {pins[k].operation.name} (line {pins[k].call.mnemonic.line})" for k in pinned
             )
-            self.illegal("no-slot", last, found, "a slot for every operation", "another beat")
-            return
-        who = ", ".join(f"{bundle[k].operation.name} (line {bundle[k].call.mnemonic.line})" for k in crowd.operations)
-        names = " ".join(core.slots[k].name for k in crowd.slots)
-        found = f"{len(crowd.operations)} operations compete for {names}: {who}"
-        self.illegal("no-slot", last, found, f"{len(crowd.slots)} of them in one bundle", "one of them in another beat")
+            found += f"; pinned: {told}"
+        self.illegal("no-slot", rivals[-1], found, allowed, "one of them in another beat")
 
     def _nowhere(self, ready: Ready) -> None:
         """An operation that no slot of the core can carry out, even alone."""

@@ -11,7 +11,6 @@ import attrs
 from vliwsim.description.operations import Operand, Operation, Role
 from vliwsim.program.code import Address, Guard, Immediate, Label, Mode, Place, Register
 from vliwsim.program.effects import touched
-from vliwsim.program.source.complaints import nearest
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
 from vliwsim.program.source.tree import Call
@@ -87,7 +86,9 @@ class OperandReader:
     def _unknown_mnemonic(self, call: Call) -> None:
         word = call.mnemonic
         names = self.scope.operations.by_name
-        remedy = nearest(word.text, names) or nearest(word.text.partition(".")[0], names)
+        remedy = self.complaints.nearest(word.text, names) or self.complaints.nearest(
+            word.text.partition(".")[0], names
+        )
         if call.operands and call.operands[0].text.startswith("="):
             remedy = "let or name in front of it"
         allowed = "an operation of this core (vliwsim ops)"
@@ -109,7 +110,9 @@ class OperandReader:
         if index is None:
             allowed = " ".join(self.slots)
             found = f"no slot {piece.text}"
-            self.complaints.add("unknown-slot", piece.where, found, allowed, nearest(piece.text, self.slots))
+            self.complaints.add(
+                "unknown-slot", piece.where, found, allowed, self.complaints.nearest(piece.text, self.slots)
+            )
         return index
 
     def register(self, piece: Piece) -> int | None:
@@ -132,7 +135,8 @@ class OperandReader:
         value = self.scope.value(piece)
         if isinstance(value, float):
             remedy = "// instead of /" if "/" in piece.text else ""
-            self.complaints.add("not-an-integer", piece.where, f"{piece.text} is {value}", "an integer", remedy)
+            found = f"{piece.text} is {value}" if piece.text != str(value) else piece.text
+            self.complaints.add("not-an-integer", piece.where, found, "an integer", remedy)
             return None
         return None if value is None else int(value)
 
@@ -154,7 +158,10 @@ class OperandReader:
         if role is Role.TARGET:
             return self._label(piece)
         if role in _WRITTEN or operand.pair:
-            self.scope.unknown_register(piece)
+            if _WORD.match(name.text):
+                self.scope.unknown_register(name)
+            else:
+                self.complaints.add("bad-operand", piece.where, f"{text} for {operand.name}", operand_form(operand))
             return None
         if half is not None or (_WORD.match(text) and text not in self.scope.environment):
             self._unknown_word(piece)
@@ -192,7 +199,7 @@ class OperandReader:
             found, remedy = f"label {piece.text} as a value", ""
         else:
             found = f"{piece.text} is no register and no constant"
-            remedy = nearest(piece.text, [*scope.registers, *scope.environment])
+            remedy = self.complaints.nearest(piece.text, [*scope.registers, *scope.environment])
         allowed = "a register, a let name or a number"
         self.complaints.add("unknown-name", piece.where, found, allowed, remedy)
 
@@ -200,7 +207,11 @@ class OperandReader:
         if piece.text not in self.labels:
             allowed = "a label of this file or a register"
             self.complaints.add(
-                "unknown-label", piece.where, f"no label {piece.text}", allowed, nearest(piece.text, self.labels)
+                "unknown-label",
+                piece.where,
+                f"no label {piece.text}",
+                allowed,
+                self.complaints.nearest(piece.text, self.labels),
             )
             return None
         return Label(piece.text)

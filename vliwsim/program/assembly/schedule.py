@@ -15,7 +15,7 @@ from vliwsim.program.source.tree import Call, Idle, Label, Let, Name, Node, Repe
 
 MOST_BEATS = 1 << 24
 """The latest stamp of a section."""
-MOST_STEPS = 1 << 20
+MOST_STEPS = 1 << 18
 """Lines and passes of a source after unrolling."""
 
 _NAMES = re.compile(r"[A-Za-z_]\w*")

@@ -28,12 +28,21 @@ class Crowd:
     slots: tuple[int, ...]
 
 
+class NoSlots(Exception):
+    """A bundle has no assignment, because of ``crowds``."""
+
+    def __init__(self, crowds: list[Crowd]) -> None:
+        super().__init__(crowds)
+        self.crowds = crowds
+
+
 class SlotChooser:
     """Chooses slots on one core. Results are remembered by what they depend on."""
 
     def __init__(self, core: Core) -> None:
         self.core = core
         self._fits: dict[tuple[object, ...], tuple[tuple[int, int], ...]] = {}
+        self._matched: dict[tuple[object, ...], dict[int, int]] = {}
 
     def fitting(self, ready: Ready) -> tuple[tuple[int, int], ...]:
         """(crossing operands, slot) for every slot that can carry out ``ready``, best first."""
@@ -67,10 +76,12 @@ class SlotChooser:
                 cost += 1
         return cost
 
-    def choose(self, bundle: Sequence[Ready], busy: frozenset[int] = frozenset()) -> list[int] | Crowd:
-        """A slot index for each operation of a bundle, or why there is none.
+    def choose(self, bundle: Sequence[Ready], busy: frozenset[int] = frozenset()) -> list[int]:
+        """A slot index for each operation of a bundle.
 
         busy: slots whose unit is not free in this beat as far as the section shows; they are avoided.
+
+        Raises :class:`NoSlots` when there are none.
         """
         chosen: list[int | None] = [ready.pin for ready in bundle]
         free = [k for k, slot in enumerate(chosen) if slot is None]
@@ -86,12 +97,20 @@ class SlotChooser:
         greedy = _greedy(options)
         if greedy is not None and self._carried(bundle, chosen, greedy):
             return _merged(chosen, greedy)
-        matched = _matching(options)
+        matched = self._matching(options)
         if len(matched) < len(free):
-            return _crowd(options, matched)
+            raise NoSlots(_crowds(options, matched))
         if not self._carried(bundle, chosen, matched):
             matched = self._search(bundle, chosen, options) or matched
         return _merged(chosen, matched)
+
+    def _matching(self, options: dict[int, list[tuple[int, int]]]) -> dict[int, int]:
+        """As :func:`_matching`, remembered: schedules repeat themselves."""
+        key = tuple([(k, *fits) for k, fits in options.items()])
+        found = self._matched.get(key)
+        if found is None:
+            found = self._matched[key] = _matching(options)
+        return found
 
     def _carried(self, bundle: Sequence[Ready], chosen: list[int | None], slots: dict[int, int]) -> bool:
         """Whether the links carry the crossing operands of an assignment; a partial one is judged as far as it goes."""
@@ -184,14 +203,21 @@ def _matching(options: dict[int, list[tuple[int, int]]]) -> dict[int, int]:
     return dict(sorted((max(a, b), -1 - min(a, b)) for a, b in pairs))
 
 
-def _crowd(options: dict[int, list[tuple[int, int]]], matched: dict[int, int]) -> Crowd:
-    """Operations with fewer slots than they are: all that an unmatched one can reach by changing places."""
+def _crowds(options: dict[int, list[tuple[int, int]]], matched: dict[int, int]) -> list[Crowd]:
+    """Operations with fewer slots than they are: all that unmatched ones can reach by changing places with others."""
     user = {slot: k for k, slot in matched.items()}
-    first = min(k for k in options if k not in matched)
-    operations, slots = [first], set[int]()
-    for k in operations:
-        for _, slot in options[k]:
-            if slot not in slots:
-                slots.add(slot)
-                operations.append(user[slot])
-    return Crowd(tuple(sorted(operations)), tuple(sorted(slots)))
+    crowds: list[tuple[set[int], set[int]]] = []
+    for first in [k for k in options if k not in matched]:
+        reached, slots = [first], set[int]()
+        for k in reached:
+            for _, slot in options[k]:
+                if slot not in slots:
+                    slots.add(slot)
+                    reached.append(user[slot])
+        operations = set(reached)
+        for crowd in [crowd for crowd in crowds if crowd[1] & slots]:
+            crowds.remove(crowd)
+            operations |= crowd[0]
+            slots |= crowd[1]
+        crowds.append((operations, slots))
+    return [Crowd(tuple(sorted(operations)), tuple(sorted(slots))) for operations, slots in crowds]

@@ -52,6 +52,15 @@ class Complaints:
         self._seen.add(key)
         (self.notes if problem.kind == "note" else self.problems).append(problem)
 
+    @property
+    def full(self) -> bool:
+        """Whether more problems than are told have been found: no use to look for more, or for remedies."""
+        return len(self.problems) > MOST
+
+    def nearest(self, word: str, known: Iterable[str]) -> str:
+        """The known spelling nearest to ``word``, or "" when none is near."""
+        return "" if self.full else nearest(word, known)
+
     def raise_if_any(self) -> None:
         """Raise :class:`~vliwsim.problems.SourceError` with all problems in the order of the file."""
         if not self.problems:
@@ -69,5 +78,5 @@ def nearest(word: str, known: Iterable[str]) -> str:
     """The known spelling nearest to ``word``, or "" when none is near."""
     import difflib
 
-    found = difflib.get_close_matches(word, sorted(known), 1, 0.6)
+    found = difflib.get_close_matches(word[:100], sorted(known), 1, 0.6) if word[:1].isalpha() else []
     return found[0] if found else ""

@@ -10,7 +10,7 @@ from pathlib import PurePosixPath
 import attrs
 
 from vliwsim.program.kernel import Formula, Item
-from vliwsim.program.source.complaints import Complaints, nearest
+from vliwsim.program.source.complaints import Complaints
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
 from vliwsim.program.source.tree import ItemLine, Tree
@@ -64,7 +64,7 @@ class _Reader:
         before = len(complaints.problems)
         self._name(line.name)
         if line.type.text not in TYPES:
-            near = nearest(line.type.text, TYPES)
+            near = self.complaints.nearest(line.type.text, TYPES)
             complaints.add("unknown-type", line.type.where, f"type {line.type.text}", " ".join(TYPES), near)
         self._shape(line)
         values: dict[str, Formula | None] = {}
@@ -197,7 +197,9 @@ class _Reader:
         match = re.search(rf"(?<![\w.]){re.escape(name)}(?![\w.])", formula.text)
         where = (formula.place.line, formula.place.column + (match.start() if match else 0), len(name))
         allowed = "known here: " + (" ".join(sorted(known)[:20]) or "nothing but let names and latencies")
-        self.complaints.add("unknown-name", where, f"{name} has no value here", allowed, nearest(name, known))
+        self.complaints.add(
+            "unknown-name", where, f"{name} has no value here", allowed, self.complaints.nearest(name, known)
+        )
 
 
 def _check_registers(items: tuple[Item, ...], scope: Scope) -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 
-from vliwsim.program.source.complaints import Complaints, nearest
+from vliwsim.program.source.complaints import Complaints
 from vliwsim.program.source.header import HEADER_WORDS, header_line, let_line, name_line
 from vliwsim.program.source.pieces import Piece, Unbalanced, cut_call, expression_end, without_comment
 from vliwsim.program.source.tree import Call, Idle, Label, Node, Repeat, Stamp, Tree
@@ -87,7 +87,7 @@ class _Parser:
             (self.tree.lets if type(node).__name__ == "Let" else self.tree.names).append(node)  # type: ignore[arg-type]
 
     def unknown_header(self, rest: Piece, first: str) -> None:
-        near = nearest(first, HEADER_WORDS) if first else ""
+        near = self.complaints.nearest(first, HEADER_WORDS) if first else ""
         remedy = near or "a label such as start: above the first operation"
         found = f"{first or rest.text} before the first label"
         where = (rest.line, rest.column, len(first) or 1)
@@ -205,8 +205,8 @@ class _Parser:
             elif word == "on":
                 pin = value
             else:
-                negated = value.text.startswith("not ")
-                guard = value.part(4) if negated else value
+                negated = value.text.split(None, 1)[:1] == ["not"]
+                guard = value.part(3) if negated else value
         self.target.append(Call(mnemonic, tuple(operands), guard, negated, pin))
 
     def finish(self) -> None:

@@ -8,7 +8,7 @@ from collections.abc import Iterable
 from vliwsim.description.core import Core
 from vliwsim.description.operations import OperationSet
 from vliwsim.problems import SourceError
-from vliwsim.program.source.complaints import Complaints, nearest
+from vliwsim.program.source.complaints import Complaints
 from vliwsim.program.source.expressions import RESERVED, Formula, formula
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.tree import Let, Name
@@ -40,7 +40,7 @@ class Scope:
         self.names: dict[str, int] = {}
         self.environment: dict[str, object] = dict(self.latencies)
         self.registers: dict[str, int] = dict(core.register_numbers)
-        self._formulas: dict[str, Formula | None] = {}
+        self._formulas: dict[str, Formula] = {}
         self._later: dict[str, int] = {}
         """Lines of ``let`` and ``name`` definitions further down, for the diagnostics."""
 
@@ -48,10 +48,6 @@ class Scope:
         """Definitions that will come, so that a use before them can say so."""
         for definition in definitions:
             self._later.setdefault(definition.name.text, definition.name.line)
-
-    def formula(self, piece: Piece) -> Formula | None:
-        """The parsed expression, its problems told; an equal text is parsed once."""
-        return self.parsed(piece, {})
 
     def parsed(self, piece: Piece, bound: dict[str, object]) -> Formula | None:
         """A formula with ``bound`` names fixed; None, with the problem told, when it is refused."""
@@ -80,14 +76,12 @@ class Scope:
     def value(self, piece: Piece) -> int | float | None:
         """The value of an expression of the schedule now; None, with the problem told, when it has none."""
         text = piece.text
-        if text in self._formulas:
-            parsed = self._formulas[text]
-        else:
-            parsed = self._formulas[text] = self.formula(piece)
+        parsed = self._formulas.get(text)
         if parsed is None:
-            if not self.complaints.problems:  # pragma: no cover - a refused text has been told
-                raise AssertionError(text)
-            return None
+            parsed = self.parsed(piece, {})
+            if parsed is None:
+                return None
+            self._formulas[text] = parsed
         try:
             value: int | float = parsed.within(self.environment)
         except SourceError as error:
@@ -108,7 +102,7 @@ class Scope:
         """Tell that ``name``, somewhere in ``piece``, means nothing here."""
         where = re.search(rf"(?<![\w.]){re.escape(name)}(?![\w.])", piece.text)
         column = piece.column + (where.start() if where else 0)
-        remedy = nearest(name, self.environment)
+        remedy = self.complaints.nearest(name, self.environment)
         if name in self._later:
             remedy = f"its definition, line {self._later[name]}, above this line"
         allowed = "let names, repeat variables and the core's latencies: " + " ".join(sorted(self.latencies))
@@ -160,10 +154,14 @@ class Scope:
         return number
 
     def unknown_register(self, piece: Piece) -> None:
-        remedy = nearest(piece.text, self.registers)
+        remedy = self.complaints.nearest(piece.text, self.registers)
         if piece.text in self._later:
             remedy = f"its definition, line {self._later[piece.text]}, above this line"
         allowed = "registers " + " ".join(f"{c.name}0..{c.name}{c.registers - 1}" for c in self.core.clusters)
         self.complaints.add(
-            "unknown-register", piece.where, f"{piece.text or 'nothing'} is no register", allowed, remedy
+            "unknown-register",
+            piece.where,
+            f"{piece.text} is no register" if piece.text else "no register",
+            allowed,
+            remedy,
         )
