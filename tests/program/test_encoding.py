@@ -8,7 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from vliwsim.description.core import Core
-from vliwsim.problems import ImageError
+from vliwsim.problems import ImageError, Place
 from vliwsim.program.code import Address, Guard, Immediate, Instruction, Label, Mode, Program, Register
 from vliwsim.program.encoding.decode import decode
 from vliwsim.program.encoding.encode import encode
@@ -56,7 +56,7 @@ def test_decoding_gives_back_what_was_encoded(on: Core, data: st.DataObject) -> 
     assert again(on, program) == attrs.evolve(image, draft_bundles=())
 
 
-@settings(max_examples=300, deadline=None)
+@settings(max_examples=150, deadline=None)
 @given(data=st.data())
 def test_a_changed_word_is_refused_or_means_something_else(data: st.DataObject) -> None:
     on = data.draw(st.sampled_from(CORES))
@@ -278,3 +278,24 @@ def test_alien_images_are_refused() -> None:
     with pytest.raises(ImageError, match="label x at byte 4"):
         decode(PLAIN, OPERATIONS, attrs.evolve(image, labels={"x": 4}))
     assert decode(PLAIN, OPERATIONS, image, digest="abc").code_bytes == 8
+
+
+def test_complaints_find_the_source() -> None:
+    where = {(1, 2): Place("bearing.vliw", 12, 5), (2, 0): Place("bearing.vliw", 20, 1)}
+    wide = [add(k, k, 2**31, slot=k) for k in range(3)]
+    on = core(group=4, straddle=False)
+    with pytest.raises(ImageError) as caught:
+        encode(on, OPERATIONS, [[HALT], [HALT, HALT, jump("x")]], {}, where=lambda d, i: where.get((d, i)))
+    assert str(caught.value).startswith("bearing.vliw:12:5  bad-place  (error)\n  found    jump: label x is nowhere\n")
+    with pytest.raises(ImageError) as caught:
+        encode(on, OPERATIONS, [[HALT], 4, wide, wide], {}, where=lambda d, i: where.get((d, i)))
+    assert [(p.place, p.found) for p in caught.value.problems] == [
+        (where[2, 0], "6 words in one bundle"),
+        (None, "6 words in one bundle (draft 3)"),
+    ]
+
+
+def test_code_has_a_bound(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("vliwsim.program.encoding.encode.MOST_CODE_BYTES", 800)
+    assert encode(PLAIN, OPERATIONS, [[HALT]] * 100, {}).code_bytes == 800
+    assert refused([[HALT]] * 101, {}) == ["code-too-long"]

@@ -24,8 +24,8 @@ Draft = Sequence[Instruction] | int
 Where = Callable[[int, int], SourcePlace | None]
 """Where the source says a draft's instruction, by draft index and index in the draft."""
 
-MOST_CODE_BYTES = 1 << 31
-"""Code addresses are below this, so that every one is a small immediate or an extension word."""
+MOST_CODE_BYTES = 1 << 24
+"""The largest code, in bytes: well inside what an image file may have."""
 
 
 @attrs.define

@@ -15,7 +15,6 @@ import hashlib
 import json
 import os
 import re
-import tempfile
 from collections.abc import Mapping
 from pathlib import Path
 
@@ -24,7 +23,7 @@ import attrs
 from vliwsim.problems import ImageError, Problem, problem
 
 MAGIC = b"vliwsim image 1\n"
-MOST_BYTES = 1 << 28
+MOST_BYTES = 1 << 25
 """The largest image file that is read, in bytes."""
 
 _DIGEST_BYTES = 32
@@ -121,6 +120,8 @@ def write_image(path: str | os.PathLike[str], image: Image, overwrite: bool = Fa
 
     Raises :class:`ImageError` when the file exists and ``overwrite`` is not asked for, or it cannot be written.
     """
+    import tempfile
+
     target = Path(path)
     data = to_bytes(image)
     try:
