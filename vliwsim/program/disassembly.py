@@ -23,16 +23,11 @@ def text_of(core: Core, instruction: Instruction, labels: Mapping[str, int] | No
     labels: name → byte address, for targets; one that has no label is written as its address. slot: add the pin
     (``on g.mem``).
     """
-    operation = instruction.operation
-    names = core.register_names
-    places = [
-        _place(names, operand, place, labels or {}) for operand, place in zip(operation.operands, instruction.places)
-    ]
-    text = f"{operation.name} {', '.join(places)}" if places else operation.name
-    guard = instruction.guard
-    if guard is not None:
-        text += f" if {'not ' if guard.negated else ''}{names[guard.register]}"
-    return f"{text} on {core.slots[instruction.slot].name}" if slot else text
+    names_at: dict[int, str] = {}
+    if labels and any(True for _ in _targets(instruction)):
+        for name, address in labels.items():
+            names_at.setdefault(address, name)
+    return _text(core, instruction, names_at, slot)
 
 
 def disassemble(program: Program, kernel: str = "disassembled") -> str:
@@ -45,6 +40,7 @@ def disassemble(program: Program, kernel: str = "disassembled") -> str:
     named: dict[int, list[str]] = {}
     for name, address in labels.items():
         named.setdefault(address, []).append(name)
+    names_at = {address: names[0] for address, names in named.items()}
     lines = [f"kernel {kernel}", f"core   {program.core.name}"]
     beat = 0
     bundles = program.bundles
@@ -56,7 +52,7 @@ def disassemble(program: Program, kernel: str = "disassembled") -> str:
         beat += bundle.beats
         following = bundles[index + 1].address if index + 1 < len(bundles) else None
         if bundle.instructions:
-            lines += _bundle_lines(program.core, bundle, beat - 1, labels)
+            lines += _bundle_lines(program.core, bundle, beat - 1, names_at)
         elif following is None or following in named:
             lines.append(f"@{beat - 1:<3} idle")
     return "\n".join(lines) + "\n"
@@ -78,10 +74,20 @@ def immediate_text(value: int, operand: Operand) -> str:
     return str(_signed(value, bits))
 
 
-def _bundle_lines(core: Core, bundle: Bundle, beat: int, labels: Mapping[str, int]) -> Iterator[str]:
+def _text(core: Core, instruction: Instruction, names_at: Mapping[int, str], slot: bool) -> str:
+    """The instruction with the labels at the addresses of its targets."""
+    operation, names, guard = instruction.operation, core.register_names, instruction.guard
+    places = [_place(names, operand, place, names_at) for operand, place in zip(operation.operands, instruction.places)]
+    text = f"{operation.name} {', '.join(places)}" if places else operation.name
+    if guard is not None:
+        text += f" if {'not ' if guard.negated else ''}{names[guard.register]}"
+    return f"{text} on {core.slots[instruction.slot].name}" if slot else text
+
+
+def _bundle_lines(core: Core, bundle: Bundle, beat: int, names_at: Mapping[int, str]) -> Iterator[str]:
     stamp = f"@{beat:<3}"
     for instruction in bundle.instructions:
-        yield f"{stamp} {text_of(core, instruction, labels, slot=True)}"
+        yield f"{stamp} {_text(core, instruction, names_at, slot=True)}"
         stamp = " " * len(stamp)
 
 
@@ -121,7 +127,7 @@ def _targets(instruction: Instruction) -> Iterator[int]:
             yield place.value
 
 
-def _place(names: tuple[str, ...], operand: Operand, place: Place, labels: Mapping[str, int]) -> str:
+def _place(names: tuple[str, ...], operand: Operand, place: Place, names_at: Mapping[int, str]) -> str:
     if isinstance(place, Register):
         return names[place.number] + ("" if place.half is None else (".lo", ".hi")[place.half])
     if isinstance(place, Address):
@@ -129,7 +135,7 @@ def _place(names: tuple[str, ...], operand: Operand, place: Place, labels: Mappi
     if isinstance(place, Label):
         return place.name
     if operand.role is Role.TARGET:
-        return next((name for name, address in labels.items() if address == place.value), f"{place.value:#x}")
+        return names_at.get(place.value, f"{place.value:#x}")
     return immediate_text(place.value, operand)
 
 

@@ -6,6 +6,7 @@ allow are all encoded, and the machine complains.
 
 from __future__ import annotations
 
+from bisect import bisect_right
 from collections.abc import Callable, Mapping, Sequence
 
 import attrs
@@ -268,7 +269,7 @@ class _Encoder:
             words[-2 if bundle[-1].extended else -1] |= 1
             length = len(words) - start
             if not self.rule.straddle and length > self.rule.group:
-                draft = max(k for k, first in enumerate(self.first) if first <= index)
+                draft = bisect_right(self.first, index) - 1
                 found = f"{length} words in one bundle"
                 self._complain("bundle-too-long", draft, 0, found, f"{self.rule.group} words, a fetch group")
         self._refuse()
