@@ -33,13 +33,13 @@ class Setup:
     NumPy type. ``notes``: what was converted on the way.
     """
 
-    kernel: Kernel
+    kernel: Kernel = attrs.field(repr=lambda kernel: kernel.name)
     registers: Mapping[int, int]
-    memory: tuple[tuple[int, bytes], ...]
+    memory: tuple[tuple[int, bytes], ...] = attrs.field(repr=False)
     areas: tuple[Area, ...]
     sizes: Mapping[str, int]
     values: Mapping[str, int | np.float32]
-    arrays: Mapping[str, np.ndarray]
+    arrays: Mapping[str, np.ndarray] = attrs.field(repr=False)
     notes: tuple[Problem, ...]
 
     @property
@@ -245,7 +245,8 @@ class _Binder:
                 continue
             converted = convert(ELEMENTS[item.type], value, item.name)
             self.problems += [attrs.evolve(p, place=item.place) for p in converted.problems]
-            self.notes += [attrs.evolve(p, place=item.place) for p in converted.notes]
+            if converted.saturated:  # that a formula's floats are scaled and rounded goes without saying
+                self.notes += [attrs.evolve(p, place=item.place) for p in converted.notes]
             if converted.array is None:
                 continue
             if converted.array.shape != (self.lengths[item.name],):
@@ -289,7 +290,8 @@ class _Binder:
                 continue
             converted = convert(ELEMENTS[item.type], int(value) if isinstance(value, bool) else value, item.name)
             self.problems += [attrs.evolve(p, place=item.place) for p in converted.problems]
-            self.notes += [attrs.evolve(p, place=item.place) for p in converted.notes]
+            if converted.saturated:  # that a formula's floats are scaled and rounded goes without saying
+                self.notes += [attrs.evolve(p, place=item.place) for p in converted.notes]
             if converted.array is not None:
                 self.values[item.name] = np.float32(converted.array[()]) if item.type == "f32" else int(converted.array)
 

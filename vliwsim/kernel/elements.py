@@ -79,6 +79,7 @@ class Converted:
     array: np.ndarray | None
     problems: tuple[Problem, ...] = ()
     notes: tuple[Problem, ...] = ()
+    saturated: int = 0
 
 
 def _refused(name: str, found: str, allowed: str, remedy: str = "") -> Converted:
@@ -92,17 +93,19 @@ def convert(element: Element, value: object, label: str) -> Converted:
     """
     if isinstance(value, np.ma.MaskedArray):
         return _refused("array-type", f"{label} is a masked array", "an array without a mask", f"{label}.filled(0)")
+    if isinstance(value, (list, tuple)) and not element.floating and _too_wide(value):
+        return _out_of_range(element, list(value), label)  # NumPy would make floats of them
     try:
         array = np.asarray(value)
     except (ValueError, TypeError, OverflowError) as error:
         return _refused("array-shape", f"{label} is no array: {error}", "numbers in one dimension")
     kind = array.dtype.kind
+    if array.size == 0 and kind in "iuf":  # an empty list is one of floats to NumPy
+        return Converted(np.zeros(array.shape, element.dtype))
     if kind in "iu":
         return _from_integers(element, array, label)
     if kind == "f":
         return _from_floats(element, array, label)
-    if array.size == 0 and not isinstance(value, np.ndarray):  # an empty list has no type of its own
-        return Converted(np.zeros(array.shape, element.dtype))
     if kind == "O" and all(type(one) is int for one in array.flat):
         return _out_of_range(element, list(array.flat), label)
     found = {"b": "truth values", "c": "complex numbers", "O": "Python objects", "U": "text", "S": "bytes"}.get(
@@ -110,6 +113,12 @@ def convert(element: Element, value: object, label: str) -> Converted:
     )
     remedy = f"{label}.astype(numpy.{element.dtype})" if kind == "b" else ""
     return _refused("array-type", f"{label} holds {found}", f"numbers for {element.name}", remedy)
+
+
+def _too_wide(values: list[object] | tuple[object, ...]) -> bool:
+    """Integers only, not all of them within 64 bits."""
+    integers = [one for one in values if type(one) is int]
+    return bool(integers) and len(integers) == len(values) and not -(2**63) <= min(integers) <= max(integers) < 2**63
 
 
 def _out_of_range(element: Element, values: list[int], label: str) -> Converted:
@@ -169,7 +178,7 @@ def _from_floats(element: Element, array: np.ndarray, label: str) -> Converted:
     raw = np.clip(scaled, element.low, element.high).astype(element.dtype)
     scaling = f"floats scaled by 2**{element.fraction}, rounded to nearest even"
     found = f"{label}: {scaling}; {saturated} of {array.size} saturated"
-    return Converted(raw, notes=(problem("scaled", found, kind="note"),))
+    return Converted(raw, notes=(problem("scaled", found, kind="note"),), saturated=saturated)
 
 
 def _rounding_note(label: str, inexact: int, size: int) -> tuple[Problem, ...]:

@@ -69,7 +69,7 @@ class Search:
             yield {}
             return
         width = len(self.names)
-        reach = {1: 600, 2: 120, 3: 24}.get(width, 8)
+        reach = {1: 4200, 2: 120, 3: 24}.get(width, 8)
         seen = 0
         for total in range(reach * width + 1):
             for values in _sums(width, total, reach):
