@@ -64,7 +64,7 @@ def _float_bits(value: object) -> int:
             return from_float(float(value))
     except (ValueError, OverflowError):
         pass
-    raise BadValue(f"{str(value)[:40]!r} for f32, not a number, \"nan\", \"inf\" or bits such as \"0x7fc00000\"")
+    raise BadValue(f'{str(value)[:40]!r} for f32, not a number, "nan", "inf" or bits such as "0x7fc00000"')
 
 
 def shown(raw: int, kind: ValueType) -> object:
@@ -91,20 +91,32 @@ def check_examples(operation: Operation, place: Place | None = None) -> list[Pro
         fast = compiled if isinstance(compiled, tuple) else () if compiled is None else (compiled,)
         slow = operation.evaluate(given)
         if tuple(slow) != fast:
-            problems.append(Problem("engines-differ", f"{fast} compiled, {slow} evaluated", "one meaning", place=place, key=key))
+            problems.append(
+                Problem("engines-differ", f"{fast} compiled, {slow} evaluated", "one meaning", place=place, key=key)
+            )
         if fast != expected:
             types = operation.meaning.output_types
             gives = ", ".join(f"{name} = {shown(raw, types[name])}" for name, raw in zip(operation.outputs, fast))
             wants = ", ".join(f"{name} = {shown(raw, types[name])}" for name, raw in zip(operation.outputs, expected))
             problems.append(
-                Problem("example-fails", f"{gives} from {list(example[0])}", f"{wants}, as the example says",
-                        "correct the meaning or the example", place=place, key=key)  # fmt: skip
+                Problem(
+                    "example-fails",
+                    f"{gives} from {list(example[0])}",
+                    f"{wants}, as the example says",
+                    "correct the meaning or the example",
+                    place=place,
+                    key=key,
+                )  # fmt: skip
             )
     return problems
 
 
 def _raw_example(operation: Operation, example: object) -> tuple[list[int], tuple[int, ...]]:
-    if not isinstance(example, (list, tuple)) or len(example) != 2 or not all(isinstance(p, (list, tuple)) for p in example):
+    if (
+        not isinstance(example, (list, tuple))
+        or len(example) != 2
+        or not all(isinstance(p, (list, tuple)) for p in example)
+    ):
         raise BadValue("not a list of inputs and a list of outputs")
     given, expected = example
     if len(given) != len(operation.inputs) or len(expected) != len(operation.outputs):
@@ -113,11 +125,14 @@ def _raw_example(operation: Operation, example: object) -> tuple[list[int], tupl
     halves = {operand.name for operand in operation.operands if operand.half}
     constants = {o.name for o in operation.operands if o.role.value == "constant"}
     inputs = [
-        raw_of(value, kind, register=name != "loaded" and name not in halves) if name not in constants else _constant(value, kind)
+        raw_of(value, kind, register=name != "loaded" and name not in halves)
+        if name not in constants
+        else _constant(value, kind)
         for value, (name, kind) in zip(given, meaning.input_types.items())
     ]
     outputs = [
-        raw_of(value, kind, register=name != "stored") for value, (name, kind) in zip(expected, meaning.output_types.items())
+        raw_of(value, kind, register=name != "stored")
+        for value, (name, kind) in zip(expected, meaning.output_types.items())
     ]
     return inputs, tuple(outputs)
 

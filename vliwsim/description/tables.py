@@ -155,9 +155,13 @@ def _merged(files: Sequence[_File], problems: list[Problem]) -> tuple[dict[objec
                 other = table.setdefault(key, row)
                 if other is not row:
                     problems.append(
-                        Problem(f"{what}-taken", f"{what} {shown}, which {other.name} of {other.file.path} has",
-                                f"each {what} once in a core", place=row.place("code" if what == "code" else ""),
-                                key=row.name)  # fmt: skip
+                        Problem(
+                            f"{what}-taken",
+                            f"{what} {shown}, which {other.name} of {other.file.path} has",
+                            f"each {what} once in a core",
+                            place=row.place("code" if what == "code" else ""),
+                            key=row.name,
+                        )  # fmt: skip
                     )
     return by_name, by_code
 
@@ -175,7 +179,9 @@ def _find(name: str) -> tuple[Path, bool]:
     path = folder / f"{name}.toml"
     if not _CLASS_NAME.match(name) or not path.is_file():
         families = ", ".join(sorted(found.stem for found in folder.glob("*.toml")))
-        raise OperationError(Problem("no-such-operations", f"operations {name!r:.60}", f"{families}, or a path ending in .toml"))
+        raise OperationError(
+            Problem("no-such-operations", f"operations {name!r:.60}", f"{families}, or a path ending in .toml")
+        )
     return path, True
 
 
@@ -187,7 +193,9 @@ def _read(path: Path) -> bytes:
         reason = getattr(error, "strerror", None) or str(error)
         raise OperationError(Problem("cannot-read", f"{path}: {reason}", "a file of operations (TOML)")) from None
     if len(content) > LARGEST_FILE:
-        raise OperationError(Problem("cannot-read", f"{path}: more than {LARGEST_FILE} bytes", f"at most {LARGEST_FILE}"))
+        raise OperationError(
+            Problem("cannot-read", f"{path}: more than {LARGEST_FILE} bytes", f"at most {LARGEST_FILE}")
+        )
     return content
 
 
@@ -247,7 +255,11 @@ def _validated(file: _File) -> list[Problem]:
     problems: list[Problem] = []
     default = data.pop("class", "")
     if not isinstance(default, str) or (default and not _CLASS_NAME.match(default)):
-        problems.append(Problem("bad-value", f"class {default!r:.60}", "a word such as arithmetic", place=Place(file.path), key="class"))
+        problems.append(
+            Problem(
+                "bad-value", f"class {default!r:.60}", "a word such as arithmetic", place=Place(file.path), key="class"
+            )
+        )
         default = ""
     file.default_class = default
     spans = _spans(file.text)
@@ -290,7 +302,13 @@ def _collect(
                                     place=row.place(), key=name[:60]))  # fmt: skip
     elif own:
         problems.extend(
-            Problem("unknown-key", f"{key!r:.60} outside a table", "class, then tables", place=Place(file.path), key=key[:60])
+            Problem(
+                "unknown-key",
+                f"{key!r:.60} outside a table",
+                "class, then tables",
+                place=Place(file.path),
+                key=key[:60],
+            )
             for key in own
         )
     for key, value in table.items():

@@ -113,7 +113,11 @@ def _round(writer: Writer, node: Call, width: int | None) -> Text:
     name = writer.temporary()
     first = f"({name} := {made.bare})"
     if node.mode == "half_even":
-        return Text(f"({first} + ({name} >> {n} & 1) + {literal(half - 1)}) >> {n}" if half > 1 else f"({first} + ({name} >> {n} & 1)) >> {n}")
+        return Text(
+            f"({first} + ({name} >> {n} & 1) + {literal(half - 1)}) >> {n}"
+            if half > 1
+            else f"({first} + ({name} >> {n} & 1)) >> {n}"
+        )
     if value.interval.low >= 0:
         return Text(f"({made.bare} + {literal(half if node.mode == 'half_away' else 0)}) >> {n}")
     if node.mode == "half_away":

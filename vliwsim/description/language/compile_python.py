@@ -144,7 +144,8 @@ class Writer:
     def raw(self, node: Node, width: int) -> Text:
         """Code for the low ``width`` bits as an unsigned number."""
         if node.kind in (FLOAT, PACKED):
-            return self.value(node).settled()
+            made = self.value(node)
+            return made if width >= (node.pattern or 32) else Text(f"{made.inner} & {mask(width)}")
         special = _RAW.get(type(node))
         made = special(self, node, width) if special else None
         if made is not None:
@@ -256,7 +257,9 @@ class Writer:
                 left_width = node.right.interval.high.bit_length()
             elif node.left.interval.low >= 0:
                 right_width = node.left.interval.high.bit_length()
-        return Text(f"{self.modulo(node.left, left_width).closed} {symbol} {self.modulo(node.right, right_width).closed}")
+        return Text(
+            f"{self.modulo(node.left, left_width).closed} {symbol} {self.modulo(node.right, right_width).closed}"
+        )
 
     def sum(self, node: Binary, width: int | None) -> Text:
         sign = 1 if node.operator == "+" else -1

@@ -283,4 +283,3 @@ _VISITS: Mapping[type, Callable[..., Value]] = {
     Unary: _Evaluator.unary, Binary: _Evaluator.binary, Compare: _Evaluator.compare, Logic: _Evaluator.logic,
     Choose: _Evaluator.choose, Fit: _Evaluator.fit, Iterate: _Evaluator.iterate, Call: _Evaluator.call,
 }  # fmt: skip
-

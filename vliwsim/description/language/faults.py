@@ -13,7 +13,14 @@ class Fault(Exception):
     """A mistake at ``line`` and ``column`` (from 1) of the text it is in; ``part`` is ``does`` or ``operands``."""
 
     def __init__(
-        self, name: str, found: str, allowed: str = "", remedy: str = "", line: int = 1, column: int = 1, part: str = "does"
+        self,
+        name: str,
+        found: str,
+        allowed: str = "",
+        remedy: str = "",
+        line: int = 1,
+        column: int = 1,
+        part: str = "does",
     ) -> None:
         super().__init__(found)
         self.name, self.found, self.allowed, self.remedy = name, found, allowed, remedy

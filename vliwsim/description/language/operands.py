@@ -44,7 +44,9 @@ def parse_operands(text: str) -> tuple[Operand, ...]:
         operands.append(_operand(piece.strip(), column))
         at += len(piece) + 1
         if operands[-1].name in [operand.name for operand in operands[:-1]]:
-            raise Fault("bad-operand", f"two operands {operands[-1].name}", "each name once", column=column, part="operands")
+            raise Fault(
+                "bad-operand", f"two operands {operands[-1].name}", "each name once", column=column, part="operands"
+            )
     for role in (Role.ADDRESS, Role.TARGET):
         if sum(operand.role is role for operand in operands) > 1:
             raise Fault("bad-operand", f"two {role.value} operands", "at most one", part="operands")

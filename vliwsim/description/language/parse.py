@@ -230,9 +230,13 @@ class _Parser:
             if done and None not in done and (missing := set(range(kind.lanes)) - done):
                 faults.append(Fault("lanes-left-out", f"{name}[{min(missing)}] is not assigned", "every lane, once"))
             if operand.role in (Role.INOUT, Role.STICKY) and not done:
-                faults.append(Fault("not-assigned", f"{operand.role.value} {name} is not assigned", "an assignment to it"))
+                faults.append(
+                    Fault("not-assigned", f"{operand.role.value} {name} is not assigned", "an assignment to it")
+                )
             if operand.role in (Role.SOURCE, Role.CONSTANT) and not done and name not in self.read:
-                faults.append(Fault("not-used", f"operand {name} is neither read nor assigned", "every operand is used"))
+                faults.append(
+                    Fault("not-used", f"operand {name} is neither read nor assigned", "every operand is used")
+                )
             if operand.role is Role.ADDRESS and self.access is None:
                 faults.append(Fault("not-used", f"address {name} without an access", f"one mem[{name}, type]"))
             if operand.role is Role.TARGET and "taken" not in self.assigned:
@@ -244,7 +248,9 @@ class _Parser:
     def settled(self) -> tuple[Operand, ...]:
         """The operands with their final roles: a plain one that is assigned is a RESULT."""
         return tuple(
-            attrs.evolve(operand, role=Role.RESULT) if operand.role is Role.SOURCE and name in self.assigned else operand
+            attrs.evolve(operand, role=Role.RESULT)
+            if operand.role is Role.SOURCE and name in self.assigned
+            else operand
             for name, operand in self.operands.items()
         )
 
@@ -281,7 +287,9 @@ class _Parser:
                 return _Target(name, [self.index(place.slice)])
             count = self.types[name].lanes if name in self.types else self.lanes_in(value, place)
             return _Target(name, list(range(count)), each=True)
-        raise _fault(place, "bad-statement", f"assignment to {_said(place)}", "a name, name[k], name.re, mem[address, type]")
+        raise _fault(
+            place, "bad-statement", f"assignment to {_said(place)}", "a name, name[k], name.re, mem[address, type]"
+        )
 
     def output_type(self, target: _Target, place: ast.expr) -> ValueType | None:
         """The type of an output, None for a local; refuses what cannot be assigned."""
@@ -304,16 +312,22 @@ class _Parser:
                 self.lane_counts[name] = max(lanes or 0, target.lanes[0] + 1)
             return None
         if operand.role in (Role.ADDRESS, Role.TARGET, Role.CONSTANT) or operand.half:
-            raise _fault(place, "bad-statement", f"assignment to {operand.role.value} operand {name}", "a result operand")
+            raise _fault(
+                place, "bad-statement", f"assignment to {operand.role.value} operand {name}", "a result operand"
+            )
         if operand.role is Role.SOURCE and name in self.read:
-            raise _fault(place, "bad-statement", f"{name} is read before it is assigned", f"{name}:inout {operand.type}")
+            raise _fault(
+                place, "bad-statement", f"{name} is read before it is assigned", f"{name}:inout {operand.type}"
+            )
         kind = self.types[name]
         if target.lanes is not None and (not kind.packed or max(target.lanes) >= kind.lanes):
             raise _fault(place, "no-such-lane", _said(place), f"{name} has {kind.lanes} lane{'s' * kind.packed}")
         done = self.assigned.setdefault(name, set())
         new: set[int | None] = {None} if target.lanes is None else set(target.lanes)
         if done & new or (done and None in done | new):
-            raise _fault(place, "assigned-twice", f"{_said(place)} again", "every result once; use a local name between")
+            raise _fault(
+                place, "assigned-twice", f"{_said(place)} again", "every result once; use a local name between"
+            )
         return kind
 
     def assign(self, name: str, lane: int | None, kind: ValueType | None, value: Node, place: ast.expr) -> Assign:
@@ -466,7 +480,9 @@ class _Parser:
             raise _fault(node, "unknown-name", f"{name} before it is assigned as a whole", "a local name")
         kind = self.types[name]
         if lane is not None and (not kind.packed or not 0 <= lane < kind.lanes):
-            raise _fault(node, "no-such-lane", f"lane {lane} of {name}:{kind.name}", f"{kind.lanes} lane{'s' * kind.packed}")
+            raise _fault(
+                node, "no-such-lane", f"lane {lane} of {name}:{kind.name}", f"{kind.lanes} lane{'s' * kind.packed}"
+            )
         self.read.add(name)
         return Input(name, kind, lane)
 
@@ -573,7 +589,12 @@ class _Parser:
         how = name.removeprefix("u")
         if len(node.args) == 2:
             value = node.args[1]
-            if isinstance(value, ast.Name) and name in ("wrap", "sat") and value.id in TYPES and not TYPES[value.id].packed:
+            if (
+                isinstance(value, ast.Name)
+                and name in ("wrap", "sat")
+                and value.id in TYPES
+                and not TYPES[value.id].packed
+            ):
                 kind = TYPES[value.id]
                 return Fit(how, kind.bits, kind.signed, self.expression(node.args[0]))
             bits = self.literal(value, 1, LONGEST, f"{name}(x, bits)")

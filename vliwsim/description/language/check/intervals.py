@@ -109,7 +109,9 @@ class _Checker:
 
     def float(self, node: Node, where: str) -> None:
         if node.kind != FLOAT:
-            raise _fault(node, "wrong-type", f"{_article(node)} as {where}", "a float", "int_to_float(x), as_float(bits)")
+            raise _fault(
+                node, "wrong-type", f"{_article(node)} as {where}", "a float", "int_to_float(x), as_float(bits)"
+            )
 
     def truth(self, node: Node, where: str) -> None:
         if node.kind != TRUTH and not (isinstance(node, Number) and node.value in (0, 1)):
@@ -117,7 +119,9 @@ class _Checker:
 
     def condition(self, node: Node, where: str) -> None:
         if node.kind not in (INTEGER, TRUTH):
-            raise _fault(node, "wrong-type", f"{_article(node)} as {where}", "a comparison, or an integer (true if not 0)")
+            raise _fault(
+                node, "wrong-type", f"{_article(node)} as {where}", "a comparison, or an integer (true if not 0)"
+            )
 
     def bits(self, node: Node, where: str) -> int:
         """The width of a node that must be a bit pattern."""
@@ -133,7 +137,9 @@ class _Checker:
     def visit(self, node: Node, known: Known) -> None:
         _VISITS[type(node)](self, node, known)
         if node.kind in (INTEGER, TRUTH):
-            if not node.interval.within(_LOWEST, _HIGHEST) or (node.interval.low < 0 and node.interval.high > -_LOWEST - 1):
+            if not node.interval.within(_LOWEST, _HIGHEST) or (
+                node.interval.low < 0 and node.interval.high > -_LOWEST - 1
+            ):
                 raise _fault(node, "too-big", f"an intermediate from {_power(node.interval)}", f"{LONGEST} bits")
 
     def number(self, node: Number, known: Known) -> None:
@@ -210,7 +216,9 @@ class _Checker:
             side = getattr(node, name)
             if isinstance(side, Number) and getattr(node, other).kind == FLOAT:
                 if abs(side.value) > 1 << 24:
-                    raise _fault(side, "wrong-type", f"{side.value} beside a float", "at most 2**24, or int_to_float(x)")
+                    raise _fault(
+                        side, "wrong-type", f"{side.value} beside a float", "at most 2**24, or int_to_float(x)"
+                    )
                 from vliwsim.description.language.floats import from_int
 
                 real = Real(from_int(side.value), line=side.line, column=side.column)
@@ -285,7 +293,9 @@ class _Checker:
         if inside.within(node.low, node.high):
             node.interval = inside
         elif node.how == "sat":
-            node.interval = Interval(min(max(inside.low, node.low), node.high), max(min(inside.high, node.high), node.low))
+            node.interval = Interval(
+                min(max(inside.low, node.low), node.high), max(min(inside.high, node.high), node.low)
+            )
         else:
             node.interval = Interval(node.low, node.high)
 
@@ -390,7 +400,9 @@ class _Checker:
         half = (1 << high) >> 1
         inside = value.interval
         if not Interval(inside.low - half, inside.high + half).within(_LOWEST, -_LOWEST - 1):
-            raise _fault(node, "too-big", f"rounding of {_power(inside)} by {high} bits", f"{LONGEST} bits with the half added")
+            raise _fault(
+                node, "too-big", f"rounding of {_power(inside)} by {high} bits", f"{LONGEST} bits with the half added"
+            )
         node.interval = ranges.rounded(inside, count.interval)
 
     def call_floats(self, node: Call) -> None:
@@ -445,7 +457,9 @@ def _leaves(node: Node) -> list[Node]:
 def _made_of_bits(node: Node) -> bool:
     if isinstance(node, Local):
         return node.pattern == 32
-    return isinstance(node, (Number, Fit)) or (isinstance(node, Call) and node.function in ("bits", "concat", "unsigned"))
+    return isinstance(node, (Number, Fit)) or (
+        isinstance(node, Call) and node.function in ("bits", "concat", "unsigned")
+    )
 
 
 def _lanes(node: Node) -> int | None:
