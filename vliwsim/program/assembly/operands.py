@@ -19,6 +19,7 @@ MOST_RING = 1 << 31
 
 _HALVES = {".lo": 0, ".hi": 1}
 _INTEGER = re.compile(r"-?(?:\d+|0[xX][0-9a-fA-F]+|0[bB][01]+)\Z")
+_BITS = re.compile(r"0[xX][0-9a-fA-F]+\Z|0[bB][01]+\Z")
 _COMPUTED = re.compile(r"([A-Za-z_]\w*)\{(.*)\}\Z")
 _WORD = re.compile(r"[A-Za-z_][\w.]*\Z")
 _THEN = re.compile(r"(?<!\w)then(?!\w)")
@@ -238,6 +239,13 @@ class OperandReader:
         return Immediate(value & mask)
 
     def _float(self, piece: Piece) -> Immediate | None:
+        """A number as binary32; hexadecimal and binary literals are the bits themselves."""
+        if _BITS.match(piece.text):
+            bits = int(piece.text, 0)
+            if bits < 1 << 32:
+                return Immediate(bits)
+            self.complaints.add("immediate-range", piece.where, f"{piece.text} as bits", "32 bits")
+            return None
         value = self.scope.value(piece)
         if value is None:
             return None
@@ -264,7 +272,7 @@ class OperandReader:
             moved = after.part(0, in_ring.start()) if in_ring else after
             return self._finish(piece, before, Mode.AFTER, moved, after.part(in_ring.end()) if in_ring else None)
         match = _SUM.match(inner.text)
-        if not match:
+        if not match or _RING.search(inner.text):
             self._bad_address(piece)
             return None
         step = inner.part(match.start(2), match.end(2)) if match[2] else None

@@ -98,9 +98,11 @@ class _Maker:
 
     def stamp(self, piece: Piece) -> None:
         text = piece.text
-        value = int(text) if text.isdecimal() and len(text) < 9 else self.reader.integer(piece)
         self.has_stamp = True
         self.beat = None
+        if not text:
+            return
+        value = int(text) if text.isdecimal() and len(text) < 9 else self.reader.integer(piece)
         if value is None:
             return
         if not 0 <= value < MOST_BEATS:

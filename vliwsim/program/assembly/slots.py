@@ -94,12 +94,11 @@ class SlotChooser:
             if busy:
                 fits = sorted((cost + BUSY_COST * (slot in busy), slot) for cost, slot in fits)
             options[k] = fits
-        greedy = _greedy(options)
-        if greedy is not None and self._carried(bundle, chosen, greedy):
-            return _merged(chosen, greedy)
-        matched = self._matching(options)
-        if len(matched) < len(free):
-            raise NoSlots(_crowds(options, matched))
+        matched = _greedy(options)
+        if matched is None:
+            matched = self._matching(options)
+            if len(matched) < len(free):
+                raise NoSlots(_crowds(options, matched))
         if not self._carried(bundle, chosen, matched):
             matched = self._search(bundle, chosen, options) or matched
         return _merged(chosen, matched)

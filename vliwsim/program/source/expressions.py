@@ -13,6 +13,7 @@ from __future__ import annotations
 import ast
 import math
 import operator
+import re
 from collections.abc import Callable, Mapping
 from typing import Any
 
@@ -345,8 +346,10 @@ def _parse(text: str) -> tuple[dict[str, ast.AST], dict[str, ast.AST], Evaluate]
     try:
         tree = ast.parse(text.strip(), mode="eval")
     except SyntaxError as bad:
-        refusal = Refused("bad-expression", f"{text.strip()} is not an expression", _ALLOWED)
-        refusal.column = lead + max(0, min((bad.offset or 1) - 1, len(text) - 1)) if bad.lineno == 1 else lead
+        remedy = "==" if re.search(r"(?<![=<>!])=(?!=)", text) else ""
+        refusal = Refused("bad-expression", f"{text.strip()} is not an expression", _ALLOWED, remedy)
+        offset = bad.offset or len(text.strip())  # 0: at the end
+        refusal.column = lead + max(0, min(offset - 1, len(text) - 1))
         raise refusal from None
     except (RecursionError, MemoryError, ValueError):
         raise Refused("too-deep", f"more than {DEEPEST} levels of nesting") from None

@@ -107,7 +107,7 @@ class _Reader:
             add("no-register", where, f"{name} without a register", wanted, wanted)
         elif array and "in" in clauses:
             add("bad-clause", where, f"array {name} in a register", "at REGISTER, which holds its address", "at")
-        elif not array and "at" in clauses:
+        elif not array and "at" in clauses and kind not in ("table", "scratch"):
             add(
                 "bad-clause",
                 where,

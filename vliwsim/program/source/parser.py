@@ -108,7 +108,7 @@ class _Parser:
             remedy = "start: above this line"
             self.complaints.add("no-label", (rest.line, rest.column), "code before the first label", "a label", remedy)
             self.in_body = True
-            self.target.append(Label(Piece("start", rest.line, rest.column)))
+            self.target.append(Label(Piece("", rest.line, rest.column)))
         if rest.text[0] == "@":
             rest = self.stamp(rest)
             if not rest.text:
@@ -124,7 +124,9 @@ class _Parser:
         """Take the stamp off the front of ``rest``."""
         text = rest.text
         end = match.end() if (match := _QUICK_STAMP.match(text)) else expression_end(text, 1)
-        if end == 1:
+        if end == 1 or text[1].isspace():
+            end = 1
+            self.target.append(Stamp(Piece("", rest.line, rest.column)))
             self.complaints.add("bad-stamp", (rest.line, rest.column), "@ without a beat", "@ and an expression", "@0")
         else:
             self.target.append(Stamp(rest.part(1, end)))
@@ -184,7 +186,10 @@ class _Parser:
     def call(self, piece: Piece, start: int) -> None:
         """An operation: mnemonic, operands between commas, then ``if`` and ``on`` in any order."""
         text = piece.text
-        commas, tails = cut_call(text[start:])
+        try:
+            commas, tails = cut_call(text[start:])
+        except Unbalanced as bracket:
+            raise Unbalanced(bracket.bracket, bracket.column + start) from None
         end = start + tails[0][1] if tails else len(text)
         mnemonic = piece.part(0, start)
         operands: list[Piece] = []

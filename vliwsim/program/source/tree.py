@@ -16,7 +16,7 @@ class Label(NamedTuple):
 
 
 class Stamp(NamedTuple):
-    """``@expression``: the beat of what follows, counted from the last label."""
+    """``@expression``: the beat of what follows, counted from the last label; empty for one that was refused."""
 
     expression: Piece
 
