@@ -9,6 +9,8 @@ from __future__ import annotations
 import itertools
 import re
 from collections.abc import Iterable, Mapping, Sequence
+from contextlib import suppress
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -43,7 +45,8 @@ from vliwsim.description.coreparts import (
     unknown_key,
 )
 from vliwsim.description.places import isa_folder
-from vliwsim.description.toml_places import KeyPath, listed, nearest, shown
+from vliwsim.description.toml_places import KeyPath, listed, nearest, read_toml, shown
+from vliwsim.problems import OperationError
 
 PARTS = ("cluster", "slot", "latency", "link", "guards", "branch", "issue", "memory", "words", "interrupt")
 KEYS = ("name", "summary", "base", "remove", "operations", "zero_registers", *PARTS)
@@ -61,8 +64,7 @@ Table = Mapping[str, object]
 
 def shipped_operations() -> list[str]:
     """Names of the shipped operation families."""
-    planned = {"integer", "fixed", "packed", "bits", "memory", "control", "float"}  # until all tables are there
-    return sorted({path.stem for path in (isa_folder() / "operations").glob("*.toml")} | planned)
+    return sorted(path.stem for path in (isa_folder() / "operations").glob("*.toml"))
 
 
 def build_core(plain: Table) -> tuple[Core, list[Finding]]:
@@ -81,9 +83,8 @@ class _Builder:
         self.findings: list[Finding] = []
 
     def build(self) -> tuple[Core, list[Finding]]:
-        for key in self.plain:
-            if key not in KEYS:
-                self.findings.append(unknown_key((key,), KEYS))
+        unknown = [key for key in self.plain if key not in KEYS]
+        self.findings += [unknown_key((key,), KEYS) for key in unknown[:MOST_FINDINGS]]
         clusters = self.clusters()
         operations = self.value("operations", several(_operations_entry, "operation files", 1), ())
         slots = self.slots(clusters)
@@ -337,21 +338,33 @@ class _OperationNames:
 
     def all(self) -> frozenset[str]:
         if self.names is None:
-            from vliwsim.description.toml_places import read_toml
-            from vliwsim.problems import OperationError
-
-            found: set[str] = set()
-            for entry in self.entries:
-                path = Path(entry) if entry.endswith(".toml") else isa_folder() / "operations" / f"{entry}.toml"
-                try:
-                    _collect(read_toml(path, OperationError).data, "", found)
-                except OperationError:  # a bad table is reported where tables are read
-                    continue
-            self.names = frozenset(found)
+            self.names = frozenset().union(*(_names_in(_operations_path(entry)) for entry in self.entries))
         return self.names
 
     def __contains__(self, name: str) -> bool:
         return name in self.all()
+
+
+def _operations_path(entry: str) -> Path:
+    return Path(entry) if entry.endswith(".toml") else isa_folder() / "operations" / f"{entry}.toml"
+
+
+def _names_in(path: Path) -> frozenset[str]:
+    """Names of the operations in a file; of a bad one none, for it is reported where tables are read."""
+    try:
+        status = path.stat()
+    except OSError:
+        return frozenset()
+    return _names_as_of(path, status.st_mtime_ns, status.st_size)
+
+
+@lru_cache(maxsize=64)
+def _names_as_of(path: Path, changed: int, size: int) -> frozenset[str]:
+    """The same, kept as long as the file does not change: a sweep evolves one core many times."""
+    found: set[str] = set()
+    with suppress(OperationError):
+        _collect(read_toml(path, OperationError).data, "", found)
+    return frozenset(found)
 
 
 def _strings(value: object) -> list[tuple[int, str]]:

@@ -7,7 +7,7 @@ Every problem is reported at the layer that said the wrong thing.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
@@ -80,8 +80,19 @@ def _build(layers: list[Layer], changes: Changes, problems: list[Problem]) -> Co
         if key_text(finding.path) not in said:
             problems.append(owner.problem(finding))
     if problems:
-        raise CoreError(problems)
+        raise CoreError(sorted(problems, key=_reading_order(layers)))
     return core
+
+
+def _reading_order(layers: list[Layer]) -> Callable[[Problem], tuple[int, int, int]]:
+    """Problems by file, the lowest base first, then by line; those of changes, which have no place, last."""
+    files = {layer.source.file: k for k, layer in enumerate(layers) if layer.source}
+
+    def key(problem: Problem) -> tuple[int, int, int]:
+        place = problem.place
+        return (files[place.file], place.line, place.column) if place else (len(layers), 0, 0)
+
+    return key
 
 
 def _plain(core: Core) -> Plain:

@@ -363,8 +363,8 @@ def _put(layer: Plain, path: KeyPath, value: object) -> None:
     *above, last = _address(path)
     for part in above:
         inner = here.setdefault(str(part), {})
-        if not isinstance(inner, dict):
-            inner = here[str(part)] = {}
+        if not isinstance(inner, dict):  # an earlier change made it no table: that mistake stays, to be reported
+            return
         here = inner
     if isinstance(value, dict) and isinstance(here.get(str(last)), dict):
         _merge(here[str(last)], value)

@@ -46,7 +46,7 @@ def key_text(path: Iterable[str | int]) -> str:
         if isinstance(part, int):
             out += f"[{part}]"
         else:
-            out += ("." if out else "") + (part if _PLAIN_KEY.fullmatch(part) else shown(part))
+            out += ("." if out else "") + (part if _PLAIN_KEY.fullmatch(part) and len(part) < 60 else shown(part))
     return out
 
 
