@@ -141,6 +141,7 @@ class Rule:
     limit: int = 1000
     stop: str | None = None  # halt, or hazard where there is one
     warnings: tuple[tuple[int, int, str], ...] = ()  # beat, bundle, register
+    reading: str = ""  # number of the reading of the text (see the model) on which the expectation rests
 
 
 BENCH = PlainCore(
@@ -389,7 +390,7 @@ HOLDS = [
         "held-guard-is-judged-first",
         "waits as a whole until none of its guards is pending; in that beat they are judged (`undefined-used`)",
         "g.mul mul g8, g2, g3 ; g.mem lw g4, [g5]",  # g8 lands undefined in beat 2, g4 in beat 3
-        "g.sum add g1, g4, 0 if g8",  # beat 1 held; judged in beat 2 though g4 is still out
+        "g.sum add g1, g4, 0 if g8 ; g.mem li g7, 1",  # beat 1 held; judged in beat 2 though g4 is still out
         "g.flow halt",
         core=LOCKED,
         given={"g1": 9, "g3": 7, "g5": 0, "g8": 1},
@@ -452,7 +453,7 @@ HOLDS = [
         "a bundle whose own results exceed a cluster's write ports in one beat does not wait for ports, it meets "
         "`write-ports` when they land",
         "g.mul mul g1, g2, g3",  # lands 2
-        "g.sum add g4, g2, g3 ; g.mem add g5, g2, g3",  # beat 1, would land 2: two for one port
+        "g.sum add g4, g2, g3 ; g.mem add g5, g2, g3 ; h.sum li h1, 1",  # beat 1, would land 2: two for one port
         "g.flow halt",
         core=replace(ONE_PORT, interlocked=True),
         given={"g2": 2, "g3": 3},
@@ -461,17 +462,56 @@ HOLDS = [
         hazard=("write-ports", 2, 2, 2),
     ),
     rule(
+        "count-that-does-not-branch-takes-no-port",
+        "the register of a `count` that branches, land with class `update` and take a write port",
+        "g.mul mul g1, g2, g3",  # lands 2
+        "g.flow count g9, on",  # beat 1: g9 is 0, nothing would land
+        "idle 1",
+        "on: g.flow halt",  # beat 3
+        core=replace(ONE_PORT, interlocked=True),
+        given={"g2": 2, "g3": 3, "g9": 0},
+        cycles=4,
+        bundles=4,
+        after={"g1": 6},
+    ),
+    rule(
+        "count-that-branches-waits-for-a-port",
+        "the register of a `count` that branches, land with class `update` and take a write port",
+        "g.mul mul g1, g2, g3",  # lands 2
+        "g.flow count g9, on",  # beat 1: would land 2; issues in beat 2
+        "idle 1",
+        "on: g.flow halt",  # beat 4
+        core=replace(ONE_PORT, interlocked=True),
+        given={"g2": 2, "g3": 3, "g9": 1},
+        cycles=5,
+        bundles=4,
+        stalls={"hold": 1},
+        after={"g1": 6, "g9": 0},
+    ),
+    rule(
+        "undefined-count-does-not-wait-for-ports",
+        "(an undefined `count` is taken not to branch)",
+        "g.mul mul g1, g2, g3",  # lands 2
+        "g.flow count g9, on",  # issues in beat 1, and is an error there
+        "on: g.flow halt",
+        core=replace(ONE_PORT, interlocked=True),
+        given={"g1": 9, "g2": 2, "g3": 3},
+        cycles=1,
+        bundles=1,
+        hazard=("undefined-used", 1, 1, 1),
+    ),
+    rule(
         "hold-for-a-unit",
         "its units are free … Busy b blocks that slot for beats t … t + b − 1, guard on or off",
         "g.mul div g1, g2, g3 if g8",  # off; blocks beats 0, 1, 2
-        "g.mul mul g4, g2, g3",  # beats 1, 2 held; issues in beat 3, lands 5
+        "g.mul mul g4, g2, g3 ; g.sum li g5, 1",  # beats 1, 2 held; issues in beat 3, lands 5
         "g.flow halt",  # beat 4
         core=LOCKED,
         given={"g2": 6, "g3": 7, "g8": 0},
         cycles=5,
         bundles=3,
         stalls={"hold": 2},
-        after={"g4": 42},
+        after={"g4": 42, "g5": 1},
     ),
     rule(
         "waiting-keeps-the-delay-slots",
@@ -698,7 +738,7 @@ READING = [
         "fresh-waits-on-an-interlocked-core",
         "interlocked waits one beat as the last wait of step 2; cause `fresh` in both",
         "h.sum add h1, h2, h3 ; g.mem lw g2, [g3]",  # h1 lands 1, g2 lands 3
-        "g.sum add g1, h1, 0",  # beat 1 waits, issues in beat 2
+        "g.sum add g1, h1, 0 ; g.mul add g6, g3, 1",  # beat 1 waits, issues in beat 2
         "g.mem add g5, g2, 0",  # beat 3: g2 has just landed, no hold: the beat advanced
         "g.flow halt",  # beat 4
         core=with_link(LOCKED, fresh="stall"),
@@ -707,7 +747,49 @@ READING = [
         cycles=5,
         bundles=4,
         stalls={"fresh": 1},
-        after={"h1": 3, "g1": 3, "g2": 77, "g5": 77},
+        after={"h1": 3, "g1": 3, "g2": 77, "g5": 77, "g6": 1},
+    ),
+    rule(
+        "fresh-wait-then-ports",
+        "its results fit the ports beside those in flight … The last wait, once a bundle, is that for a fresh operand.",
+        "h.sum add h1, h2, h3 ; g.mem lw g2, [g3]",  # h1 lands 1, g2 lands 3
+        "g.sum add g1, h1, 0",  # beat 1: would land 2, but fresh; beat 2: would land 3 beside g2; issues in beat 3
+        "g.flow halt",  # beat 4
+        core=with_link(replace(ONE_PORT, interlocked=True), fresh="stall"),
+        given={"h1": 9, "h2": 1, "h3": 2, "g3": 0},
+        regions=(words(0, 77),),
+        reading="R4",
+        cycles=5,
+        bundles=3,
+        stalls={"fresh": 1, "hold": 1},
+        after={"h1": 3, "g1": 3, "g2": 77},
+    ),
+    rule(
+        "one-fresh-freeze-a-bundle",
+        "`stall`: exposed freezes one cycle and goes on with the values read",
+        "h.sum add h1, h3, 1 ; h.mem add h2, h3, 2",
+        "g.sum add g1, h1, 0 ; g.mul add g2, h2, 0",  # two fresh operands
+        "g.flow halt",
+        core=with_link(BENCH, fresh="stall"),
+        given={"h3": 4},
+        reading="R5",
+        cycles=4,
+        bundles=3,
+        stalls={"fresh": 1},
+        after={"h1": 5, "h2": 6, "g1": 5, "g2": 6},
+    ),
+    rule(
+        "no-freeze-of-a-bundle-that-does-not-issue",
+        "The bundle that meets it in steps 2 to 4 has no effect and is not counted.",
+        "h.sum add h1, h3, 1",
+        "g.sum add g1, h1, 0 ; g.mem lw g2, [g3]",  # fresh in step 3, an undefined address in step 4
+        core=with_link(BENCH, fresh="stall"),
+        given={"h3": 4},
+        reading="R9",
+        cycles=1,
+        bundles=1,
+        after={"h1": 5},
+        hazard=("undefined-used", 1, 1, 1),
     ),
 ]
 
@@ -866,15 +948,15 @@ MEMORY = [
     rule(
         "ring",
         "`[r then +step in ring N]` for a power-of-two ring aligned to its size",
-        "g.mem lw g1, [g2 then +4 in ring 8]",  # address 12; then 8 + (12 + 4) mod 8 = 8
-        "g.mem lw g3, [g2 then +-4 in ring 8]",  # address 8; then 8 + (8 − 4) mod 8 = 12; lands 4
+        "g.mem lw g1, [g2 then +12 in ring 16]",  # address 24; then 16 + (24 + 12) mod 16 = 20
+        "g.mem lw g3, [g2 then +-8 in ring 16]",  # address 20; then 16 + (20 − 8) mod 16 = 28; lands 4
         "g.flow halt",
-        given={"g2": 12},
-        regions=(words(8, 72, 73),),
+        given={"g2": 24},
+        regions=(words(16, 72, 73, 74, 75),),
         cycles=4,
         bundles=3,
         drain=1,
-        after={"g1": 73, "g2": 12, "g3": 72},
+        after={"g1": 74, "g2": 28, "g3": 73},
     ),
     rule(
         "addresses-wrap",
@@ -998,12 +1080,27 @@ BRANCHES = [
         hazard=("ran-off-the-end", 1, 1, 1),
     ),
     rule(
+        "hazard-of-step-five-keeps-the-effects",
+        "The bundle that meets it in steps 2 to 4 has no effect and is not counted.",
+        "g.mem sw g1, [g2] ; h.mem lw h1, [h2]",  # bank 0 twice; nothing behind it
+        given={"g1": 5, "g2": 0, "h1": 9, "h2": 8},
+        regions=(words(0, 70, 71, 72),),
+        reading="R10",
+        cycles=2,
+        bundles=1,
+        stalls={"bank": 1},
+        stored={0: 5, 1: 0, 2: 0, 3: 0},
+        hazard=("ran-off-the-end", 0, 0, 0),
+    ),
+    rule(
         "ran-off-through-a-register",
         "nothing there, `ran-off-the-end`",
         "g.flow jump g1",
         "idle 3",  # judged in its first beat: bundle 2 would come from address 4
         "g.flow halt",
+        core=replace(BENCH, taken_penalty=2),  # not paid: there is no redirect
         given={"g1": 4},
+        reading="R10",
         cycles=2,
         bundles=2,
         hazard=("ran-off-the-end", 1, 1, 1),
@@ -1157,6 +1254,60 @@ UNDEFINEDS = [
         cycles=2,
         bundles=2,
         after={"g1": 2, "g4": 0x7FFFFFFF, "g5": 2, "g7": 5},
+    ),
+    rule(
+        "sticky-on-an-undefined-register",
+        "Sticky results OR into the register when they land",
+        "g.sum add.sat.flag g1, g7, g2, g2 ; g.mul add.sat.flag g3, g6, g5, g5 ; g.flow halt",
+        given={"g2": 1, "g6": 1, "g7": Value(0, 0b0010), "g3": 9},  # g5 is undefined
+        reading="R2",
+        cycles=1,
+        bundles=1,
+        after={"g1": 2, "g3": UNDEFINED, "g6": UNDEFINED, "g7": UNDEFINED},
+    ),
+    rule(
+        "sticky-beside-a-plain-result",
+        "Sticky results OR into the register when they land, …, never count for lands-twice",
+        "g.sum add.sat.flag g1, g7, g2, g3 ; g.mul li g7, 8 ; g.flow halt",
+        given={"g2": 0x7FFFFFFF, "g3": 1, "g7": 4},
+        reading="R1",
+        cycles=1,
+        bundles=1,
+        after={"g1": 0x7FFFFFFF, "g7": 9},
+    ),
+    rule(
+        "pair-carries-and-wraps",
+        "Pairs are even:odd, the least significant word in even",
+        "g.sum add.pair g6, g2, g4 ; h.mem sd h2, [h1] ; g.flow halt",
+        core=BENCH,
+        given={"g2": 0x80000001, "g3": 1, "g4": 0x80000002, "g5": 0xFFFFFFFF, "h1": 0, "h2": 7, "h3": 8},
+        regions=(words(0, None, None),),
+        cycles=1,
+        bundles=1,
+        after={"g6": 3, "g7": 1},  # 1:80000001 + ffffffff:80000002 = 1:00000003 in 64 bits
+        stored={0: 7, 1: 0, 2: 0, 3: 0, 4: 8, 5: 0, 6: 0, 7: 0},
+    ),
+    rule(
+        "undefined-step-of-an-update-behind",
+        "It is an error … at … an address",
+        "g.mem lw g1, [g2 then +g3] ; g.flow halt",  # the address is g2's; what g2 becomes is undefined
+        given={"g2": 0},
+        regions=(words(0, 77),),
+        reading="R6",
+        cycles=3,
+        bundles=1,
+        drain=2,
+        after={"g1": 77, "g2": UNDEFINED},
+    ),
+    rule(
+        "undefined-comparison",
+        "its taken bit is fixed at issue",
+        "start: g.flow beq g1, g2, start",
+        given={"g1": 0},
+        reading="R7",
+        cycles=0,
+        bundles=0,
+        hazard=("undefined-used", 0, 0, 0),
     ),
     rule(
         "sticky-takes-a-port",
