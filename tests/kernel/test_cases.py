@@ -78,7 +78,7 @@ def test_cases_are_the_same_every_time() -> None:
 def test_random_data_is_pinned() -> None:
     """A generator that gave other numbers on another day would make yesterday's findings unrepeatable."""
     first = next(generated_cases(header("given x : i16[n] at g1\nneeds n == 5")))
-    assert list(first.inputs["x"]) == [-3431, -19322, 22034, 28318, 32617]
+    assert list(first.inputs["x"]) == [-3431, -19322, 22034, -27480, 32617]
 
 
 def test_large_arrays_shrink_to_what_memory_holds() -> None:

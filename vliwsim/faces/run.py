@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import contextlib
-import json as json_format
 import sys
 from collections.abc import Callable, Iterator
 from typing import TYPE_CHECKING, Any
@@ -47,6 +46,7 @@ STOPPED = 130
 @click.option("--save", multiple=True, metavar="NAME=FILE.npy", help="Write an output to a new file.")
 @click.option("--replace", is_flag=True, help="Let --save replace files.")
 @click.option("--trace", is_flag=True, help="Print a line a beat: what issued, what landed.")
+@click.option("--notes", is_flag=True, help="Show every note, not only the first of each kind.")
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of the report.")
 def run(kernel: str, as_json: bool, **options: Any) -> int:
     """Run KERNEL, compare its outputs with reference.py beside it, and account for every cycle.
@@ -68,7 +68,9 @@ def run(kernel: str, as_json: bool, **options: Any) -> int:
 
 
 def _print_json(data: object) -> None:
-    click.echo(json_format.dumps(data, indent=2, ensure_ascii=False, allow_nan=False))
+    import json
+
+    click.echo(json.dumps(data, indent=2, ensure_ascii=False, allow_nan=False))
 
 
 class _Job:
@@ -102,7 +104,7 @@ class _Job:
         from vliwsim.kernel.cases import case_with
 
         run = self._run(kernel, reference, case_with(kernel, reference, options["case"], given))
-        self._say(lambda: _report(run))
+        self._say(lambda: self._report(run))
         if run.reason == "halt" and targets:
             save_outputs(targets, dict(run.outputs), options["replace"])
         elif targets:
@@ -112,6 +114,11 @@ class _Job:
     def _say(self, text: Callable[[], str]) -> None:
         if not self.as_json:
             click.echo(text())
+
+    def _report(self, run: KernelRun) -> str:
+        from vliwsim.faces.run_report import report
+
+        return report(run, self.options["notes"])
 
     def _run(self, kernel: Kernel, reference: Reference | None, case: Case) -> KernelRun:
         from vliwsim.faces.progress import Watcher
@@ -163,15 +170,9 @@ class _Job:
                 break
         bad = [run for run in runs if not run.ok]
         for run in bad:
-            self._say(lambda run=run: f"\n{run.case}: {_report(run)}")  # type: ignore[misc]
+            self._say(lambda run=run: f"\n{run.case}: {self._report(run)}")  # type: ignore[misc]
         self._say(lambda: f"\n{len(runs) - len(bad)} of {len(runs)} cases right, legal and within budget.")
         return {"kernel": kernel.name, "core": kernel.core.name, "cases": [run.as_json() for run in runs]}
-
-
-def _report(run: KernelRun) -> str:
-    from vliwsim.faces.run_report import report
-
-    return report(run)
 
 
 def _described(cases: list[Case]) -> Iterator[str]:

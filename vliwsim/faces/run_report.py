@@ -7,14 +7,14 @@ from collections.abc import Iterator
 from vliwsim.kernel.account import Account, SectionCost
 from vliwsim.kernel.compare import Difference
 from vliwsim.kernel.runner import KernelRun
+from vliwsim.problems import Problem
 
 
-def report(run: KernelRun) -> str:
-    """The whole report, no trailing newline."""
+def report(run: KernelRun, all_notes: bool = False) -> str:
+    """The whole report, no trailing newline. Of several notes of one name the first is shown, unless ``all_notes``."""
     parts = [[run.verdict], list(_differences(run)), list(_account(run.account, run.reason))]
     parts += [str(p).splitlines() for p in run.problems]
-    notes = [f"  note     {_note(p.found, str(p.place) if p.place else '')}" for p in run.notes]
-    parts.append(notes)
+    parts.append(list(_notes(run.notes, all_notes)))
     return "\n\n".join("\n".join(lines) for lines in parts if lines)
 
 
@@ -23,8 +23,16 @@ def line(run: KernelRun) -> str:
     return f"  {run.case:<16} {run.cycles:>9}  {run.verdict}"
 
 
-def _note(found: str, place: str) -> str:
-    return f"{found} ({place})" if place else found
+def _notes(notes: tuple[Problem, ...], all_notes: bool) -> Iterator[str]:
+    groups: dict[str, list[Problem]] = {}
+    for note in notes:
+        groups.setdefault(note.name, []).append(note)
+    for group in groups.values():
+        each = all_notes or group[0].place is None
+        for note in group if each else group[:1]:
+            place = f" ({note.place})" if note.place else ""
+            more = f", and {len(group) - 1} more such (--notes)" if not each and len(group) > 1 else ""
+            yield f"  note     {note.found}{place}{more}"
 
 
 def _differences(run: KernelRun) -> Iterator[str]:
@@ -39,7 +47,8 @@ def _element(name: str, difference: Difference) -> str:
 
 
 def _values(difference: Difference) -> str:
-    text = f"is {difference.got}, expected {difference.expected}"
+    got = "undefined" if difference.got is None else difference.got
+    text = f"is {got}, expected {difference.expected}"
     if difference.size > 1:
         text += f"; {difference.differing} of {difference.size} elements differ"
         if difference.distance is not None:
@@ -48,9 +57,10 @@ def _values(difference: Difference) -> str:
 
 
 def _account(account: Account, reason: str) -> Iterator[str]:
-    budget = "" if account.budget is None or reason != "halt" else f"      (budget {account.budget:g})"
-    if account.budget is not None and account.budget == int(account.budget) and budget:
-        budget = f"      (budget {int(account.budget)})"
+    budget = ""
+    if account.budget is not None and reason == "halt":
+        beside = ", beside interrupt service" if account.judged_cycles != account.cycles else ""
+        budget = f"      (budget {account.budget:.10g}{beside})"
     width = len(str(account.cycles))
     yield f"  {account}{budget}"
     rows = [(section.cycles, section.label, _section(section)) for section in account.sections]

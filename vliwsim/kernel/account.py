@@ -9,7 +9,7 @@ import attrs
 from vliwsim.program.kernel import Kernel, Section
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class SectionCost:
     """One labelled stretch of a run. ``bundles`` it issued, of which each pass through all of it issues ``beats``.
 
@@ -29,7 +29,7 @@ class SectionCost:
         return self.bundles + self.drain
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class SlotUse:
     """``used``: beats of the hottest section in which the slot's unit was taken, whether the guard was on or off."""
 
@@ -37,7 +37,7 @@ class SlotUse:
     used: int
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class Account:
     """The cycles of a run; :attr:`cycles` is always bundles + stalls + drain.
 
@@ -63,9 +63,14 @@ class Account:
         return self.bundles + self.stalled + self.drain
 
     @property
+    def judged_cycles(self) -> int:
+        """The cycles that the budget is for: all but those of interrupt service, which is not the kernel's."""
+        return self.cycles - self.stalls.get("interrupt", 0)
+
+    @property
     def within_budget(self) -> bool | None:
         """None where the source sets no budget."""
-        return None if self.budget is None else self.cycles <= self.budget
+        return None if self.budget is None else self.judged_cycles <= self.budget
 
     @property
     def busiest(self) -> tuple[SlotUse, ...]:

@@ -6,7 +6,6 @@ whether the arrays fit into data memory. All problems come in one :class:`~vliws
 
 from __future__ import annotations
 
-import difflib
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -185,6 +184,8 @@ class _Binder:
                 f"computed by line {item.place.line}" if item.value is not None or item.file else f"of kind {item.kind}"
             )
             return problem("not-an-input", f"{name} is {what}", allowed)
+        import difflib
+
         close = difflib.get_close_matches(str(name), inputs, 1)
         return problem("unknown-input", f"{self.kernel.name} has no {name}", allowed, f"{close[0]}=…" if close else "")
 

@@ -19,7 +19,7 @@ import numpy as np
 from vliwsim.kernel.binding import bind
 from vliwsim.kernel.elements import Element
 from vliwsim.kernel.interface import Interface, interface_of
-from vliwsim.kernel.reference import Reference, _judged
+from vliwsim.kernel.reference import Reference, judged_code
 from vliwsim.kernel.search import Search
 from vliwsim.kernel.sizes import Sizes
 from vliwsim.problems import InterfaceError, Place, ReferenceFailure, problem
@@ -163,13 +163,13 @@ def cases_of(kernel: Kernel, reference: Reference | None) -> Iterator[Case]:
 
 def _own_cases(kernel: Kernel, reference: Reference) -> Iterator[tuple[Any, Any]]:
     assert reference.cases is not None
-    with _judged(reference.path, reference.source, "calling cases"):
+    with judged_code(reference.path, reference.source, "calling cases"):
         wanted = inspect.signature(reference.cases).parameters
         arguments = [[(c.name, dict(c.inputs)) for c in generated_cases(kernel)]] if wanted else []
         result = reference.cases(*arguments)
         pairs = iter(result.items() if isinstance(result, Mapping) else result)
     while True:
-        with _judged(reference.path, reference.source, "calling cases"):
+        with judged_code(reference.path, reference.source, "calling cases"):
             try:
                 pair = next(pairs)
             except StopIteration:

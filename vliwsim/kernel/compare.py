@@ -9,16 +9,16 @@ from vliwsim.kernel.elements import Element
 from vliwsim.kernel.outputs import Output
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class Difference:
-    """The first element that differs too much. ``index`` is None for a scalar.
+    """The first element that differs too much. ``index`` is None for a scalar, ``got`` where it is undefined.
 
     ``differing`` of ``size`` elements differ by more than allowed, the worst by ``distance`` units in the last place
-    (None where one of the two is no number).
+    (None where one of the two is undefined or no number).
     """
 
     index: int | None
-    got: int | float
+    got: int | float | None
     expected: int | float
     differing: int
     size: int
@@ -28,30 +28,35 @@ class Difference:
         return {"index": self.index, "got": _plain(self.got), "expected": _plain(self.expected)}
 
 
-def _plain(value: int | float) -> object:
+def _plain(value: int | float | None) -> object:
     """JSON has no NaN and no infinity: those go as text."""
-    return value if isinstance(value, int) or np.isfinite(value) else str(value)
+    return value if value is None or isinstance(value, int) or np.isfinite(value) else str(value)
 
 
-def compare(element: Element, got: Output, expected: Output, within: int | None = None) -> Difference | None:
+def compare(
+    element: Element, got: Output, expected: Output, within: int | None = None, undefined: np.ndarray | None = None
+) -> Difference | None:
     """The first difference between two values of one type and shape, None if there is none.
 
     ``within``: units in the last place allowed; None asks for equal bits. NaNs are equal to each other whatever their
-    payload, and to nothing else.
+    payload, and to nothing else. ``undefined``: which elements of ``got`` are; they equal nothing.
     """
     one, other = np.atleast_1d(np.asarray(got, element.dtype)), np.atleast_1d(np.asarray(expected, element.dtype))
-    assert one.shape == other.shape
+    unknown = np.zeros(one.shape, bool) if undefined is None else np.atleast_1d(undefined)
+    assert one.shape == other.shape == unknown.shape
     distances, comparable = _distances(element, one, other)
     wrong = ~comparable | (distances > (within or 0))
     if within is None:
         wrong |= _bits(one) != _bits(other)
         wrong &= ~(_nan(one) & _nan(other))
+    wrong |= unknown
     if not wrong.any():
         return None
     index = int(np.flatnonzero(wrong)[0])
-    worst = int(distances[wrong].max()) if comparable[wrong].all() else None
+    worst = int(distances[wrong].max()) if (comparable & ~unknown)[wrong].all() else None
     where = None if np.ndim(got) == 0 else index
-    return Difference(where, one[index].item(), other[index].item(), int(np.count_nonzero(wrong)), one.size, worst)
+    value = None if unknown[index] else one[index].item()
+    return Difference(where, value, other[index].item(), int(np.count_nonzero(wrong)), one.size, worst)
 
 
 def _nan(array: np.ndarray) -> np.ndarray:

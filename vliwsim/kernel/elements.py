@@ -6,6 +6,7 @@ nearest even and saturated; floats given for f32 are rounded to binary32. Everyt
 
 from __future__ import annotations
 
+import sys
 from collections.abc import Mapping
 
 import attrs
@@ -14,7 +15,7 @@ import numpy as np
 from vliwsim.problems import Problem, problem
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class Element:
     """One element type: ``bytes`` in memory, the NumPy type it is shown as, the raw integers from ``low`` to ``high``.
 
@@ -72,7 +73,7 @@ ELEMENTS: Mapping[str, Element] = {
 }
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class Converted:
     """``array`` in the element's type, or None with the ``problems`` that forbid it; ``notes`` say what changed."""
 
@@ -91,7 +92,8 @@ def convert(element: Element, value: object, label: str) -> Converted:
 
     Contiguity and byte order of the given array do not matter: the result is always a fresh contiguous array.
     """
-    if isinstance(value, np.ma.MaskedArray):
+    masked = sys.modules.get("numpy.ma")  # nobody can have a masked array before that is imported
+    if masked and isinstance(value, masked.MaskedArray):
         return _refused("array-type", f"{label} is a masked array", "an array without a mask", f"{label}.filled(0)")
     if isinstance(value, (list, tuple)) and not element.floating and _too_wide(value):
         return _out_of_range(element, list(value), label)  # NumPy would make floats of them

@@ -14,7 +14,7 @@ from vliwsim.machine.memory import Region
 from vliwsim.machine.recorder import Record, record
 from vliwsim.machine.stepper import Machine
 
-SLICE = 1 << 16
+SLICE = 1 << 14
 """Cycles between two looks at whether to go on."""
 
 Watch = Callable[[int], bool]

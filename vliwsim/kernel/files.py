@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import tempfile
 from collections.abc import Callable
 from pathlib import Path
 from typing import BinaryIO
@@ -77,6 +76,8 @@ def write_whole(path: Path, write: Callable[[BinaryIO], None], *, replace: bool 
     Raises :class:`~vliwsim.problems.InterfaceError` when ``path`` exists and ``replace`` is false, or it cannot be
     written.
     """
+    import tempfile
+
     if path.is_dir():
         raise InterfaceError(problem("output-file", f"{path} is a folder", "the name of a file"))
     try:

@@ -11,7 +11,7 @@ from vliwsim.kernel.elements import ELEMENTS, Element
 from vliwsim.program.kernel import Item, Kernel
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class Interface:
     """The items of a kernel, sorted by what a caller may do with them. Built by :func:`interface_of`."""
 

@@ -28,7 +28,7 @@ def find_source(path: str) -> Path:
             raise OptionError(
                 problem("no-such-file", found, "a .vliw file, its folder, or the name of a shipped kernel")
             )
-        given = shipped
+        given = _near(shipped)
     if given.is_dir():
         sources = sorted(given.glob("*.vliw"))
         if len(sources) != 1:
@@ -36,6 +36,12 @@ def find_source(path: str) -> Path:
             raise OptionError(problem("which-source", found, "one .vliw file", str(sources[0]) if sources else ""))
         return sources[0]
     return given
+
+
+def _near(path: Path) -> Path:
+    """The path as seen from the working folder, where it is below that."""
+    here = Path.cwd()
+    return path.relative_to(here) if path.is_relative_to(here) else path
 
 
 def _shipped(path: str) -> Path | None:

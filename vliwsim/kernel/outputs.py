@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
 
+import attrs
 import numpy as np
 
 from vliwsim.description.values import Value, parts
@@ -18,39 +19,48 @@ ReadMemory = Callable[[int, int], tuple[bytes, bytes]]
 """(address, bytes) → the bytes, and for each a 1 if it is undefined."""
 
 
-def read_outputs(
-    setup: Setup, registers: Sequence[Value], read_memory: ReadMemory
-) -> tuple[Mapping[str, Output], tuple[Problem, ...]]:
-    """Every output by name, in interface order, and one ``undefined-output`` problem for each that is not all defined.
+@attrs.frozen(eq=False)
+class Outputs:
+    """``values`` by name in interface order; ``undefined``: for each, which elements are (0-dimensional for a scalar).
+
+    ``problems``: one ``undefined-output`` for each output that is not all defined.
+    """
+
+    values: Mapping[str, Output]
+    undefined: Mapping[str, np.ndarray]
+    problems: tuple[Problem, ...]
+
+
+def read_outputs(setup: Setup, registers: Sequence[Value], read_memory: ReadMemory) -> Outputs:
+    """Every output of a finished run.
 
     Arrays have their element's NumPy type in the host's byte order; undefined elements read as 0. A scalar narrower
     than a register is its low bits.
     """
-    outputs: dict[str, Output] = {}
+    values: dict[str, Output] = {}
+    undefined: dict[str, np.ndarray] = {}
     problems: list[Problem] = []
     for name, item in interface_of(setup.kernel).outputs.items():
         if item.size is None:
             assert item.register is not None
-            outputs[name], bad = _scalar(item, registers[item.register])
-            found = f"{name} was never given a value" if bad else ""
+            values[name], flags = _scalar(item, registers[item.register])
         else:
-            outputs[name], undefined = _array(setup, item, read_memory)
-            bad = bool(undefined.any())
-            found = _first(name, undefined) if bad else ""
-        if bad:
-            line = excerpt(setup.kernel, item.place)
+            values[name], flags = _array(setup, item, read_memory)
+        undefined[name] = flags
+        if flags.any():
+            found, line = _first(name, flags), excerpt(setup.kernel, item.place)
             problems.append(
                 problem(
                     "undefined-output", found, "every element defined", place=item.place, excerpt=line, kind="illegal"
                 )
             )
-    return outputs, tuple(problems)
+    return Outputs(values, undefined, tuple(problems))
 
 
-def _scalar(item: Item, value: Value) -> tuple[Output, bool]:
+def _scalar(item: Item, value: Value) -> tuple[Output, np.ndarray]:
     element = ELEMENTS[item.type]
     bits, unknown = parts(value)
-    return element.from_raw(bits), bool(unknown & ((1 << element.bytes) - 1))
+    return element.from_raw(bits), np.array(unknown & ((1 << element.bytes) - 1) != 0)
 
 
 def _array(setup: Setup, item: Item, read_memory: ReadMemory) -> tuple[np.ndarray, np.ndarray]:
@@ -63,6 +73,8 @@ def _array(setup: Setup, item: Item, read_memory: ReadMemory) -> tuple[np.ndarra
 
 
 def _first(name: str, undefined: np.ndarray) -> str:
+    if undefined.ndim == 0:
+        return f"{name} is undefined"
     index = int(np.flatnonzero(undefined)[0])
     count = int(np.count_nonzero(undefined))
     return f"{name}[{index}] is undefined" + (

@@ -10,7 +10,6 @@ from __future__ import annotations
 import contextlib
 import inspect
 import sys
-import traceback
 import types
 from collections.abc import Callable, Iterator, Mapping
 from pathlib import Path
@@ -56,7 +55,7 @@ def load_reference(kernel: Kernel) -> Reference | None:
         raise ReferenceFailure(problem("reference-file", f"{path}: {error}", "a Python file in UTF-8")) from None
     module = types.ModuleType("vliwsim_reference")
     module.__file__ = str(path)
-    with _judged(path, source, "loading it"), _importable(path.parent, module):
+    with judged_code(path, source, "loading it"), _importable(path.parent, module):
         exec(compile(source, str(path), "exec"), module.__dict__)
     function = getattr(module, kernel.name, None)
     if not callable(function):
@@ -86,7 +85,7 @@ def _importable(folder: Path, module: types.ModuleType) -> Iterator[None]:
 
 
 @contextlib.contextmanager
-def _judged(path: Path, source: str, doing: str) -> Iterator[None]:
+def judged_code(path: Path, source: str, doing: str) -> Iterator[None]:
     """Whatever the reference raises becomes a ReferenceFailure at the line of the file that raised it."""
     try:
         yield
@@ -100,9 +99,10 @@ def _raised(path: Path, source: str, doing: str, error: BaseException) -> Proble
     if isinstance(error, SyntaxError) and error.filename == str(path):
         place = Place(str(path), error.lineno or 1, error.offset or 1)
     else:
-        lines = [
-            frame.lineno or 1 for frame in traceback.extract_tb(error.__traceback__) if frame.filename == str(path)
-        ]
+        import traceback
+
+        frames = traceback.extract_tb(error.__traceback__)
+        lines = [frame.lineno or 1 for frame in frames if frame.filename == str(path)]
         place = Place(str(path), lines[-1] if lines else 1)
     text = source.splitlines()
     line = text[place.line - 1] if 0 < place.line <= len(text) else ""
@@ -118,7 +118,7 @@ def call_reference(reference: Reference, setup: Setup) -> dict[str, Output]:
     Raises :class:`~vliwsim.problems.ReferenceFailure` when it raises or returns something else than the outputs.
     """
     arguments = _arguments(reference, setup)
-    with _judged(reference.path, reference.source, f"calling {setup.kernel.name}"):
+    with judged_code(reference.path, reference.source, f"calling {setup.kernel.name}"):
         result = reference.function(**arguments)
         if inspect.isgenerator(result):
             result = tuple(result)

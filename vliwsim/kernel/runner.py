@@ -147,7 +147,7 @@ class KernelRun:
         budget = self.account.budget
         if budget is None:
             return []
-        over = self.cycles - budget
+        over = self.account.judged_cycles - budget
         if over == 0:
             return ["on budget"]
         return [f"{abs(over):g} cycle{'' if abs(over) == 1 else 's'} {'over' if over > 0 else 'under'} budget"]
@@ -227,12 +227,13 @@ def judged(
     outputs: Mapping[str, Output] = {}
     differences: dict[str, Difference | None] = {}
     if simulation.reason == "halt":
-        outputs, undefined = read_outputs(setup, simulation.registers, simulation.read_memory)
-        diagnostics += undefined
+        read = read_outputs(setup, simulation.registers, simulation.read_memory)
+        outputs, diagnostics = read.values, list(read.problems)
         if expected is not None:
             for name, item in interface_of(kernel).outputs.items():
                 within = _whole(setup, item.within)
-                differences[name] = compare(interface_of(kernel).element(name), outputs[name], expected[name], within)
+                element, unknown = interface_of(kernel).element(name), read.undefined[name]
+                differences[name] = compare(element, outputs[name], expected[name], within, unknown)
     if simulation.hazard:
         diagnostics.append(hazard_problem(setup, simulation.hazard))
     if simulation.reason == "limit":
