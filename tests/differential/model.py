@@ -2,7 +2,7 @@
 
 It imports nothing from the package and shares no table with it. Comments quote the sentence a piece of code
 implements; where the text leaves a choice, the comment names the reading and ends with its number in the list of
-readings (R1, R2, …).
+readings (R1, R2, …) that was handed to the people who settle differences.
 """
 
 from __future__ import annotations
