@@ -29,22 +29,25 @@ def check(text: str, core: str | Core = "pair7") -> SourceError | None:
             for entry in match[2].split():
                 name, column = entry.split(":")
                 expected.add((number - len(match[1]), int(column), name))
-    error = None
-    found = set()
+    error = refused(text, core)
+    problems = error.problems if error else ()
+    found = [(p.place.line, p.place.column, p.name) for p in problems if p.place]
+    assert sorted(found) == sorted(expected)
+    assert found == sorted(found)
+    for problem in problems:
+        assert problem.found
+        assert problem.place
+        assert problem.excerpt == whole.splitlines()[problem.place.line - 1]
+    return error
+
+
+def refused(text: str, core: str | Core) -> SourceError | None:
+    """What assembling ``text`` raises."""
     try:
         kernel(text, core)
-    except SourceError as caught:
-        error = caught
-        found = {(p.place.line, p.place.column, p.name) for p in caught.problems if p.place}
-        assert len(found) == len(caught.problems)
-        assert [p.place.line for p in caught.problems if p.place] == sorted(
-            p.place.line for p in caught.problems if p.place
-        )
-        for problem in caught.problems:
-            assert problem.found
-            assert problem.excerpt == whole.splitlines()[problem.place.line - 1] if problem.place else True
-    assert found == expected
-    return error
+    except SourceError as error:
+        return error
+    return None
 
 
 CODE = [
