@@ -75,6 +75,17 @@ def remainder(a: int, b: int) -> int:
     return a if b == 0 else signed(a) - signed(b) * signed(divide(a, b) & WORD)
 
 
+def division(f: Callable[[int, int], int], by_zero: Callable[[Value], Value]) -> Callable[..., tuple[Value, ...]]:
+    """A division chooses by its divisor: by a defined 0 it gives ``by_zero`` of the dividend and computes nothing."""
+
+    def does(a: Value, b: Value) -> tuple[Value, ...]:
+        if b == Value(0):
+            return (by_zero(a),)
+        return scalar(f)(a, b)
+
+    return does
+
+
 def select(a: Value, b: Value, c: Value) -> tuple[Value, ...]:
     """A select passes only the chosen operand (an undefined selector gives undefined)."""
     if c.unknown:
@@ -154,8 +165,8 @@ MEANINGS: dict[str, Meaning] = {
     "min": two(lambda a, b: min(signed(a), signed(b))),
     "max": two(lambda a, b: max(signed(a), signed(b))),
     "mul": two(lambda a, b: a * b),
-    "div": two(divide),
-    "rem": two(remainder),
+    "div": Meaning("compute", ("d",), ("a", "b"), does=division(divide, lambda _: Value(WORD))),
+    "rem": Meaning("compute", ("d",), ("a", "b"), does=division(remainder, lambda a: a)),
     "mul.half": two(lambda a, b: signed(a, 16) * signed(b, 16)),
     "add.h2": packed(lambda a, b: a + b, 16),
     "sub.h2": packed(lambda a, b: a - b, 16),

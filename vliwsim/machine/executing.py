@@ -24,10 +24,9 @@ def execute(ready: Preparation, state: State, prepared: Prepared, issued: Issued
     for k, part in on:  # undefined-used
         judge_defined(ready, state, prepared, k, part)
         if part.reach:
-            base, step = state.operands[part.reach.base], state.operands[part.reach.step]
-            assert isinstance(base, int)
-            assert isinstance(step, int)
-            addresses[k] = part.reach.address(base, step)
+            address = part.reach.address(state.operands[part.reach.base], state.operands[part.reach.step])
+            assert isinstance(address, int)
+            addresses[k] = address
     for k, part in on:  # misaligned
         access = part.operation.access
         if access and memory.misaligned == "reject" and addresses[k] % access.bytes:
@@ -64,10 +63,10 @@ def execute(ready: Preparation, state: State, prepared: Prepared, issued: Issued
 def judge_defined(ready: Preparation, state: State, prepared: Prepared, k: int, part: Part) -> None:
     """``undefined-used`` at a ``count``, a branch's condition, a taken indirect target and an address."""
     names = ready.core.register_names
-    if part.reach:
-        for register, what in ((part.reach.base, "base"), (part.reach.step, "step")):
-            if isinstance(state.operands[register], Undefined):
-                raise undefined_used(ready, state, prepared, k, f"address {what} {names[register]}")
+    reach = part.reach
+    if reach and isinstance(reach.address(state.operands[reach.base], state.operands[reach.step]), Undefined):
+        unknown = reach.base if isinstance(state.operands[reach.base], Undefined) else reach.step
+        raise undefined_used(ready, state, prepared, k, f"{names[unknown]} of an address")
     if not part.branches:
         return
     taken = part.operation.evaluate(input_values(state, part), part.halves)[-1]
@@ -112,8 +111,6 @@ def gather(
     reach = part.reach
     if reach and reach.update is not None:
         base, step = state.operands[reach.base], state.operands[reach.step]
-        assert isinstance(base, int)
-        assert isinstance(step, int)
         latency = ready.sites[reach.update].write.latency
         issued.results.append((latency, ((reach.update,), (reach.updated(base, step),))))
 

@@ -12,6 +12,7 @@ from collections.abc import Callable
 import attrs
 
 from vliwsim.description.operations import Kind, Operation
+from vliwsim.description.values import NOTHING, Undefined, Value
 from vliwsim.program.code import Instruction, Mode
 from vliwsim.program.effects import Effects, Write
 
@@ -51,12 +52,22 @@ class Reach:
     update: int | None
     """Write number of the updated base."""
 
-    def address(self, base: int, step: int) -> int:
-        return base if self.mode is Mode.AFTER else (base + step) & WORD
+    def address(self, base: Value, step: Value) -> Value:
+        """The address; undefined where anything it is made of is. ``[base then +step]`` is made of the base alone."""
+        return base if self.mode is Mode.AFTER else self._sum(base, step)
 
-    def updated(self, base: int, step: int) -> int:
-        if self.ring:
-            return base & ~(self.ring - 1) & WORD | (base + step) & (self.ring - 1)
+    def updated(self, base: Value, step: Value) -> Value:
+        """What the base becomes."""
+        moved = self._sum(base, step)
+        if self.ring and isinstance(moved, int):
+            assert isinstance(base, int)
+            return base & ~(self.ring - 1) & WORD | moved & (self.ring - 1)
+        return moved
+
+    @staticmethod
+    def _sum(base: Value, step: Value) -> Value:
+        if isinstance(base, Undefined) or isinstance(step, Undefined):
+            return NOTHING
         return (base + step) & WORD
 
 

@@ -47,7 +47,6 @@ def judge_round_two(
     """Freshness, early reads and undefined guards, operation by operation."""
     core, names = ready.core, ready.core.register_names
     on: list[bool] = []
-    notes: list[NoteSite] = []
     fresh_stall = False
     for k, part in enumerate(prepared.parts):
         here = Cause(prepared.index, k, state.beat)
@@ -60,7 +59,7 @@ def judge_round_two(
             fresh_stall = True
         guard = part.instruction.guard
         if guard:
-            _judge_early(ready, state, prepared, k, guard.register, out, notes, "guard")
+            _judge_early(ready, state, prepared, k, guard.register, out, "guard")
             value = state.operands[guard.register]
             if isinstance(value, Undefined):
                 raise undefined_used(ready, state, prepared, k, f"guard {names[guard.register]}")
@@ -69,8 +68,8 @@ def judge_round_two(
             on.append(True)
         if on[k]:
             for access in part.effects.reads:
-                _judge_early(ready, state, prepared, k, access.register, out, notes, access.operand)
-    issued = Issued(tuple(on), notes=notes)
+                _judge_early(ready, state, prepared, k, access.register, out, access.operand)
+    issued = Issued(tuple(on))
     if fresh_stall and not core.interlocked:
         issued.freezes.append(("fresh", 1))
     return issued
@@ -83,14 +82,13 @@ def _judge_early(
     instruction: int,
     register: int,
     out: dict[int, list[tuple[int, int]]],
-    notes: list[NoteSite],
     what: str,
 ) -> None:
     early = ready.core.issue.early
     if early == "old" or register not in out:
         return
     if early == "warn":
-        notes.append(NoteSite("early-read", prepared.index, instruction))
+        state.notes.setdefault(NoteSite("early-read", prepared.index, instruction, register), state.beat)
         return
     flights = out[register]
     beats = min(beat for _, beat in flights) - state.beat

@@ -21,11 +21,12 @@ Batch = tuple[tuple[int, ...], Sequence[Value]]
 
 @attrs.frozen
 class NoteSite:
-    """Where a note belongs: its name, and the instruction of the program it speaks of."""
+    """Where a note belongs: its name, the instruction of the program it speaks of, and the register if it names one."""
 
     name: str
     bundle: int
     instruction: int
+    register: int | None = None
 
 
 class State:
@@ -69,6 +70,11 @@ class State:
     def in_flight(self) -> int | None:
         """The beat of the latest landing still to come, None if nothing is in flight."""
         return max(self.flight, default=None)
+
+    @property
+    def finished(self) -> bool:
+        """Whether ``halt`` has issued and nothing is to come: no freeze cycle, no landing."""
+        return self.halt_beat is not None and not self.frozen and not self.flight
 
     def save(self) -> dict[str, object]:
         """A complete snapshot; it shares nothing that a run changes and can be restored any number of times."""

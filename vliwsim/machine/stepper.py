@@ -104,25 +104,26 @@ class Machine:
         state.cycle += 1
         state.beat += 1
 
-    def drain(self, state: State) -> None:
-        """After ``halt``: land what is in flight, beat by beat; raises :class:`HazardMet`."""
-        assert state.halt_beat is not None
-        while state.flight:
-            if state.beat > state.halt_beat + 1:
-                state.drain += 1
-                state.cycle += 1
+    def _drain(self, state: State, until: int) -> None:
+        """After ``halt``: land what is in flight, a beat a cycle; the last landing costs no cycle."""
+        while state.flight and state.cycle < until:
             phases.land(self.ready, state)
             state.beat += 1
+            if state.flight:
+                state.drain += 1
+                state.cycle += 1
 
     # --------------------------------------------------------------------------------------------------------- running
 
     def advance(self, state: State, until: int = FOREVER) -> None:
-        """Run until ``cycle`` reaches ``until``, exactly, or ``halt`` has issued; raises :class:`HazardMet`."""
+        """Run until ``cycle`` is ``until``, exactly, or everything behind ``halt`` has landed; raises HazardMet."""
         hurried = not self.careful and "step" not in vars(self)
         while True:
             self._thaw(state, until)
-            if state.halt_beat is not None or state.cycle >= until or state.frozen:
-                return
+            if state.halt_beat is not None and not state.frozen:
+                return self._drain(state, until)
+            if state.cycle >= until or state.frozen:
+                return None
             if hurried and not state.service and not state.waited_fresh and state.interrupt_at is None:
                 hurry(self, state, until)
                 if state.halt_beat is not None or state.cycle >= until or state.frozen:
@@ -159,18 +160,16 @@ class Machine:
             state.interrupt_at = interrupt_at
         end = FOREVER if limit is None else limit
         try:
-            while state.halt_beat is None and state.cycle < end:
+            while not state.finished and state.cycle < end:
                 self.advance(state, min(end, state.cycle + PROGRESS_EVERY))
                 if progress:
                     progress(state.cycle)
-            if state.halt_beat is None:
-                return self.outcome(state, "limit")
-            self._thaw(state, FOREVER)
-            self.drain(state)
+            if state.halt_beat is not None and state.in_flight == state.beat:
+                self._drain(state, FOREVER)  # what lands first behind halt costs no cycle
         except HazardMet as met:
             self._thaw(state, FOREVER)
             return self.outcome(state, "hazard", met.hazard)
-        return self.outcome(state, "halt")
+        return self.outcome(state, "halt" if state.finished else "limit")
 
     def outcome(self, state: State, reason: str, hazard: Hazard | None = None) -> Outcome:
         """The account of ``state`` as it is."""

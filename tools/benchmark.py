@@ -1,0 +1,235 @@
+"""The benchmark: ratios of one run, never a verdict. Machines are noisy: quote the medians.
+
+tools/bench            everything
+tools/bench stepper    one part: stepper, start, assemble, growth
+"""
+
+from __future__ import annotations
+
+import platform
+import statistics
+import subprocess
+import sys
+import time
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+
+HERE = Path(__file__).resolve().parent
+ROOT = HERE.parent
+WORD = 0xFFFFFFFF
+ROUNDS = 7
+
+
+def interleaved(*actions: Callable[[], float], rounds: int = ROUNDS) -> list[list[float]]:
+    """Seconds of each action over ``rounds``, in turn, after one round that does not count."""
+    for action in actions:
+        action()
+    taken: list[list[float]] = [[] for _ in actions]
+    for _ in range(rounds):
+        for action, seconds in zip(actions, taken, strict=True):
+            seconds.append(action())
+    return taken
+
+
+def line(what: str, figure: str, more: str = "") -> None:
+    print(f"  {what:<46}{figure:>12}   {more}")
+
+
+# ------------------------------------------------------------------------------- the stepper and its bare baseline
+
+ADD, LOAD, COUNT, HALT = range(4)
+
+
+def bare_interpreter(bundles: list[list[tuple]], registers: list[int], memory: bytearray) -> tuple[int, list[int]]:
+    """A table interpreter with latencies and delayed branches that checks nothing: (bundles issued, registers).
+
+    No ports, slots, guards, links, undefined values, alignment, arrays, freezes or drain.
+    """
+    pending: list[list[tuple[int, int]]] = [[] for _ in range(16)]
+    targets: dict[int, int] = {}
+    beat = at = 0
+    while True:
+        landing = pending[beat & 15]
+        for register, value in landing:
+            registers[register] = value
+        landing.clear()
+        for kind, function, d, a, b, latency in bundles[at]:
+            if kind == ADD:
+                pending[(beat + latency) & 15].append((d, function(registers[a], registers[b])))
+            elif kind == LOAD:
+                address = registers[a]
+                pending[(beat + latency) & 15].append((d, int.from_bytes(memory[address : address + 4], "little")))
+                pending[(beat + 1) & 15].append((a, address & ~b | (address + 4) & b))
+            elif kind == COUNT:
+                if registers[d]:
+                    pending[(beat + 1) & 15].append((d, registers[d] - 1))
+                    targets[beat + latency] = a
+            else:
+                return beat + 1, registers
+        beat += 1
+        at = targets.pop(beat, at + 1) if targets else at + 1
+
+
+def bare_program() -> list[list[tuple]]:
+    """The loop of bench_loop.vliw as the baseline's tables; registers g0… are 0…31, h0… 32…63, constants above."""
+
+    def plus(a: int, b: int) -> int:
+        return (a + b) & WORD
+
+    def times(a: int, b: int) -> int:
+        return (a * b) & WORD
+
+    def unlike(a: int, b: int) -> int:
+        return a ^ b
+
+    count = (COUNT, None, 20, 11, 0, 6)
+    start = [[(ADD, plus, 3, 64, 65, 1)], [(ADD, plus, 35, 64, 66, 1)], [], [], []] + [[count] for _ in range(6)]
+    loop = [
+        (LOAD, None, 2, 10, 4095, 5), (LOAD, None, 34, 42, 4095, 5), (ADD, times, 4, 2, 3, 2),
+        (ADD, times, 36, 34, 35, 2), (ADD, plus, 6, 6, 4, 1), (ADD, plus, 38, 38, 36, 1),
+        (ADD, unlike, 40, 40, 34, 1), count,
+    ]  # fmt: skip
+    return [*start, loop, [(HALT, None, 0, 0, 0, 0)]]
+
+
+def stepper(passes: int = 60_000) -> None:
+    from vliwsim.description.corefile import load_core
+    from vliwsim.machine.memory import Region
+    from vliwsim.machine.stepper import Machine
+    from vliwsim.program.assembler import assemble
+
+    kernel = assemble(HERE / "bench_loop.vliw", load_core(str(HERE / "bench8.toml")))
+    machine = Machine(kernel.program)
+    data = np.random.default_rng(1).integers(0, 2**32, 2048, dtype=np.uint32).astype("<u4").tobytes()
+    numbers = kernel.core.register_numbers
+    given = {numbers["g10"]: 0, numbers["h10"]: 4096, numbers["g20"]: passes}
+    results = []
+
+    def ours(careful: bool = False) -> float:
+        one = Machine(kernel.program, careful=True) if careful else machine
+        state = one.start(given, [(0, data)], [Region("x", 0, 8192)])
+        started = time.perf_counter()
+        outcome = one.run(state)
+        seconds = time.perf_counter() - started
+        assert outcome.reason == "halt", outcome
+        results.append((outcome.bundles, [outcome.registers[numbers[n]] for n in ("g6", "h6", "h8")]))
+        return seconds / outcome.bundles
+
+    def bare() -> float:
+        registers = [0] * 64 + [0, 3, 5]
+        registers[10], registers[42], registers[20] = 0, 4096, passes
+        memory = bytearray(data)
+        started = time.perf_counter()
+        bundles, registers = bare_interpreter(bare_program(), registers, memory)
+        seconds = time.perf_counter() - started
+        results.append((bundles, [registers[k] for k in (6, 38, 40)]))
+        return seconds / bundles
+
+    mine, theirs = interleaved(ours, bare)
+    assert all(r == results[0] for r in results), "the baseline and the stepper disagree"
+    ratio = statistics.median(b / o for o, b in zip(mine, theirs, strict=True))
+    line("stepper, speed against a bare unchecked one", f"{ratio:.2f} x", "8 operations a bundle; asked: 0.5 x")
+    line("  a bundle", f"{statistics.median(mine) * 1e6:.2f} us", f"bare: {statistics.median(theirs) * 1e6:.2f} us")
+    slow = interleaved(lambda: ours(careful=True), rounds=1)[0][0]
+    line("  the hot loop against the definition", f"{slow / statistics.median(mine):.1f} x")
+
+
+# ---------------------------------------------------------------------------------------------------------- cold start
+
+
+def start() -> None:
+    def timed(*command: str) -> Callable[[], float]:
+        def run() -> float:
+            started = time.perf_counter()
+            subprocess.run(command, check=True, stdout=subprocess.DEVNULL)
+            return time.perf_counter() - started
+
+        return run
+
+    vliwsim = str(Path(sys.executable).parent / "vliwsim")
+    ours = timed(vliwsim, "run", str(ROOT / "programs/energy/energy.vliw"))
+    numpy = timed(sys.executable, "-c", "import numpy")
+    mine, theirs = interleaved(ours, numpy, rounds=11)
+    above = statistics.median(a - b for a, b in zip(mine, theirs, strict=True))
+    line("`run` of energy, cold, above `import numpy`", f"{above:.2f} s", "asked: at most 0.3 s")
+    line("  in all", f"{statistics.median(mine):.2f} s", f"import numpy: {statistics.median(theirs):.2f} s")
+
+
+# ---------------------------------------------------------------------------------------------------------- assembling
+
+
+def ten_thousand_lines() -> str:
+    head = "kernel long\ncore pair7\ngiven x : i32[64] at g10\nreturns y : i32 in g11\n\nstart:\n"
+    body = []
+    for k in range(2498):
+        body.append(f"@{k}  add g{k % 5 + 1}, g{k % 7 + 1}, {k % 100}")
+        body.append(f"    lw h{k % 5 + 1}, [h{k % 6 + 8} + {k % 16 * 4}] if g{16 + k % 8}")
+        body.append(f"    mul g{k % 3 + 8}, g{k % 4 + 1}, g{k % 5 + 1}")
+        body.append(f"    xor h{k % 4 + 12}, h{k % 4 + 2}, h{k % 3 + 4}")
+    return head + "\n".join(body) + "\n@2498 halt\n"
+
+
+def assembling() -> None:
+    from vliwsim.program.assembler import assemble
+
+    text = ten_thousand_lines()
+    count = text.count("\n")
+
+    def ours() -> float:
+        started = time.perf_counter()
+        assemble("long.vliw", text=text)
+        return time.perf_counter() - started
+
+    seconds = statistics.median(interleaved(ours, rounds=3)[0])
+    line(f"assembling {count:,} lines", f"{seconds:.2f} s", "asked: at most 2 s")
+
+
+# -------------------------------------------------------------------------------------------------------------- growth
+
+GROW = """
+import resource, sys, time
+from pathlib import Path
+from vliwsim.description.corefile import load_core
+from vliwsim.machine.memory import Region
+from vliwsim.machine.stepper import Machine
+from vliwsim.program.assembler import assemble
+tools, passes = Path(sys.argv[1]), int(sys.argv[2])
+kernel = assemble(tools / "bench_loop.vliw", load_core(str(tools / "bench8.toml")))
+numbers = kernel.core.register_numbers
+machine = Machine(kernel.program)
+given = {numbers["g10"]: 0, numbers["h10"]: 4096, numbers["g20"]: passes}
+state = machine.start(given, [(0, bytes(8192))], [Region("x", 0, 8192)])
+started = time.perf_counter()
+outcome = machine.run(state)
+seconds = time.perf_counter() - started
+print(outcome.cycles, seconds, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+"""
+
+
+def growth() -> None:
+    for passes in (10**3, 10**4, 10**5, 10**6):
+        command = [sys.executable, "-c", GROW, str(HERE), str(passes)]
+        cycles, seconds, peak = subprocess.run(command, check=True, capture_output=True, text=True).stdout.split()
+        rate = float(seconds) / int(cycles) * 1e6
+        line(f"{int(cycles):>9,} cycles", f"{rate:.2f} us", f"a cycle; peak memory {int(peak) / 1024:.0f} MiB")
+
+
+PARTS = {"stepper": stepper, "start": start, "assemble": assembling, "growth": growth}
+
+
+def main() -> int:
+    wanted = sys.argv[1:] or list(PARTS)
+    unknown = [name for name in wanted if name not in PARTS]
+    if unknown:
+        print(f"found {', '.join(unknown)}; allowed: {', '.join(PARTS)}", file=sys.stderr)
+        return 2
+    print(f"{platform.machine()}, {platform.system()}, Python {platform.python_version()}, NumPy {np.__version__}")
+    for name in wanted:
+        PARTS[name]()
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
