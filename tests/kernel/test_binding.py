@@ -9,10 +9,11 @@ import attrs
 import numpy as np
 import pytest
 
-from tests.kernel.sources import TINY, header
 from vliwsim.kernel.binding import bind
 from vliwsim.kernel.placement import GAP
 from vliwsim.problems import InterfaceError
+
+from .sources import TINY, header
 
 SIGNAL = """
     given   x    : i16[n] at g1 over 8

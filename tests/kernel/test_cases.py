@@ -7,13 +7,14 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from tests.kernel.sources import header
 from vliwsim.kernel.binding import bind
 from vliwsim.kernel.cases import PATTERNS, case_with, cases_of, find_case, generated_cases
 from vliwsim.kernel.interface import interface_of
 from vliwsim.kernel.reference import load_reference
 from vliwsim.kernel.search import Search
 from vliwsim.problems import InterfaceError, ReferenceFailure
+
+from .sources import header
 
 FRAME = "given x : i16[n] at g1\nreturns total : i32 in g2\nneeds n % 4 == 0 and n >= 4"
 FILTER = """

@@ -8,11 +8,12 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from tests.kernel.sources import header
 from vliwsim.kernel.binding import bind
 from vliwsim.kernel.outputs import Output
 from vliwsim.kernel.reference import call_reference, load_reference
 from vliwsim.problems import ReferenceFailure
+
+from .sources import header
 
 INTERFACE = """
     given   x    : i16[n] at g1
@@ -107,7 +108,7 @@ def test_floats_may_be_anything_ieee(tmp_path: Path) -> None:
         ("import numpy\nraise OSError('no disk')", "reference-raised", "OSError while loading it: no disk", 2),
         ("import no_such_module_here", "reference-raised", "ModuleNotFoundError while loading it", 1),
         ("import sys\nsys.exit(0)", "reference-raised", "SystemExit while loading it: 0", 2),
-        ("def frame(x):\n    y = 1\n    return x / 0 + y['a']", "reference-raised", "TypeError while calling frame", 3),
+        ("def frame(x):\n    y = 1\n    return x + y['a']", "reference-raised", "TypeError while calling frame", 3),
         ("def frame(x):\n    assert False", "reference-raised", "AssertionError while calling frame", 2),
         ("def f(x):\n    return f(x)\ndef frame(x):\n    return f(x)", "reference-raised", "RecursionError", 2),
         ("\n\ndef frame(signal, n):\n    return 0", "reference-parameter", "frame asks for signal", 3),

@@ -74,9 +74,9 @@ def main(arguments: Sequence[str] | None = None) -> NoReturn:
 def status_of(arguments: Sequence[str] | None = None) -> int:
     """Run the command line; the exit status."""
     try:
-        result = cli.main(
-            args=None if arguments is None else list(arguments), prog_name="vliwsim", standalone_mode=False
-        )
+        # not cli.main(): that would end the process itself when a pipe breaks
+        with cli.make_context("vliwsim", list(sys.argv[1:] if arguments is None else arguments)) as context:
+            result = cli.invoke(context)
         sys.stdout.flush()
         return result if isinstance(result, int) else 0
     except VliwsimError as error:
@@ -117,6 +117,8 @@ def usage_problem(error: click.ClickException) -> Problem:
     if isinstance(error, click.MissingParameter):
         what = error.param.human_readable_name if error.param else "an argument"
         return problem("missing-argument", f"nothing for {what}", f"{path} {what}", remedy)
+    if isinstance(error, click.BadOptionUsage):
+        return problem("bad-option", error.format_message().rstrip("."), "", remedy)
     if isinstance(error, click.BadParameter):
         name = error.param.opts[0] if error.param else "an argument"
         kind = error.param.type if error.param else None

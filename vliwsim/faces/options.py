@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import re
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -64,7 +65,7 @@ def given_value(name: str, text: str) -> int | float | list[int | float] | np.nd
     try:
         return _number(name, text)
     except OptionError:
-        looks_like_file = "/" in text or "\\" in text or "." in text or Path(text).exists()
+        looks_like_file = "/" in text or "\\" in text or "." in text or os.path.exists(text)
         if not looks_like_file:
             raise
     from vliwsim.kernel.files import read_npy

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Mapping, Sequence
 from pathlib import Path
 
@@ -21,7 +22,7 @@ def find_source(path: str) -> Path:
     ``programs/energy`` or ``programs/energy/energy.vliw``. Raises :class:`~vliwsim.problems.OptionError`.
     """
     given = Path(path)
-    if not given.exists():
+    if not os.path.exists(path):  # unlike Path.exists, False for names that cannot be
         shipped = _shipped(path)
         if shipped is None:
             found = f"no file {path}"
@@ -51,7 +52,7 @@ def _shipped(path: str) -> Path | None:
     if not parts or Path(path).is_absolute() or ".." in parts:
         return None
     inner = Path(*parts[1:]) if parts[0] == "programs" and len(parts) > 1 else Path(path)
-    if (folder / inner).exists():
+    if os.path.exists(folder / inner):
         found = folder / inner
         own = found / f"{found.name}.vliw"
         return own if own.is_file() else found
