@@ -8,7 +8,7 @@ from vliwsim.description.core import Cluster, Core, Latency, Slot, Words
 from vliwsim.description.operations import Access, Kind, Operand, Operation, OperationSet, Role
 from vliwsim.program.code import Address, Guard, Immediate, Instruction, Label, Mode, Place, Register
 from vliwsim.program.encoding.decode import named_twice
-from vliwsim.program.encoding.layout import may_be_immediate
+from vliwsim.program.encoding.layout import constant_limits, may_be_immediate, takes_immediate
 
 R, S, IO, ST, AD, TG, C = (
     Role.RESULT,
@@ -40,6 +40,8 @@ _ALL = (
     operation("add.sat", 66, Kind.COMPUTE, o("d", R), o("sticky", ST), o("a", S), o("b", S)),
     operation("mac", 67, Kind.COMPUTE, o("d", IO, "i64", pair=True), o("a", S), o("b", S)),
     operation("take", 68, Kind.COMPUTE, o("d", R), o("a", S), o("n", C)),
+    operation("field", 71, Kind.COMPUTE, o("d", R), o("a", S), o("n", C, "u5"), o("m", C, "i7")),
+    operation("wide", 72, Kind.COMPUTE, o("d", R), o("n", C, "u20")),
     operation("fadd", 69, Kind.COMPUTE, o("d", R, "f32"), o("a", S, "f32"), o("b", S, "f32")),
     operation("swap", 70, Kind.COMPUTE, o("d", R), o("e", R), o("a", S)),
     operation("lw", 130, Kind.LOAD, o("d", R), o("at", AD), access=Access("i32", 4, False)),
@@ -98,16 +100,18 @@ _raw = st.one_of(
 
 
 @st.composite
-def instructions(draw: st.DrawFn, on: Core, labels: list[str]) -> Instruction:
+def instructions(draw: st.DrawFn, on: Core, labels: list[str], of: OperationSet) -> Instruction:
     """Any instruction a word can say, legal or not."""
     registers = st.integers(0, len(on.register_names) - 1)
-    chosen = draw(st.sampled_from(_ALL))
+    chosen = draw(st.sampled_from(list(of.by_name.values())))
     places: list[Place] = []
-    free = not any(operand.role is C for operand in chosen.operands)
+    free = not any(takes_immediate(operand) for operand in chosen.operands)
     for operand in chosen.operands:
         immediate = may_be_immediate(operand) and free and draw(st.booleans())
         if operand.role is C:
-            places.append(Immediate(draw(_raw)))
+            low, high = constant_limits(operand)
+            near = [v for v in (low, low + 1, 0, 1, 40, high - 1, high) if low <= v <= high]
+            places.append(Immediate(draw(st.one_of(st.sampled_from(near), st.integers(low, high))) % 2**32))
         elif operand.role is AD:
             mode = draw(st.sampled_from(list(Mode)))
             ring = 2 ** draw(st.integers(1, 31)) if mode is Mode.AFTER and draw(st.booleans()) else 0
@@ -125,15 +129,17 @@ def instructions(draw: st.DrawFn, on: Core, labels: list[str]) -> Instruction:
         free = free and not immediate
     guard = Guard(draw(registers), draw(st.booleans())) if draw(st.booleans()) else None
     found = Instruction(chosen, draw(st.integers(0, len(on.slots) - 1)), tuple(places), guard)
-    return found if named_twice(chosen, found.places) is None else HALT
+    return found if named_twice(chosen, found.places) is None else Instruction(of.by_name["halt"], 0, ())
 
 
 @st.composite
-def programs(draw: st.DrawFn, on: Core) -> tuple[list[list[Instruction] | int], dict[str, int]]:
-    """Drafts and labels."""
+def programs(
+    draw: st.DrawFn, on: Core, of: OperationSet = OPERATIONS
+) -> tuple[list[list[Instruction] | int], dict[str, int]]:
+    """Drafts and labels; where bundles may not straddle they are short enough for any extension words."""
     count = draw(st.integers(1, 12))
     labels = {f"l{k}": draw(st.integers(0, count - 1)) for k in range(3)}
     most = max(1, min(len(on.slots) + 1, on.words.group // 2))
-    bundles = st.lists(instructions(on, list(labels)), min_size=1, max_size=most)
+    bundles = st.lists(instructions(on, list(labels), of), min_size=1, max_size=most)
     drafts = draw(st.lists(st.one_of(bundles, st.integers(1, 60)), min_size=count, max_size=count))
     return drafts, labels

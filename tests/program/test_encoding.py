@@ -36,8 +36,6 @@ def again(on: Core, program: Program) -> Image:
 @given(data=st.data())
 def test_decoding_gives_back_what_was_encoded(on: Core, data: st.DataObject) -> None:
     drafts, labels = data.draw(programs(on))
-    if not on.words.straddle:
-        drafts = [d if isinstance(d, int) else d[: on.words.group // 2] for d in drafts]
     image = encode(on, OPERATIONS, drafts, labels)
     program = decode(on, OPERATIONS, image)
     position = 0
@@ -61,8 +59,6 @@ def test_decoding_gives_back_what_was_encoded(on: Core, data: st.DataObject) -> 
 def test_a_changed_word_is_refused_or_means_something_else(data: st.DataObject) -> None:
     on = data.draw(st.sampled_from(CORES))
     drafts, labels = data.draw(programs(on))
-    if not on.words.straddle:
-        drafts = [d if isinstance(d, int) else d[: on.words.group // 2] for d in drafts]
     image = encode(on, OPERATIONS, drafts, labels)
     words = list(image.words)
     words[data.draw(st.integers(0, len(words) - 1))] ^= 1 << data.draw(st.integers(0, on.words.bits - 1))
@@ -98,6 +94,16 @@ def test_a_long_immediate_takes_an_extension_word_and_a_short_one_does_not() -> 
         image = encode(PLAIN, OPERATIONS, [[add(1, 2, value)]], {})
         assert len(image.words) == words, value
         assert decode(PLAIN, OPERATIONS, image).bundles[0].instructions[0].places[2] == Immediate(value)
+
+
+def test_narrow_constants_have_fields_of_their_own() -> None:
+    places = (Register(3), Register(4), Immediate(31), Immediate(2**32 - 64))
+    image = encode(PLAIN, OPERATIONS, [[Instruction(BY_NAME["field"], 0, places)]], {})
+    assert image.words == (1 | 71 << 4 | 3 << 21 | 4 << 27 | 31 << 33 | 64 << 38,)
+    assert decode(PLAIN, OPERATIONS, image).bundles[0].instructions[0].places == places
+    beside = (Register(3), Immediate(2**31), Immediate(0), Immediate(63))
+    image = encode(PLAIN, OPERATIONS, [[Instruction(BY_NAME["field"], 0, beside)]], {})
+    assert decode(PLAIN, OPERATIONS, image).bundles[0].instructions[0].places == beside
 
 
 def test_half_immediates_are_sixteen_bits() -> None:
@@ -180,6 +186,10 @@ def test_what_no_word_can_say_is_refused_with_all_complaints() -> None:
         Instruction(ld, 0, (Register(3), Address(0, Mode.OFFSET, zero))),
         Instruction(BY_NAME["take"], 0, (zero, zero, zero)),
         Instruction(BY_NAME["mul.half"], 0, (zero, zero, Register(1, 1))),
+        Instruction(BY_NAME["field"], 0, (zero, zero, Immediate(32), Immediate(0))),
+        Instruction(BY_NAME["field"], 0, (zero, zero, Immediate(0), Immediate(2**32 - 65))),
+        Instruction(BY_NAME["field"], 0, (zero, zero, zero, Immediate(0))),
+        Instruction(BY_NAME["wide"], 0, (zero, Immediate(2**20))),
         jump("nowhere"),
     ]
     assert refused([bad], {}) == ["bad-place"] * len(bad)
@@ -235,6 +245,7 @@ LW = 1 | 130 << 4  # d 21, mode 27, base 29, step 35, immediate 41, of which a r
         ([1 | 65 << 4 | 48 << 27 | 1 << 56], ["bad-word: word 0 (byte 0): immediate 32768"]),
         ([1 | 200 << 4 | 48 << 21 | 4 << 27], ["target-nowhere: word 0 (byte 0): a branch to byte 4"]),
         ([1 | 1023 << 4 | 1 << 30], ["bad-word: word 0 (byte 0): 0x200 above bit 20"]),
+        ([1 | 72 << 4 | 1 << 47], ["bad-word: word 0 (byte 0): n = 0x100000"]),
         ([1, ADD], ["bad-padding: word 1 (byte 8): a bundle at word 1"]),
         ([ADD, 1], ["bad-padding: word 1 (byte 8): padding at the end"]),
         ([ADD ^ 1] * 64 + [ADD], ["bundle-too-long: word 0 (byte 0): 65 operations"]),

@@ -4,7 +4,10 @@ from __future__ import annotations
 
 import pytest
 
+from vliwsim.description.corefile import load_core
 from vliwsim.description.operations import Kind, OperationSet
+from vliwsim.description.places import isa_folder
+from vliwsim.description.tables import load_operations
 from vliwsim.problems import CoreError, OperationError
 from vliwsim.program.encoding.layout import layout, longest_idle
 from vliwsim.program.encoding.picture import picture
@@ -80,7 +83,7 @@ def test_words_too_narrow_name_the_widest_operation() -> None:
 
 def test_two_constants_are_one_too_many() -> None:
     bad = operation("bad", 5, Kind.COMPUTE, o("d", R), o("n", C), o("m", C))
-    with pytest.raises(OperationError, match="2 constant operands"):
+    with pytest.raises(OperationError, match="2 constant operands of more than 8 bits"):
         layout(PLAIN, OperationSet({"bad": bad}, {5: bad}, "")).check()
 
 
@@ -111,3 +114,15 @@ def test_an_address_beside_a_constant_has_a_register_step() -> None:
     odd = operation("odd", 6, Kind.LOAD, o("d", R), o("at", AD), o("n", C), o("s", S))
     shape = layout(core(128), OperationSet({"odd": odd}, {6: odd}, "")).format_of(odd)
     assert [p.immediate for p in shape.parts] == [False, False, True, False]
+
+
+@pytest.mark.parametrize("name", sorted(path.stem for path in (isa_folder() / "cores").glob("*.toml")))
+def test_every_operation_fits_every_shipped_core(name: str) -> None:
+    on = load_core(name)
+    of = layout(on, load_operations(on.operations))
+    of.check()
+    for shape in of.formats.values():
+        if shape.ring_immediate is not None:
+            assert shape.ring_immediate.width >= 5, "steps of a ring to 15 bytes need no extension word"
+            assert shape.immediate.width >= 10, "offsets to 511 bytes need no extension word"
+    assert len(picture(of).splitlines()) > len(of.header)

@@ -271,7 +271,7 @@ class _Reader:
             return self._address(part, part.address, shape)
         word, field = self.word, part.register
         if field is None:
-            return self._immediate(part)
+            return self._constant(part)
         number = word >> field.low & field.mask
         half = None if part.half is None else part.half.take(word)
         if part.immediate and number == self.layout.immediate_code:
@@ -302,6 +302,17 @@ class _Reader:
             self._register(fields.step, step)
             by = Register(step)
         return Address(base, Mode.AFTER if ring else MODES[mode], by, 1 << ring if ring else 0)
+
+    def _constant(self, part: Part) -> Immediate:
+        """A constant, from its own field or as the immediate."""
+        if part.constant is not None:
+            field, value = part.constant, part.constant.take(self.word)
+            negative = part.operand.type[0] == "i" and value >> field.width - 1
+            return Immediate(value - (1 << field.width) & 0xFFFFFFFF if negative else value)
+        found = self._immediate(part)
+        if not part.allows(found.value):
+            raise _Bad(f"{part.operand.name} = {found.value:#x}", f"a constant of type {part.operand.type}")
+        return found
 
     def _immediate(self, part: Part) -> Immediate:
         """The one immediate, from the short field or from the extension word, whichever it must be in."""

@@ -195,6 +195,9 @@ class _Encoder:
             if part.operand.pair and not self.layout.pair_starts[place.number]:
                 raise _Unsayable(f"pair {self.layout.core.register_names[place.number]}", "an even register")
             return
+        if part.constant is not None:
+            self._constant(word, part, place)
+            return
         if not part.immediate:
             raise _Unsayable(f"an immediate as {part.operand.name}", "a register")
         if word.value is not None or word.label is not None:
@@ -206,13 +209,22 @@ class _Encoder:
                 raise _Unsayable(f"label {place.name} is nowhere", "a label of the program")
             word.label = place.name
         else:
-            self._give(word, place, part.value_bits)
+            self._check(part, place)
+            word.value, word.value_bits = place.value, part.value_bits
+
+    def _constant(self, word: _Word, part: Part, place: Place) -> None:
+        """Put a constant into its own field."""
+        if not isinstance(place, Immediate) or part.constant is None:
+            raise _Unsayable(f"{place} as {part.operand.name}", "a constant")
+        self._check(part, place)
+        word.bits |= (place.value & part.constant.mask) << part.constant.low
 
     @staticmethod
-    def _give(word: _Word, place: Immediate, value_bits: int) -> None:
-        if not 0 <= place.value < 1 << value_bits:
-            raise _Unsayable(f"immediate {place.value}", f"a raw value of {value_bits} bits")
-        word.value, word.value_bits = place.value, value_bits
+    def _check(part: Part, place: Immediate) -> None:
+        if not 0 <= place.value < 1 << part.value_bits:
+            raise _Unsayable(f"immediate {place.value}", f"a raw value of {part.value_bits} bits")
+        if not part.allows(place.value):
+            raise _Unsayable(f"{place.value:#x} as {part.operand.name}", f"a constant of type {part.operand.type}")
 
     def _settle(self) -> list[int]:
         """Word index of every bundle, with every label's form chosen: short until it no longer fits, then extended.

@@ -19,6 +19,7 @@ register    the register's number; one code more, the number of registers, is *i
 half        0 the low half, 1 the high one; 0 beside an immediate
 mode        0 ``[base + step]``, 1 ``[base then +step]``, 2 ``[+step then base]``, 3 ``[base then +step in ring N]``
 ring        the base-2 logarithm of N, 1 to 31; it is there in mode 3 only, in the lowest bits of the immediate
+constant    a constant operand of a type of up to 8 bits: that many bits, unsigned or two's complement as the type says
 immediate   two's complement; 0 when the operation has none here
 """
 
@@ -37,6 +38,8 @@ CODE_BITS = 10
 IMMEDIATE_BITS = 32
 BEAT_BITS = 24
 RING_BITS = 5
+OWN_BITS = 8
+"""Constants of a type of up to so many bits have a field of their own; a wider one takes the immediate."""
 MOST_OPERATIONS = 64
 """The most operations a bundle may hold, legal or not."""
 
@@ -81,7 +84,7 @@ class AddressFields:
 
 @attrs.frozen
 class Part:
-    """The fields of one operand: a register, perhaps with a half; or an address; or, of a constant, none at all.
+    """The fields of one operand: a register, perhaps with a half; an address; a narrow constant; of a wide one none.
 
     ``immediate``: the register (or ``step``) field may hold the code for an immediate. ``value_bits``: width of an
     immediate given here, 16 or 32.
@@ -93,13 +96,23 @@ class Part:
     address: AddressFields | None = None
     immediate: bool = False
     value_bits: int = 32
+    constant: Field | None = None
+    limits: tuple[int, int] | None = None
+    """Of a constant, the least and greatest value of its type."""
+
+    def allows(self, value: int) -> bool:
+        """Whether a raw 32-bit value is one of the constant's type; of anything else, always."""
+        if self.limits is None:
+            return True
+        low, high = self.limits
+        return low <= (value - (1 << 32) if low < 0 and value >> 31 else value) <= high
 
     @property
     def fields(self) -> tuple[Field, ...]:
         """The part's fields from the low bits up."""
         if self.address is not None:
             return (self.address.mode, self.address.base, self.address.step)
-        return tuple(field for field in (self.register, self.half) if field is not None)
+        return tuple(field for field in (self.register, self.half, self.constant) if field is not None)
 
 
 @attrs.frozen
@@ -142,6 +155,17 @@ def slot_bits(core: Core) -> int:
 def longest_idle(core: Core) -> int:
     """The most beats one idle word counts: what the bits above the operation code hold, at most 2**24 - 1."""
     return (1 << min(BEAT_BITS, core.words.bits - 2 - slot_bits(core) - CODE_BITS)) - 1
+
+
+def constant_limits(operand: Operand) -> tuple[int, int]:
+    """Least and greatest value of a constant operand's type (``u5``, ``i32``)."""
+    bits = int(operand.type[1:])
+    return (0, (1 << bits) - 1) if operand.type[0] == "u" else (-1 << bits - 1, (1 << bits - 1) - 1)
+
+
+def takes_immediate(operand: Operand) -> bool:
+    """Whether a constant operand is the operation's one immediate, rather than in a field of its own."""
+    return operand.role is Role.CONSTANT and int(operand.type[1:]) > OWN_BITS
 
 
 @attrs.frozen(eq=False, slots=False)
@@ -211,14 +235,14 @@ class Layout:
 
     def _build(self, operation: Operation) -> Format:
         """A format whose operand fields may still reach beyond the word."""
-        constants = sum(operand.role is Role.CONSTANT for operand in operation.operands)
+        constants = sum(takes_immediate(operand) for operand in operation.operands)
         if constants > 1:
             raise OperationError(
                 problem(
                     "two-constants",
-                    f"{operation.name} has {constants} constant operands",
+                    f"{operation.name} has {constants} constant operands of more than {OWN_BITS} bits",
                     "one immediate an operation",
-                    "make one of them a register operand, or put both into one constant",
+                    "a narrower type for one of them, or a register operand",
                 )
             )
         low = self.guard.end
@@ -245,7 +269,10 @@ class Layout:
         immediate = may_be_immediate(operand) and not constant
         narrow, wide = (registers - 1).bit_length(), registers.bit_length()
         if operand.role is Role.CONSTANT:
-            return Part(operand, immediate=True)
+            limits = constant_limits(operand)
+            if takes_immediate(operand):
+                return Part(operand, immediate=True, limits=limits)
+            return Part(operand, constant=Field(operand.name, low, int(operand.type[1:])), limits=limits)
         if operand.role is Role.ADDRESS:
             mode = Field("mode", low, 2)
             base = Field("base", mode.end, narrow)
