@@ -99,6 +99,8 @@ CODE = [
     "@0 mul.half g1, 65536, g3.hi #~ immediate-range:17\n",
     "@0 mul.half g1, -32769, g3.hi #~ immediate-range:17\n",
     "@0 add g1, 1, 2 #~ two-immediates:15\n",
+    "@0 fieldu g1, g2, 3, 32 #~ immediate-range:22\n",
+    "@0 fieldu g1, g2, g3, 1 #~ constant-only:19\n",
     "@0 sw 1, [g2 + 4] #~ two-immediates:10\n",
     "@0 beq g1, 0, start #~ two-immediates:15\n",
     "@0 add g1, g2, 1 + #~ bad-expression:18\n",

@@ -11,6 +11,7 @@ import attrs
 from vliwsim.description.operations import Operand, Operation, Role
 from vliwsim.program.code import Address, Guard, Immediate, Label, Mode, Place, Register
 from vliwsim.program.effects import touched
+from vliwsim.program.encoding.layout import constant_limits, takes_immediate
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
 from vliwsim.program.source.tree import Call
@@ -25,7 +26,6 @@ _WORD = re.compile(r"[A-Za-z_][\w.]*\Z")
 _THEN = re.compile(r"(?<!\w)then(?!\w)")
 _RING = re.compile(r"(?<!\w)in\s+ring(?!\w)")
 _SUM = re.compile(r"\s*([A-Za-z_][\w.]*(?:\{[^}]*\})?)\s*([-+].*)?\Z")
-_INTEGER_TYPE = re.compile(r"([iu])(\d+)\Z")
 _WRITTEN = (Role.RESULT, Role.INOUT, Role.STICKY)
 
 
@@ -335,9 +335,11 @@ class OperandReader:
         """What concerns several operands at once: one immediate, no register twice among the results."""
         call, core = ready.call, self.scope.core
         immediates = 0
-        for place, piece in zip(ready.places, call.operands):
+        for operand, place, piece in zip(ready.operation.operands, ready.places, call.operands):
             kind = type(place)
-            immediate = kind is Immediate or kind is Label or (kind is Address and type(place.step) is Immediate)  # type: ignore[union-attr]
+            if kind is Register or (kind is Address and type(place.step) is Register):  # type: ignore[union-attr]
+                continue
+            immediate = operand.role is not Role.CONSTANT or takes_immediate(operand)
             immediates += immediate
             if immediate and immediates == 2:
                 found = f"a second immediate, {piece.text}"
@@ -356,16 +358,14 @@ class OperandReader:
 def immediate_range(operand: Operand) -> tuple[int, int, int]:
     """The least and the greatest immediate of an integer operand, and the mask of its raw bits.
 
-    Registers take any 32 bits, signed or unsigned, halves any 16; a constant keeps to its own type.
+    Whatever has 32 bits may be written signed or unsigned, and so may a half; a smaller constant keeps to its type.
     """
     if operand.half:
         return -(1 << 15), (1 << 16) - 1, 0xFFFF
-    match = _INTEGER_TYPE.match(operand.type) if operand.role is Role.CONSTANT else None
-    if match and int(match[2]) < 32:
-        bits = int(match[2])
-        low, high = (-(1 << bits - 1), (1 << bits - 1) - 1) if match[1] == "i" else (0, (1 << bits) - 1)
-        return low, high, 0xFFFFFFFF
-    return -(1 << 31), (1 << 32) - 1, 0xFFFFFFFF
+    low, high = constant_limits(operand) if operand.role is Role.CONSTANT else (-(1 << 31), (1 << 32) - 1)
+    if high - low >= (1 << 32) - 1:
+        low, high = -(1 << 31), (1 << 32) - 1
+    return low, high, 0xFFFFFFFF
 
 
 def operand_form(operand: Operand) -> str:
