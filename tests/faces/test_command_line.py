@@ -165,7 +165,7 @@ class TestGiving:
             (["x=1.5,2"], "holds floats"),
             (["x=nan,"], "holds floats"),
             (["x=70000,"], "x[0] = 70000"),
-            (["x=3"], "one dimension"),
+            (["trips=1,2"], "trips is computed by line 5"),
             (["y=3"], "has no y"),
             (["n=0"], "needs does not hold with n = 0"),
             (["n=-1"], "x would have -1 elements"),

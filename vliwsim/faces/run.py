@@ -94,6 +94,8 @@ class _Job:
         from vliwsim.kernel.interface import interface_of
         from vliwsim.kernel.reference import load_reference
 
+        arrays = {item.name for item in interface_of(kernel).arrays}
+        given = {n: [v] if n in arrays and isinstance(v, (int, float)) else v for n, v in given.items()}
         outputs = list(interface_of(kernel).outputs)
         targets = save_targets(options["save"], outputs, options["replace"])
         reference = None if options["no_reference"] else load_reference(kernel)

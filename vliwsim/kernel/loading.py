@@ -58,8 +58,8 @@ def _shipped(path: str) -> Path | None:
         return own if own.is_file() else found
     if len(parts) == 1:
         name = path if path.endswith(".vliw") else f"{path}.vliw"
-        matches = sorted(folder.glob(f"*/{name}")) if not set(name) & set("*?[]") else []
-        return matches[0] if matches else None
+        inside = (each / name for each in sorted(folder.iterdir()))
+        return next((source for source in inside if os.path.isfile(source)), None)
     return None
 
 
