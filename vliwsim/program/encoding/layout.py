@@ -26,6 +26,7 @@ immediate   two's complement; 0 when the operation has none here
 from __future__ import annotations
 
 from functools import cached_property, lru_cache
+from typing import NamedTuple
 
 import attrs
 
@@ -50,8 +51,7 @@ RING_MODE = 3
 """The code of :attr:`Mode.AFTER` in a ring."""
 
 
-@attrs.frozen
-class Field:
+class Field(NamedTuple):
     """``width`` bits of a word from bit ``low`` up."""
 
     name: str
@@ -73,8 +73,7 @@ class Field:
         return word >> self.low & self.mask
 
 
-@attrs.frozen
-class AddressFields:
+class AddressFields(NamedTuple):
     """The fields of an address operand, in this order."""
 
     mode: Field
