@@ -9,8 +9,10 @@ from pathlib import Path
 import pytest
 
 from vliwsim.description import corebuild, corelayers, coreparts, toml_places
+from vliwsim.description.corebuild import shipped_operations
 from vliwsim.description.corefile import load_core
 from vliwsim.description.places import isa_folder
+from vliwsim.description.tables import load_operations, validate
 from vliwsim.problems import CoreError
 
 TEXT = (isa_folder() / "README.md").read_text(encoding="utf-8")
@@ -45,6 +47,51 @@ def test_the_python_lines() -> None:
     names: dict[str, object] = {}
     exec(block("from vliwsim.description"), names)
     assert names["slower"].latency.classes == {"load": 5, "multiply": 4}  # type: ignore[attr-defined]
+
+
+def test_the_operation(tmp_path: Path) -> None:
+    (tmp_path / "mine.toml").write_text(block("[peak.fade]"))
+    (tmp_path / "my_core.toml").write_text(block('base       = "pair7"'))
+    core = load_core(str(tmp_path / "my_core.toml"))
+    operations = load_operations(core.operations)
+    assert not validate(load_operations(core.operations[-1:]))
+    assert operations.by_name["peak.fade"].compiled()(100, 64) == 100
+    assert operations.by_code[0x300].name == "peak.fade"
+
+
+@pytest.mark.parametrize(
+    ("operands", "does", "given", "expected"),
+    [
+        ("d:i16x2, a:i16x2, b:i16x2", "d[k] = sat(a[k] + b[k])", "[[1, 32767], [2, 1]]", "[[3, 32767]]"),
+        ("d:i64, a:i16x2, b:i16x2", "d = sum(a[k] * b[k] for k)", "[[1, -2], [3, 4]]", "[-5]"),
+        ("d:i32, a:i16x2", "d = a.re - a.im", "[[1, -2]]", "[3]"),
+        ("d:i16, a:i32", "d = sat(a, i16)", "[70000]", "[32767]"),
+        ("d:u8, a:i32", "d = usat(a, 8)", "[-5]", "[0]"),
+        ("d:i32, a:i32", "d = round(a, 1, half_even)", "[5]", "[2]"),
+        ("d:u32, a:u32, n:const u5", "d = bits(a, n, 4)", "[255, 6]", "[3]"),
+        ("d:i32, a:i32, b:i32", "d = trem(a, b) if b != 0 else a", "[-7, 2]", "[-1]"),
+        ("d:i32, a:i16.half, b:i16.half", "d = a * b", "[-3, 5]", "[-15]"),
+        ("d:i32, acc:inout i32, a:i32", "d = acc; acc = wrap(acc + a)", "[1, 2]", "[1, 3]"),
+        ("d:i32, f:sticky i32, a:i32", "d = sat(a + 1); f = 1 if a > 99 else 0", "[2147483647]", "[2147483647, 1]"),
+        ("d:f32, a:f32, b:f32", "d = fma(a, b, sqrt(a)) / b", "[4, 2]", "[5]"),
+        ("d:i32, a:f32", "d = float_to_int(a, i32, floor)", "[-1.5]", "[-2]"),
+        ("d:i32, at:address", "d = mem[at, i16]", "[65535]", "[-1]"),
+        ("a:i32, at:address", "mem[at, i16] = wrap(a, 16)", "[65537]", "[1]"),
+        ("a:i32, b:i32, to:target", "taken = a < b", "[1, 2]", "[1]"),
+        ("d:u32, to:target", "d = link; taken = 1 == 1", "[64]", "[64, 1]"),
+        ("d:u32, a:u32", "x = a & 255; d = iterate(3, x, (x << 1) & 255)", "[200]", "[64]"),
+    ],
+)  # fmt: skip
+def test_the_forms_of_the_tables(tmp_path: Path, operands: str, does: str, given: str, expected: str) -> None:
+    file = tmp_path / "mine.toml"
+    lines = [f"operands = '{operands}'", f"does = '{does}'", f"examples = [[{given}, {expected}]]"]
+    file.write_text("[own]\ncode = 0x301\nclass = 'own'\nsummary = 'x'\n" + "\n".join(lines))
+    assert not validate(load_operations([str(file)]))
+
+
+def test_codes_left_to_users_are_free() -> None:
+    for family in shipped_operations():
+        assert max(load_operations([family]).by_code) < 0x300
 
 
 def test_the_mistake(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
