@@ -13,13 +13,16 @@ from vliwsim.program.source.expressions import RESERVED, Formula, formula
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.tree import Let, Name
 
+CLASSES = ("arithmetic", "shift", "multiply", "divide", "load", "store", "control", "float", "float_divide")
+"""The classes of the shipped operations; a core's own stand in its slots and latencies."""
+
 _LATENCY_OF = re.compile(r"latency\(\s*([\w.]+)\s*\)")
 
 
 def latencies(core: Core, operations: OperationSet) -> dict[str, object]:
     """Beats by operation class, with ``update`` and ``branch``."""
-    classes = {operation.operation_class for operation in operations.by_name.values()}
-    classes |= {"update", *core.latency.classes}
+    # from the core alone: asking every operation for its class would build them all
+    classes = {*CLASSES, "update", *core.latency.classes, *(name for slot in core.slots for name in slot.classes)}
     found: dict[str, object] = {name: core.latency.of_class(name) for name in sorted(classes)}
     found["branch"] = core.branch.latency
     return found
