@@ -12,27 +12,49 @@ def fold(x: int, bits: int) -> int:
     return (x + 2 ** (bits - 1)) % 2**bits - 2 ** (bits - 1)
 
 
+LIMITED: set[str] = set()
+"""Sides on which something was limited since it was last cleared."""
+
+
 def limit(x: int, bits: int) -> int:
     """The number nearest to x in two's complement range."""
-    return sorted((-(2 ** (bits - 1)), x, 2 ** (bits - 1) - 1))[1]
+    return _between(-(2 ** (bits - 1)), x, 2 ** (bits - 1) - 1)
 
 
 def limitu(x: int, bits: int) -> int:
-    return sorted((0, x, 2**bits - 1))[1]
+    """The number nearest to x in unsigned range."""
+    return _between(0, x, 2**bits - 1)
+
+
+def _between(low: int, x: int, high: int) -> int:
+    if x < low or x > high:
+        LIMITED.add("below" if x < low else "above")
+    return sorted((low, x, high))[1]
 
 
 def down(x: Fraction | int) -> int:
     return math.floor(x)
 
 
+TIES: list[Fraction] = []
+"""What was rounded to nearest and lay exactly between two integers, since it was last cleared."""
+
+
 def nearest(x: Fraction | int) -> int:
     """Ties up."""
+    _note(Fraction(x))
     return math.floor(Fraction(x) + Fraction(1, 2))
 
 
 def even(x: Fraction | int) -> int:
     """Ties to even: Python's own round, which is exact on fractions."""
+    _note(Fraction(x))
     return round(Fraction(x))
+
+
+def _note(x: Fraction) -> None:
+    if x.denominator == 2:
+        TIES[:] = [*TIES[-9:], x]
 
 
 def over(x: int, bits: int) -> Fraction:

@@ -11,8 +11,8 @@ import random
 import struct
 from collections.abc import Callable, Iterator, Mapping
 
-from vliwsim.description.language.types import ValueType, type_named
-from vliwsim.description.operations import Kind, Operation, OperationSet, Role
+from vliwsim.description.language.types import ValueType
+from vliwsim.description.operations import Kind, Operation, OperationSet
 from vliwsim.description.tables import load_operations
 
 FAMILIES = ("integer", "fixed", "packed", "bits", "memory", "control", "float")
@@ -35,21 +35,12 @@ def operation(name: str) -> Operation:
     return operations().by_name[name]
 
 
-def types(found: Operation, names: tuple[str, ...]) -> list[ValueType]:
-    """The type of each of an operation's inputs or outputs."""
-    known = {operand.name: type_named(operand.type) for operand in found.operands}
-    known |= {"link": type_named("u32"), "taken": ValueType("truth", 1, False)}
-    if found.access is not None:
-        known["loaded"] = known["stored"] = type_named(found.access.type)
-    return [known[name] for name in names]
-
-
 def float_bits(number: float) -> int:
     return int(struct.unpack("<I", struct.pack("<f", number))[0])
 
 
-def raw(kind: ValueType, value: object, extended: int | None = None) -> int:
-    """The register bits (of ``extended`` bits, if a narrow scalar) of a value written as in a table's examples."""
+def raw(kind: ValueType, value: object) -> int:
+    """The bits of a value written as in a table's examples."""
     if kind.packed:
         assert isinstance(value, (list, tuple))
         assert len(value) == kind.lanes
@@ -58,18 +49,13 @@ def raw(kind: ValueType, value: object, extended: int | None = None) -> int:
         if isinstance(value, str):
             return _NAMED[value] if value in _NAMED else int(value, 16)
         return float_bits(value) if isinstance(value, float) else int(str(value))
-    return raw_lane(kind, value) if extended is None else int(str(value)) & (1 << extended) - 1
+    return raw_lane(kind, value)
 
 
 def raw_lane(kind: ValueType, value: object) -> int:
     assert type(value) is int, value
     assert kind.low <= value < 1 << kind.bits, (kind.name, value)
     return value & (1 << kind.bits) - 1
-
-
-def register(kind: ValueType, value: object) -> int:
-    """The raw value of a whole register or pair: a narrow scalar is extended by its sign."""
-    return raw(kind, value, None if kind.packed or kind.floating else max(32, kind.bits))
 
 
 def read(kind: ValueType, bits: object) -> object:
@@ -83,7 +69,7 @@ def read(kind: ValueType, bits: object) -> object:
 def by_value(name: str, slow: bool = False) -> Callable[..., object]:
     """The operation as a function of values; several outputs come as a tuple."""
     found = operation(name)
-    given, made = types(found, found.inputs), types(found, found.outputs)
+    given, made = found.meaning.input_types.values(), found.meaning.output_types.values()
     fast = found.compiled()
 
     def run(*values: object) -> object:
@@ -116,30 +102,39 @@ def extremes(kind: ValueType) -> list[int]:
 
 
 def draw(kind: ValueType, chance: random.Random) -> object:
-    """A random value: uniform, of random length, or extreme."""
+    """A random value: uniform, of random length, with low zeros (for ties), or extreme."""
     lanes = []
     for _ in range(kind.lanes):
-        way = chance.randrange(3)
+        way = chance.randrange(4)
         if way == 0:
             lanes.append(chance.randint(kind.low, kind.high))
         elif way == 1:
             length = chance.randrange(kind.bits + 1)
             lanes.append(kind.value(chance.getrandbits(kind.bits) >> length if chance.random() < 0.5 else
                                     ~(chance.getrandbits(kind.bits) >> length)))  # fmt: skip
+        elif way == 2:
+            lanes.append(kind.value((chance.getrandbits(kind.bits) | 1) << chance.randrange(kind.bits)))
         else:
             lanes.append(chance.choice(extremes(kind)))
     return tuple(lanes) if kind.packed else lanes[0]
 
 
 def inputs(found: Operation, count: int) -> Iterator[tuple[object, ...]]:
-    """Combinations of extremes (a random part of them where there are many), then random values."""
-    kinds = types(found, found.inputs)
+    """Combinations of extremes (a random part of them where there are many), limits in all lanes, random values."""
+    kinds = list(found.meaning.input_types.values())
     chance = random.Random(found.name)
     if not any(kind.packed for kind in kinds):
         grid = list(itertools.product(*(extremes(kind) for kind in kinds)))
-        yield from grid if len(grid) <= 2 * count else chance.sample(grid, 2 * count)
-    for _ in range(count):
-        yield tuple(draw(kind, chance) for kind in kinds)
+        yield from grid if len(grid) <= 4 * count else chance.sample(grid, 4 * count)
+    for number in range(count):
+        at_limits = number % 3 == 0 and any(kind.packed for kind in kinds)
+        yield tuple(limits(kind, chance) if at_limits else draw(kind, chance) for kind in kinds)
+
+
+def limits(kind: ValueType, chance: random.Random) -> object:
+    """The lowest or highest value in every lane."""
+    lanes = tuple(chance.choice((kind.low, kind.high)) for _ in range(kind.lanes))
+    return lanes if kind.packed else lanes[0]
 
 
 def check(name: str, model: Model, count: int = 300) -> None:
@@ -155,7 +150,3 @@ def check(name: str, model: Model, count: int = 300) -> None:
 def covered(models: Mapping[str, Model], *families: str) -> None:
     """Every operation of the families has a model."""
     assert sorted(models) == sorted(names(*families))
-
-
-def sources(name: str) -> list[str]:
-    return [o.type for o in operation(name).operands if o.role in (Role.SOURCE, Role.INOUT)]

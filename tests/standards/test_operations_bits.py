@@ -69,7 +69,7 @@ MODELS: dict[str, Model] = {
     "fieldu": lambda a, n, m: int(cut(a, n, m), 2),
     "insert": inserted,
     "mask": lambda a: int("0" + "1" * min(a, 32), 2),
-    "merge": lambda m, a, b: int("".join(y if x == "1" else z for x, y, z in zip(*map(binary, (m, a, b)), strict=True)), 2),
+    "merge": lambda m, a, b: int("".join((z, y)[int(x)] for x, y, z in zip(*map(binary, (m, a, b)), strict=True)), 2),
     "funnel": lambda a, b, c: int((binary(a) + binary(b))[32 - c % 32 : 64 - c % 32], 2),
     "reverse": lambda a: int(binary(a)[::-1], 2),
     "reverse.low": lambda a, b: int("0" + binary(a)[::-1][: b % 32], 2),
@@ -110,6 +110,12 @@ def through(name: str, start: int, data: list[int], *more: int) -> int:
     return start
 
 
+def in_words(frame: bytes) -> tuple[list[int], list[int]]:
+    """The whole words of a frame, least significant byte first, and the bytes left over."""
+    whole = len(frame) // 4 * 4
+    return [int.from_bytes(frame[k : k + 4], "little") for k in range(0, whole, 4)], list(frame[whole:])
+
+
 CHECKS = {
     "crc32.byte": (0xFFFFFFFF, 0xFFFFFFFF, 0xCBF43926),
     "crc32c.byte": (0xFFFFFFFF, 0xFFFFFFFF, 0xE3069283),
@@ -136,8 +142,7 @@ def test_crc32c_of_the_published_frames() -> None:
         (bytes(reversed(range(32))), 0x113FDB5C),
     ):
         assert through("crc32c.byte", 0xFFFFFFFF, list(frame)) ^ 0xFFFFFFFF == want
-        words = [int.from_bytes(frame[k : k + 4], "little") for k in range(0, 32, 4)]
-        assert through("crc32c.word", 0xFFFFFFFF, words) ^ 0xFFFFFFFF == want
+        assert through("crc32c.word", 0xFFFFFFFF, in_words(frame)[0]) ^ 0xFFFFFFFF == want
 
 
 @pytest.mark.parametrize("frame", FRAMES, ids=lambda frame: f"{len(frame)}-bytes")
@@ -146,28 +151,25 @@ def test_crc32_of_frames_by_every_way_is_zlibs(frame: bytes) -> None:
     want = zlib.crc32(frame)
     assert through("crc32.byte", 0xFFFFFFFF, list(frame)) ^ 0xFFFFFFFF == want
     assert through("crc.byte", 0xFFFFFFFF, list(frame), 0xEDB88320) ^ 0xFFFFFFFF == want
-    whole = len(frame) // 4 * 4
-    register = through("crc32.word", 0xFFFFFFFF, [int.from_bytes(frame[k : k + 4], "little") for k in range(0, whole, 4)])
-    assert through("crc32.byte", register, list(frame[whole:])) ^ 0xFFFFFFFF == want
+    words, rest = in_words(frame)
+    register = through("crc32.word", 0xFFFFFFFF, words)
+    assert through("crc32.byte", register, rest) ^ 0xFFFFFFFF == want
     assert by_products(frame) == want
 
 
 def by_products(frame: bytes) -> int:
-    """CRC-32 with clmul, clmulr and rev8-free Barrett reduction on bit-reflected words.
+    """CRC-32 a word at a time by Barrett's reduction: the quotient by a product with mu = x**64 / P, then one with P.
 
-    V. Gopal and others, "Fast CRC computation for generic polynomials using PCLMULQDQ instruction", 2009: the quotient
-    comes from a product with mu = x**64 / P, the remainder from one with P.
+    From memory of the literature on CRCs by carry-less products (published 2009). All is bit-reflected, so the quotient
+    is the low half of the first product and the remainder the high half of the second; bit 32 of P is its x**0.
     """
-    low, high, right = (cast("Model", operation(name).compiled()) for name in ("clmul", "clmulh", "clmulr"))
+    low, high = (cast("Model", operation(name).compiled()) for name in ("clmul", "clmulh"))
     register = 0xFFFFFFFF
-    whole = len(frame) // 4 * 4
-    for k in range(0, whole, 4):
-        a = register ^ int.from_bytes(frame[k : k + 4], "little")
-        # Reflected: a's product with the reflected mu, its low 32 bits, times the reflected P; the high half is left.
-        quotient = low(a, MU & 0xFFFFFFFF)
-        register = high(quotient, P & 0xFFFFFFFF) ^ (quotient if P >> 32 else 0)
-        assert right(quotient, 1) == quotient >> 31
-    return through("crc32.byte", register, list(frame[whole:])) ^ 0xFFFFFFFF
+    words, rest = in_words(frame)
+    for value in words:
+        quotient = low(register ^ value, MU & 0xFFFFFFFF)
+        register = high(quotient, P & 0xFFFFFFFF) ^ quotient
+    return through("crc32.byte", register, rest) ^ 0xFFFFFFFF
 
 
 def reflected(x: int, bits: int) -> int:

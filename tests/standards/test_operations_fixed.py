@@ -6,8 +6,10 @@ import random
 
 import pytest
 
+from vliwsim.description.language.types import type_named
+
 from .exact import down, even, fold, limit, nearest, over, spare
-from .shipped import Model, by_value, check, covered, extremes, type_named
+from .shipped import Model, by_value, check, covered, extremes
 
 TOP, BOTTOM = 2**31 - 1, -(2**31)
 
@@ -193,13 +195,3 @@ def test_headroom_is_norm_l() -> None:
     sizes = [chance.randint(0, TOP) >> chance.randrange(31) for _ in range(500)]
     for x in [*extremes(type_named("i32")), *sizes, *(-size for size in sizes)]:
         assert by_value("headroom")(x) == (norm_l(x) if x else 31)
-
-
-def test_the_flag_of_a_pair_of_operations_is_sticky_by_declaration() -> None:
-    from vliwsim.description.operations import Role
-
-    from .shipped import names, operation
-
-    for name in names("fixed", "packed"):
-        roles = [operand.role for operand in operation(name).operands]
-        assert (Role.STICKY in roles) == name.endswith(".flag")

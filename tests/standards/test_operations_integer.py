@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 
-from .exact import binary, down, fold
+from .exact import binary, down, fold, limit, limitu, nearest, over
 from .shipped import Model, by_value, check, covered
 
 WORDS = 2**32
@@ -21,12 +21,19 @@ def turned_left(a: int, b: int) -> int:
     return int(text[b % 32 :] + text[: b % 32], 2)
 
 
+def bitwise(table: str) -> Model:
+    """A function of bits, by its results for 00, 01, 10, 11."""
+    return lambda a, b: fold(
+        int("".join(table[int(x + y, 2)] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32
+    )
+
+
 INTEGER: dict[str, Model] = {
     "add": lambda a, b: fold(a + b, 32),
     "sub": lambda a, b: fold(a - b, 32),
-    "and": lambda a, b: fold(int("".join("01"[x + y == "11"] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32),
-    "or": lambda a, b: fold(int("".join("01"[x + y != "00"] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32),
-    "xor": lambda a, b: fold(int("".join("01"[x != y] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32),
+    "and": bitwise("0001"),
+    "or": bitwise("0111"),
+    "xor": bitwise("0110"),
     "sll": lambda a, b: fold(a * 2 ** (b % 32), 32),
     "srl": lambda a, b: a // 2 ** (b % 32),
     "sra": lambda a, b: a // 2 ** (b % 32),
@@ -40,9 +47,9 @@ INTEGER: dict[str, Model] = {
     "divu": lambda a, b: WORDS - 1 if b == 0 else a // b,
     "rem": lambda a, b: a if b == 0 else a - quotient(a, b) * b,
     "remu": lambda a, b: a if b == 0 else a % b,
-    "andn": lambda a, b: fold(int("".join("01"[x + y == "10"] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32),
-    "orn": lambda a, b: fold(int("".join("01"[x + y != "01"] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32),
-    "xnor": lambda a, b: fold(int("".join("01"[x == y] for x, y in zip(binary(a), binary(b), strict=True)), 2), 32),
+    "andn": bitwise("0010"),
+    "orn": bitwise("1011"),
+    "xnor": bitwise("1001"),
     "clz": lambda a: 32 - a.bit_length(),
     "ctz": lambda a: 32 if a == 0 else len(binary(a)) - len(binary(a).rstrip("0")),
     "cpop": lambda a: binary(a).count("1"),
@@ -80,7 +87,7 @@ INTEGER: dict[str, Model] = {
 
 MEMORY: dict[str, Model] = {
     **{name: lambda loaded: loaded for name in ("lb", "lbu", "lh", "lhu", "lw", "ld")},
-    "lb.h2": lambda loaded: (fold(loaded, 8), fold(down(loaded / 256), 8)),
+    "lb.h2": lambda loaded: (fold(loaded, 8), fold(down(over(loaded, 8)), 8)),
     "lbu.h2": lambda loaded: (loaded % 256, loaded // 256),
     "lh.q31": lambda loaded: loaded * 65536,
     "lh.h2": lambda loaded: (loaded, loaded),
@@ -89,9 +96,9 @@ MEMORY: dict[str, Model] = {
     "sw": lambda a: a,
     "sd": lambda a: a,
     "sh.half": lambda a: a,
-    "sb.h2.sat": lambda a: sum(max(-128, min(127, x)) % 256 * 256**k for k, x in enumerate(a)),
-    "sbu.h2.sat": lambda a: sum(max(0, min(255, x)) * 256**k for k, x in enumerate(a)),
-    "sh.q31.rnd.sat": lambda a: min((a + 32768) // 65536, 32767),
+    "sb.h2.sat": lambda a: sum(limit(x, 8) % 256 * 256**k for k, x in enumerate(a)),
+    "sbu.h2.sat": lambda a: sum(limitu(x, 8) * 256**k for k, x in enumerate(a)),
+    "sh.q31.rnd.sat": lambda a: limit(nearest(over(a, 16)), 16),
 }
 
 CONTROL: dict[str, Model] = {
@@ -136,7 +143,7 @@ def test_division_by_zero_and_overflow() -> None:
 
 
 def test_dividend_is_quotient_times_divisor_plus_remainder() -> None:
-    """RISC-V unprivileged ISA, chapter "M": dividend = divisor × quotient + remainder, the remainder's sign the dividend's."""
+    """RISC-V unprivileged ISA, chapter "M": dividend = divisor × quotient + remainder, with the dividend's sign."""
     for a in (7, -7, 0, 2**31 - 1, LOWEST, LOWEST + 1):
         for b in (1, 2, -2, 3, -3, 2**31 - 1, LOWEST):
             q, r = by_value("div")(a, b), by_value("rem")(a, b)
