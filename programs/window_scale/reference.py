@@ -24,5 +24,6 @@ def cases(generated):
     yield "clipped", {"x": frame, "gain": headroom + 2}
     for name, inputs in generated:
         yield name, inputs
-        for gain in (0, 1, 15):
-            yield f"{name}-gain-{gain}", {**inputs, "gain": gain}
+        if len(inputs["x"]) < 100:
+            for gain in (0, 1, 15):
+                yield f"{name}-gain-{gain}", {**inputs, "gain": gain}
