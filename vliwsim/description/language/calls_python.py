@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING
 
 from vliwsim.description.language.text import Text, literal, mask
-from vliwsim.description.language.tree import FLOAT, Call, Input, Local, Node, Number
+from vliwsim.description.language.tree import FLOAT, Call, Fit, Input, Local, Node, Number
 
 if TYPE_CHECKING:
     from vliwsim.description.language.compile_python import Writer
@@ -28,7 +28,7 @@ def _named(name: str) -> Callable[[Writer, Call, int | None], Text]:
 
 def _clz(writer: Writer, node: Call, width: int | None) -> Text:
     (bits,) = _patterns(writer, node)
-    return Text(f"{node.arguments[0].pattern or 1} - {bits.inner}.bit_length()")
+    return Text(f"{node.arguments[0].pattern or 1} - ({bits.code}).bit_length()")
 
 
 def _ctz(writer: Writer, node: Call, width: int | None) -> Text:
@@ -39,7 +39,7 @@ def _ctz(writer: Writer, node: Call, width: int | None) -> Text:
 
 def _popcount(writer: Writer, node: Call, width: int | None) -> Text:
     (bits,) = _patterns(writer, node)
-    return Text(f"{bits.inner}.bit_count()", True)
+    return Text(f"({bits.code}).bit_count()", True)
 
 
 def _clmul(writer: Writer, node: Call, width: int | None) -> Text:
@@ -119,7 +119,7 @@ def _round(writer: Writer, node: Call, width: int | None) -> Text:
             else f"({first} + ({name} >> {n} & 1)) >> {n}"
         )
     if value.interval.low >= 0:
-        return Text(f"({made.bare} + {literal(half if node.mode == 'half_away' else 0)}) >> {n}")
+        return Text(f"{made.plus(half if node.mode == 'half_away' else 0).closed} >> {n}")
     if node.mode == "half_away":
         return Text(f"({name} + {literal(half)}) >> {n} if {first} >= 0 else -(({literal(half)} - {name}) >> {n})")
     return Text(f"{name} >> {n} if {first} >= 0 else -(-{name} >> {n})")
@@ -146,9 +146,9 @@ def _bits(writer: Writer, node: Call, width: int | None) -> Text:
     plain = value.kind == "integer"
     if plain and value.interval.within(0, (1 << top) - 1):
         made = writer.value(value)
-        return Text(f"{made.closed} >> {low.value}") if low.value else made.settled().copied(count.value // 8)
+        return Text(f"{made.closed} >> {low.value}") if low.value else made.settled().copied(count.value)
     if low.value == 0:
-        return writer.raw(value, top).copied(top // 8) if plain or top >= 32 else _masked(writer.value(value), 0, top)
+        return writer.raw(value, top).copied(top) if plain or top >= 32 else _masked(writer.value(value), 0, top)
     return _masked(writer.modulo(value, top) if plain else writer.value(value), low.value, count.value)
 
 
@@ -166,7 +166,7 @@ def _concat(writer: Writer, node: Call, width: int | None) -> Text:
     terms, at = [], 0
     for argument in reversed(node.arguments):
         size = argument.pattern or 1
-        if not (argument.interval.low == argument.interval.high == 0 and argument.kind == "integer"):
+        if not _zero(argument):
             made = writer.raw(argument, size)
             terms.append(Text(f"{made.inner} << {at}") if at else made)
         at += size
@@ -175,6 +175,11 @@ def _concat(writer: Writer, node: Call, width: int | None) -> Text:
     if len(terms) == 1:
         return terms[0].computed()
     return Text(" | ".join(term.inner for term in reversed(terms)))
+
+
+def _zero(node: Node) -> bool:
+    """Is it the literal 0, with a width or without?"""
+    return (isinstance(node, Number) and node.value == 0) or (isinstance(node, Fit) and _zero(node.operand))
 
 
 def _reread(writer: Writer, node: Call, width: int | None) -> Text:
@@ -186,7 +191,7 @@ def _raw_reread(writer: Writer, node: Call, width: int) -> Text | None:
     bits = node.pattern or 1
     if width > bits and node.signed:
         return None
-    return writer.raw(node.arguments[0], min(bits, width)).copied(min(bits, width) // 8)
+    return writer.raw(node.arguments[0], min(bits, width)).copied(min(bits, width))
 
 
 def _float_to_int(writer: Writer, node: Call, width: int | None) -> Text:

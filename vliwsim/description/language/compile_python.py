@@ -121,7 +121,7 @@ class Writer:
             made = self.value(assign.value)
         else:
             width = storage(assign.output, kind, assign.lane)
-            made = self.raw(assign.value, width).copied(width // 8)
+            made = self.raw(assign.value, width).copied(width)
             if made.passes == SOME:
                 made = Text(f"{made.inner} + 0")
             self.stored[variable], self.passes[variable] = width, made.passes
@@ -320,7 +320,7 @@ class Writer:
     def fit(self, node: Fit, width: int | None) -> Text:
         if node.operand.interval.within(node.low, node.high):
             made = self.modulo(node.operand, width)
-            return made.copied(node.bits // 8) if node.how == "wrap" else made.computed()
+            return made.copied(node.bits) if node.how == "wrap" else made.computed()
         if node.how == "sat":
             return self.saturated(node, None)
         return self.reread(node.operand, node.bits, node.to_signed and node.signed, width)
@@ -328,18 +328,18 @@ class Writer:
     def raw_fit(self, node: Fit, width: int) -> Text | None:
         if node.operand.interval.within(node.low, node.high):
             made = self.raw(node.operand, width)
-            return made.copied(node.bits // 8) if node.how == "wrap" else made.computed()
+            return made.copied(node.bits) if node.how == "wrap" else made.computed()
         if node.how == "sat":
             return self.saturated(node, width)
         if width <= node.bits:
-            return self.raw(node.operand, width).copied(width // 8)
-        return None if node.to_signed else self.raw(node.operand, node.bits).copied(node.bits // 8)
+            return self.raw(node.operand, width).copied(width)
+        return None if node.to_signed else self.raw(node.operand, node.bits).copied(node.bits)
 
     def reread(self, operand: Node, bits: int, signed: bool, width: int | None) -> Text:
         """The low ``bits`` of a value as a number."""
         if width is not None and width <= bits:
-            return self.modulo(operand, width).copied(bits // 8)
-        made = self.raw(operand, bits).copied(bits // 8)
+            return self.modulo(operand, width).copied(bits)
+        made = self.raw(operand, bits).copied(bits)
         return _signed(made, bits) if signed else made
 
     def saturated(self, node: Fit, width: int | None) -> Text:
@@ -361,10 +361,10 @@ class Writer:
         rest = Text(name, True, made.offset)
         if width is None:
             return Text(code + rest.bare)
-        negative = inside.low < 0 and node.low < 0
+        in_range = max(inside.low, node.low) >= 0 and min(inside.high, node.high) >> width == 0
         offset = made.offset & (1 << width) - 1
         shown = f"({name} + {literal(offset)})" if offset else name
-        return Text(code + (f"{shown} & {mask(width)}" if negative else rest.bare))
+        return Text(code + (rest.bare if in_range else f"{shown} & {mask(width)}"))
 
     # Iteration and calls
 

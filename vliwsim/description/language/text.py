@@ -47,9 +47,9 @@ class Text:
         """The same value with no offset."""
         return Text(self.bare) if self.offset else self
 
-    def copied(self, size: int) -> Text:
-        """As a copy of ``size`` bytes: undefined values of another size are none."""
-        return self.computed() if self.passes - {size} else self
+    def copied(self, bits: int) -> Text:
+        """As a copy of ``bits``: undefined values of another size are none."""
+        return self.computed() if self.passes - {bits // 8 if bits % 8 == 0 else 0} else self
 
     def computed(self) -> Text:
         """As a computed value, which passes on no undefined value as a copy."""
