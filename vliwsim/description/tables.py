@@ -11,6 +11,7 @@ import hashlib
 import re
 from collections.abc import Iterator, Mapping, Sequence
 from pathlib import Path
+from typing import Any
 
 import attrs
 
@@ -85,17 +86,17 @@ class _Row:
         return Origin(self.file.path, self.name, place.line, place.column)
 
 
-class _Lazy(Mapping):  # type: ignore[type-arg]
+class _Lazy(Mapping[Any, Operation]):
     """Operations by name or code, each built when first asked for."""
 
     def __init__(self, rows: Mapping[object, _Row]) -> None:
         self._rows = rows
 
-    def __getitem__(self, key: object) -> Operation:
+    def __getitem__(self, key: Any) -> Operation:
         row = self._rows[key]
         return row.built or _build(row)
 
-    def __iter__(self) -> Iterator[object]:
+    def __iter__(self) -> Iterator[Any]:
         return iter(self._rows)
 
     def __len__(self) -> int:

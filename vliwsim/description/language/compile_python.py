@@ -144,12 +144,12 @@ class Writer:
     def raw(self, node: Node, width: int) -> Text:
         """Code for the low ``width`` bits as an unsigned number."""
         if node.kind in (FLOAT, PACKED):
-            made = self.value(node)
-            return made if width >= (node.pattern or 32) else Text(f"{made.inner} & {mask(width)}")
+            whole = self.value(node)
+            return whole if width >= (node.pattern or 32) else Text(f"{whole.inner} & {mask(width)}")
         special = _RAW.get(type(node))
-        made = special(self, node, width) if special else None
-        if made is not None:
-            return made
+        found = special(self, node, width) if special else None
+        if found is not None:
+            return found
         if node.interval.within(0, (1 << width) - 1):
             return self.value(node).settled()
         made = self.modulo(node, width)

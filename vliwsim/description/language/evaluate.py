@@ -46,7 +46,7 @@ _INTEGER_OPERATORS: Mapping[str, Callable[[int, int], int]] = {
 _FLOAT_OPERATORS: Mapping[str, Callable[[int, int], int]] = {
     "+": floats.add, "-": floats.subtract, "*": floats.multiply, "/": floats.divide,
 }  # fmt: skip
-_COMPARISONS: Mapping[str, Callable[[object, object], bool]] = {
+_COMPARISONS: Mapping[str, Callable[[float, float], bool]] = {
     "==": operator.eq, "!=": operator.ne, "<": operator.lt, "<=": operator.le, ">": operator.gt, ">=": operator.ge,
 }  # fmt: skip
 

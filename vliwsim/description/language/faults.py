@@ -8,6 +8,9 @@ import attrs
 
 from vliwsim.problems import Place, Problem
 
+REPEATED = "repeated"
+"""Name of a fault that only follows from another, already told."""
+
 
 class Fault(Exception):
     """A mistake at ``line`` and ``column`` (from 1) of the text it is in; ``part`` is ``does`` or ``operands``."""

@@ -213,7 +213,7 @@ class Fit(Node):
 
 @attrs.define(eq=False)
 class Call(Node):
-    """A built-in function; see :data:`~vliwsim.description.language.parse.FUNCTIONS` for them and their arguments.
+    """A built-in function; :data:`~vliwsim.description.language.expressions.FUNCTIONS` has them and their arguments.
 
     ``mode``: of ``round`` and ``float_to_int``, the rounding. ``to``: the integer type ``float_to_int`` gives.
     """

@@ -9,6 +9,8 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping, Sequence
 
 from vliwsim.description.language.check import ranges
+from vliwsim.description.language.check.demands import HIGHEST, LOWEST, article, bounds_of, fault_of
+from vliwsim.description.language.check.functions import CALLS, Functions
 from vliwsim.description.language.check.refine import Known, key_of, refine
 from vliwsim.description.language.faults import Fault, Faults
 from vliwsim.description.language.tree import (
@@ -35,8 +37,6 @@ from vliwsim.description.language.tree import (
 )
 from vliwsim.description.language.types import LONGEST, ValueType
 
-_LOWEST, _HIGHEST = -(1 << LONGEST - 1), (1 << LONGEST) - 1
-_SHIFTS = Interval(0, LONGEST - 1)
 _TRUE = Interval(0, 1)
 _FLOAT_OPERATORS = ("+", "-", "*", "/")
 
@@ -68,7 +68,9 @@ def _without_repeats(faults: list[Fault]) -> list[Fault]:
     return list(seen.values())
 
 
-class _Checker:
+class _Checker(Functions):
+    """Visits one statement."""
+
     def assign(self, assign: Assign) -> None:
         self.visit(assign.value, {})
         value, variable, kind = assign.value, assign.variable, assign.variable.type
@@ -83,7 +85,7 @@ class _Checker:
         else:
             self.integer(value, f"a result of type {kind.name}")
             if not value.interval.within(kind.low, kind.high):
-                raise _fault(value, "may-not-fit", f"values from {value.interval} for {_shown(assign)}",
+                raise fault_of(value, "may-not-fit", f"values from {value.interval} for {_shown(assign)}",
                              f"{kind.low} to {kind.high} ({kind.name})",
                              f"wrap({'…'}) or sat({'…'})")  # fmt: skip
             variable.kind, variable.pattern = INTEGER, kind.bits
@@ -96,51 +98,17 @@ class _Checker:
         same_lanes = want != PACKED or all(_lanes(leaf) in (kind.lanes, None) for leaf in _leaves(value))
         if not (value.kind == want and same_lanes or (value.kind == INTEGER and bits)):
             allowed = "a float" if kind.floating else f"{_shown(assign)}[k] = …, another {kind.name}"
-            raise _fault(value, "wrong-type", f"{_article(value)} for {_shown(assign)}:{kind.name}",
+            raise fault_of(value, "wrong-type", f"{article(value)} for {_shown(assign)}:{kind.name}",
                          f"{allowed}, or 32 bits made with concat, bits, wrap or unsigned")  # fmt: skip
         variable.kind, variable.pattern, variable.interval = want, 32, Interval(0, 2**32 - 1)
-
-    # Demands
-
-    def integer(self, node: Node, where: str) -> None:
-        if node.kind not in (INTEGER, TRUTH):
-            remedy = "a[k] or a[0], or unsigned(a) for all bits" if node.kind == PACKED else ""
-            raise _fault(node, "wrong-type", f"{_article(node)} as {where}", "an integer", remedy)
-
-    def float(self, node: Node, where: str) -> None:
-        if node.kind != FLOAT:
-            raise _fault(
-                node, "wrong-type", f"{_article(node)} as {where}", "a float", "int_to_float(x), as_float(bits)"
-            )
-
-    def truth(self, node: Node, where: str) -> None:
-        if node.kind != TRUTH and not (isinstance(node, Number) and node.value in (0, 1)):
-            raise _fault(node, "wrong-type", f"{_article(node)} as {where}", "a comparison, True or False")
-
-    def condition(self, node: Node, where: str) -> None:
-        if node.kind not in (INTEGER, TRUTH):
-            raise _fault(
-                node, "wrong-type", f"{_article(node)} as {where}", "a comparison, or an integer (true if not 0)"
-            )
-
-    def bits(self, node: Node, where: str) -> int:
-        """The width of a node that must be a bit pattern."""
-        if node.kind == TRUTH and node.pattern is None:
-            return 1
-        if node.pattern is None:
-            raise _fault(node, "unknown-width", f"a number with no width as {where}",
-                         "an operand, a lane, bits(), wrap(x, bits), uwrap(x, bits)")  # fmt: skip
-        return node.pattern
 
     # Visits
 
     def visit(self, node: Node, known: Known) -> None:
         _VISITS[type(node)](self, node, known)
-        if node.kind in (INTEGER, TRUTH):
-            if not node.interval.within(_LOWEST, _HIGHEST) or (
-                node.interval.low < 0 and node.interval.high > -_LOWEST - 1
-            ):
-                raise _fault(node, "too-big", f"an intermediate from {_power(node.interval)}", f"{LONGEST} bits")
+        signed = node.interval.low < 0
+        if node.kind in (INTEGER, TRUTH) and not node.interval.within(LOWEST, -LOWEST - 1 if signed else HIGHEST):
+            raise fault_of(node, "too-big", f"an intermediate from {bounds_of(node.interval)}", f"{LONGEST} bits")
 
     def number(self, node: Number, known: Known) -> None:
         node.interval = Interval(node.value, node.value)
@@ -185,10 +153,10 @@ class _Checker:
         where = f"operand of {node.operator}"
         if FLOAT in (node.left.kind, node.right.kind) or node.operator == "/":
             if node.operator not in _FLOAT_OPERATORS:
-                raise _fault(node, "wrong-type", f"{node.operator} of floats", "+ - * / of floats")
+                raise fault_of(node, "wrong-type", f"{node.operator} of floats", "+ - * / of floats")
             for side in (node.left, node.right):
                 if node.operator == "/" and side.kind != FLOAT:
-                    raise _fault(side, "wrong-type", f"{_article(side)} as {where}", "floats",
+                    raise fault_of(side, "wrong-type", f"{article(side)} as {where}", "floats",
                                  "// (floor) or tdiv (toward 0) for integers")  # fmt: skip
                 self.float(side, where)
             node.kind, node.pattern = FLOAT, 32
@@ -216,7 +184,7 @@ class _Checker:
             side = getattr(node, name)
             if isinstance(side, Number) and getattr(node, other).kind == FLOAT:
                 if abs(side.value) > 1 << 24:
-                    raise _fault(
+                    raise fault_of(
                         side, "wrong-type", f"{side.value} beside a float", "at most 2**24, or int_to_float(x)"
                     )
                 from vliwsim.description.language.floats import from_int
@@ -224,17 +192,6 @@ class _Checker:
                 real = Real(from_int(side.value), line=side.line, column=side.column)
                 self.real(real, {})
                 setattr(node, name, real)
-
-    def divisor(self, operator: str, node: Node) -> None:
-        if operator in ("//", "%", "tdiv", "trem") and not node.interval.excludes_zero:
-            raise _fault(node, "may-divide-by-zero", f"a divisor from {node.interval}", "a divisor that is never 0",
-                         "… if b != 0 else …")  # fmt: skip
-
-    def count(self, node: Node, what: str) -> None:
-        if not node.interval.within(_SHIFTS.low, _SHIFTS.high):
-            why = "may be negative" if node.interval.low < 0 else "may be too large"
-            raise _fault(node, "bad-shift", f"{what} from {node.interval} {why}", f"0 to {_SHIFTS.high}",
-                         "a & 31, or bits(a, 0, 5)")  # fmt: skip
 
     def compare(self, node: Compare, known: Known) -> None:
         self.visit(node.left, known)
@@ -270,21 +227,11 @@ class _Checker:
         if kinds == {INTEGER, TRUTH}:
             kinds = {INTEGER}
         if len(kinds) != 1:
-            raise _fault(node, "wrong-type", f"{_article(node.yes)} or {_article(node.no)}", "two arms of one type")
+            raise fault_of(node, "wrong-type", f"{article(node.yes)} or {article(node.no)}", "two arms of one type")
         node.kind = kinds.pop()
         node.pattern = self.arms_pattern(node.yes, node.no)
         arms = [node.yes, node.no] if len(reached) != 1 else reached
         node.interval = arms[0].interval.union(arms[-1].interval)
-
-    def arms_pattern(self, yes: Node, no: Node) -> int | None:
-        """The arms' common width; a literal takes the width of the other arm where it fits."""
-        if yes.pattern == no.pattern:
-            return yes.pattern
-        for one, other in ((yes, no), (no, yes)):
-            width = other.pattern
-            if isinstance(one, Number) and width and one.interval.within(-(1 << width - 1), (1 << width) - 1):
-                return width
-        return None
 
     def fit(self, node: Fit, known: Known) -> None:
         self.visit(node.operand, known)
@@ -316,134 +263,16 @@ class _Checker:
             seen = seen.union(node.step.interval)
         node.interval, node.pattern = node.step.interval, variable.pattern
 
-    # Functions
-
     def call(self, node: Call, known: Known) -> None:
         for argument in node.arguments:
             self.visit(argument, known)
-        _CALLS[node.function](self, node)
-
-    def call_bits(self, node: Call) -> None:
-        value, low, count = node.arguments
-        if value.kind not in (PACKED, FLOAT):
-            self.integer(value, "operand of bits")
-        self.integer(low, "low of bits")
-        self.integer(count, "count of bits")
-        self.count(low, "the low bit")
-        self.count(count, "a count of bits")
-        most = count.interval.high
-        node.interval = Interval(0, (1 << most) - 1)
-        if value.kind == INTEGER and value.interval.low >= 0 and low.interval.low == low.interval.high:
-            top = value.interval.high >> low.interval.low
-            node.interval = Interval(0, min(node.interval.high, top))
-        if count.interval.low == most and most > 0:
-            node.pattern = most
-
-    def call_concat(self, node: Call) -> None:
-        width = sum(self.bits(part, "part of concat") for part in node.arguments)
-        if width > LONGEST:
-            raise _fault(node, "too-big", f"{width} bits put together", f"at most {LONGEST}")
-        node.pattern, node.interval = width, Interval(0, (1 << width) - 1)
-
-    def call_reread(self, node: Call) -> None:
-        """unsigned, signed."""
-        value = node.arguments[0]
-        width = self.bits(value, f"operand of {node.function}")
-        node.pattern = width
-        as_signed = node.function == "signed"
-        low = -(1 << width - 1) if as_signed else 0
-        high = (1 << width - as_signed) - 1
-        inside = value.interval
-        fits = value.kind == INTEGER and inside.within(low, high)
-        node.interval = inside if fits else Interval(low, high)
-
-    def call_count(self, node: Call) -> None:
-        """clz, ctz, popcount."""
-        width = self.bits(node.arguments[0], f"operand of {node.function}")
-        node.interval = Interval(0, width)
-
-    def call_clmul(self, node: Call) -> None:
-        widths = [self.bits(argument, "operand of clmul") for argument in node.arguments]
-        for argument in node.arguments:
-            self.integer(argument, "operand of clmul")
-        total = sum(widths) - 1
-        if total > LONGEST:
-            raise _fault(node, "too-big", f"a carry-less product of {total} bits", f"at most {LONGEST}")
-        node.interval, node.pattern = Interval(0, (1 << total) - 1), total
-
-    def call_integers(self, node: Call) -> None:
-        """tdiv, trem, min, max."""
-        left, right = node.arguments
-        for side in (left, right):
-            if side.kind == FLOAT:
-                raise _fault(side, "wrong-type", f"a float as operand of {node.function}", "integers", "fmin, fmax, /")
-            self.integer(side, f"operand of {node.function}")
-        self.divisor(node.function, right)
-        node.interval = ranges.BINARY[node.function](left.interval, right.interval)
-        if node.function in ("min", "max"):
-            node.pattern = self.arms_pattern(left, right)
-
-    def call_abs(self, node: Call) -> None:
-        value = node.arguments[0]
-        if value.kind == FLOAT:
-            node.kind, node.pattern = FLOAT, 32
-            return
-        self.integer(value, "operand of abs")
-        node.interval = ranges.absolute(value.interval)
-
-    def call_round(self, node: Call) -> None:
-        value, count = node.arguments
-        self.integer(value, "operand of round")
-        self.integer(count, "count of round")
-        self.count(count, "a rounding shift")
-        high = count.interval.high
-        half = (1 << high) >> 1
-        inside = value.interval
-        if not Interval(inside.low - half, inside.high + half).within(_LOWEST, -_LOWEST - 1):
-            raise _fault(
-                node, "too-big", f"rounding of {_power(inside)} by {high} bits", f"{LONGEST} bits with the half added"
-            )
-        node.interval = ranges.rounded(inside, count.interval)
-
-    def call_floats(self, node: Call) -> None:
-        """sqrt, fma, fmin, fmax."""
-        for argument in node.arguments:
-            self.float(argument, f"operand of {node.function}")
-        node.kind, node.pattern = FLOAT, 32
-
-    def call_float_to_int(self, node: Call) -> None:
-        self.float(node.arguments[0], "operand of float_to_int")
-        assert node.to is not None
-        node.interval, node.pattern = Interval(node.to.low, node.to.high), node.to.bits
-
-    def call_int_to_float(self, node: Call) -> None:
-        self.integer(node.arguments[0], "operand of int_to_float")
-        node.kind, node.pattern = FLOAT, 32
-
-    def call_as_float(self, node: Call) -> None:
-        value = node.arguments[0]
-        if self.bits(value, "operand of as_float") != 32:
-            raise _fault(value, "wrong-type", f"{value.pattern} bits as operand of as_float", "32 bits")
-        node.kind, node.pattern = FLOAT, 32
-
-    def call_classify(self, node: Call) -> None:
-        self.float(node.arguments[0], "operand of classify")
-        node.interval = Interval(1, 512)
+        CALLS[node.function](self, node)
 
 
 _VISITS: Mapping[type, Callable[..., None]] = {
     Number: _Checker.number, Real: _Checker.real, Input: _Checker.input, Local: _Checker.local, Unary: _Checker.unary,
     Binary: _Checker.binary, Compare: _Checker.compare, Logic: _Checker.logic, Choose: _Checker.choose,
     Fit: _Checker.fit, Iterate: _Checker.iterate, Call: _Checker.call,
-}  # fmt: skip
-_CALLS: Mapping[str, Callable[..., None]] = {
-    "bits": _Checker.call_bits, "concat": _Checker.call_concat, "unsigned": _Checker.call_reread,
-    "signed": _Checker.call_reread, "clz": _Checker.call_count, "ctz": _Checker.call_count,
-    "popcount": _Checker.call_count, "clmul": _Checker.call_clmul, "tdiv": _Checker.call_integers,
-    "trem": _Checker.call_integers, "min": _Checker.call_integers, "max": _Checker.call_integers,
-    "abs": _Checker.call_abs, "round": _Checker.call_round, "sqrt": _Checker.call_floats, "fma": _Checker.call_floats,
-    "fmin": _Checker.call_floats, "fmax": _Checker.call_floats, "float_to_int": _Checker.call_float_to_int,
-    "int_to_float": _Checker.call_int_to_float, "as_float": _Checker.call_as_float, "classify": _Checker.call_classify,
 }  # fmt: skip
 
 
@@ -468,25 +297,6 @@ def _lanes(node: Node) -> int | None:
 
 def _shown(assign: Assign) -> str:
     return assign.output if assign.lane is None else f"{assign.output}[{assign.lane}]"
-
-
-def _article(node: Node) -> str:
-    return {
-        INTEGER: "an integer",
-        TRUTH: "a comparison",
-        FLOAT: "a float",
-        PACKED: "packed lanes",
-    }[node.kind]
-
-
-def _power(interval: Interval) -> str:
-    """An interval too long to print, by its bits."""
-    bits = max(interval.high.bit_length(), interval.low.bit_length()) + (interval.low < 0)
-    return f"{'-2**' + str(interval.low.bit_length()) if interval.low < 0 else '0'} to 2**{interval.high.bit_length()} ({bits} bits)"
-
-
-def _fault(node: Node, name: str, found: str, allowed: str, remedy: str = "") -> Fault:
-    return Fault(name, found, allowed, remedy, line=node.line, column=node.column)
 
 
 def nodes(statements: Sequence[Assign]) -> list[Node]:
