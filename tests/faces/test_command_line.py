@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import json
 import os
+import pty
+import select
 import signal
 import subprocess
 import sys
@@ -465,6 +467,25 @@ class TestProcesses:
         assert "stopped after " in out
         assert " cycles = " in out
         assert "Traceback" not in err
+
+    def test_a_terminal_sees_progress_and_a_pipe_does_not(self, tmp_path: Path) -> None:
+        path = write(tmp_path, SUM.replace("count g16, loop", "jump loop").replace("g10 then +2", "g10 + 0"))
+        main, other = pty.openpty()
+        command = [sys.executable, "-m", "vliwsim", "run", str(path), "--limit", "1000000000"]
+        process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=other, env={**os.environ, "TERM": "xterm"})
+        os.close(other)
+        seen = b""
+        ends = time.monotonic() + 30
+        while b"a second" not in seen and time.monotonic() < ends:
+            if select.select([main], [], [], 0.5)[0]:
+                seen += os.read(main, 4096)
+        process.send_signal(signal.SIGINT)
+        out, _ = process.communicate(timeout=30)
+        os.close(main)
+        assert b"total on pair7: cycle " in seen
+        assert process.returncode == 130
+        assert b"stopped after " in out
+        assert b"\x1b" not in out
 
     def test_cold_start_imports_nothing_heavy(self) -> None:
         code = (

@@ -90,6 +90,9 @@ def status_of(arguments: Sequence[str] | None = None) -> int:
     except click.ClickException as error:
         complain([usage_problem(error)])
         return 2
+    except MemoryError:
+        complain([problem("out-of-memory", "not enough memory on this machine", "", "smaller sizes or memory.size")])
+        return 2
     except BrokenPipeError:
         # whoever read our output has gone; keep the interpreter's own flush at exit quiet too
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
