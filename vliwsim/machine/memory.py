@@ -18,12 +18,15 @@ from vliwsim.description.values import Value, parts, value_of
 
 OUTSIDE, OVER, UNDEFINED, DEFINED = 0, 1, 2, 3
 
+SIZES = (1, 2, 4, 8)
+"""Access sizes in bytes; their index is the base-2 logarithm."""
+
 ALL_DEFINED = {1: 0x03, 2: 0x0303, 4: 0x03030303, 8: 0x0303030303030303}
 """Status of ``size`` bytes that are all DEFINED, read as one number (the same in either byte order)."""
 ALL_OWNED = {size: status & 0x0202020202020202 for size, status in ALL_DEFINED.items()}
 """Mask and value that ``size`` bytes which may all be written (UNDEFINED or DEFINED) have in common."""
 
-_FORMATS: dict[int, Literal["B", "H", "I", "Q"]] = {1: "B", 2: "H", 4: "I", 8: "Q"}
+_FORMATS: tuple[Literal["B", "H", "I", "Q"], ...] = ("B", "H", "I", "Q")
 
 
 @attrs.frozen
@@ -63,8 +66,8 @@ class Memory:
         for region in regions:
             self.status[region.start : region.start + region.bytes] = bytes([UNDEFINED]) * region.bytes
         data, status = memoryview(self.bytes), memoryview(self.status)
-        self.views: dict[int, memoryview[int]] = {size: data.cast(code) for size, code in _FORMATS.items()}
-        self.status_views: dict[int, memoryview[int]] = {size: status.cast(code) for size, code in _FORMATS.items()}
+        self.views = tuple(data.cast(code) for code in _FORMATS)
+        self.status_views = tuple(status.cast(code) for code in _FORMATS)
 
     def define(self, address: int, data: bytes) -> None:
         """Put defined bytes into memory before a run, inside some region."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import linecache
 import sys
 from collections.abc import Callable
 from functools import lru_cache
@@ -81,6 +82,12 @@ class Rows:
     stores: tuple[StoreRow, ...]
     branch: BranchRow | None
     accesses: int
+
+    @property
+    def guarded_access(self) -> bool:
+        """Whether a guard decides about some access to memory."""
+        loads = (row.guard >= 0 for group in self.groups for row in group.rows if row.shape == LOAD)
+        return any(loads) or any(row.guard >= 0 for row in self.stores)
 
 
 def lay_out(core: Core, parts: tuple[Part, ...], zero: int) -> Rows | None:
@@ -198,11 +205,19 @@ def _swapped_out(function: Callable[..., int], size: int) -> Callable[..., objec
 
 @lru_cache(maxsize=64)
 def _updater(ring: int) -> Callable[..., object]:
-    """The base's new value from base and step; equals :meth:`Reach.updated`."""
-    if not ring:
-        return lambda base, step: (base + step) & WORD
-    inside, outside = ring - 1, ~(ring - 1) & WORD
-    return lambda base, step: base & outside | (base + step) & inside
+    """The base's new value from base and step, as text that can be inlined; equals :meth:`Reach.updated`."""
+    inside, outside = (ring - 1, ~(ring - 1) & WORD) if ring else (WORD, 0)
+    moved = f"(base + step) & {inside:#x}"
+    value = f"base & {outside:#x} | {moved}" if ring else moved
+    return compiled(f"def operation(base, step):\n    return {value}\n", f"<update in ring {ring}>", "operation")
+
+
+def compiled(source: str, name: str, wanted: str, names: dict[str, object] | None = None) -> Callable[..., Any]:
+    """The function ``wanted`` of a generated text, registered under ``name`` so that it can be looked at."""
+    names = {} if names is None else names
+    linecache.cache[name] = (len(source), None, source.splitlines(True), name)
+    exec(compile(source, name, "exec"), names)
+    return names[wanted]  # type: ignore[return-value]
 
 
 def _spread(part: Part) -> Callable[..., list[Value]]:

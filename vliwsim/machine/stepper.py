@@ -13,7 +13,7 @@ from vliwsim.description.core import Core
 from vliwsim.description.values import Value
 from vliwsim.machine import beat as phases
 from vliwsim.machine.hazards import Hazard, HazardMet
-from vliwsim.machine.hurry import hurry
+from vliwsim.machine.hurry import Entry, Land, hurry
 from vliwsim.machine.issued import Issued
 from vliwsim.machine.memory import Memory, Region
 from vliwsim.machine.outcome import Outcome
@@ -39,8 +39,9 @@ class Machine:
         self.core: Core = program.core
         self.ready = Preparation(program)
         self.careful = careful
-        self.verdicts: dict[object, tuple[tuple[int, ...], ...]] = {}
-        self.watchers: dict[int, Callable[[Sequence[int]], tuple[int, ...]]] = {}
+        self.verdicts: dict[object, Land] = {}
+        self.met: dict[object, int] = {}
+        self.entries: list[Entry | None] = [None] * len(program.bundles)
 
     def start(
         self,
