@@ -366,12 +366,12 @@ HOSTILE = {
 @pytest.mark.parametrize("content", HOSTILE.values(), ids=HOSTILE)
 def test_hostile_files(file: Path, content: bytes) -> None:
     file.write_bytes(content)
-    began = time.perf_counter()
+    began = time.process_time()
     problems = complaints(file)
     assert 1 <= len(problems) <= 1100
     assert all(problem.place and problem.place.file == str(file) for problem in problems)
     assert sum(len(str(problem)) for problem in problems) < 500_000
-    assert time.perf_counter() - began < 10  # hang guard, not a benchmark
+    assert time.process_time() - began < 20  # against hanging, no benchmark
 
 
 def test_paths_that_are_no_files(tmp_path: Path) -> None:

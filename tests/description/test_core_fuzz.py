@@ -73,9 +73,9 @@ def test_mutated_files(tmp_path: Path, long: bool) -> None:
     for _ in range(20_000 if long else 400):
         text = mutated(chance.choice(texts), chance, texts)
         file.write_bytes(text.encode("utf-8", "surrogatepass"))
-        began = time.perf_counter()
+        began = time.process_time()
         good += attempt(lambda: load_core(str(file)), placed=True)
-        assert time.perf_counter() - began < 5
+        assert time.process_time() - began < 20
     assert good > 10
 
 

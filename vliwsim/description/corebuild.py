@@ -55,6 +55,8 @@ KEYS = ("name", "summary", "base", "remove", "operations", "zero_registers", *PA
 MOST_REGISTERS = 4096
 MOST_SLOTS = 64
 MOST_REGIONS = 64
+MOST_ENTRIES = 512
+"""Entries of a table: beyond the most that a core can have in any, those of ``latency`` for classes of one's own."""
 
 _NAME = re.compile(r"[a-z][a-z0-9_-]{0,39}")
 _RANGE = re.compile(r"([a-z][0-9]{1,5})(?:\.\.([a-z][0-9]{1,5}))?")
@@ -131,13 +133,19 @@ class _Builder:
             self.findings += [attrs.evolve(f, path=(*path, *f.path)) for f in why.findings]
             return otherwise
 
-    def table(self, key: str) -> Table:
+    def table(self, key: str, most: int = MOST_ENTRIES) -> Table:
         """The table under ``key``, empty where there is none."""
         found = self.plain.get(key, {})
         if not isinstance(found, dict):
             self.add("wrong-type", (key,), described(found), "a table")
             return {}
-        return found
+        return self.limited(found, (key,), most)
+
+    def limited(self, table: dict[str, object], path: KeyPath, most: int = MOST_ENTRIES) -> dict[str, object]:
+        """The first entries of a table; no core has more, and a hostile file shall not take long to refuse."""
+        if len(table) > most:
+            self.add("out-of-range", path, f"{len(table)} entries", f"at most {most}")
+        return dict(itertools.islice(table.items(), most))
 
     def part(self, kind: type, key: str) -> Any:
         return structure(kind, self.plain.get(key, {}), (key,), self.findings) or kind()
@@ -162,7 +170,7 @@ class _Builder:
     def slots(self, clusters: Iterable[Cluster]) -> tuple[Slot, ...]:
         names = [cluster.name for cluster in clusters]
         made = []
-        for name, table in self.table("slot").items():
+        for name, table in self.table("slot", MOST_SLOTS).items():
             path = slot_path(name)
             cluster, _, unit = name.partition(".")
             if not unit:
@@ -180,8 +188,6 @@ class _Builder:
         elif not self.suspect(("slot",)) and not any("control" in slot.classes for slot in made):
             allowed = "at least one slot with the class control: without it no program could end"
             self.add("never-halts", ("slot",), "no slot executes control", allowed)
-        if len(made) > MOST_SLOTS:
-            self.add("out-of-range", ("slot",), f"{len(made)} slots", f"at most {MOST_SLOTS}")
         return tuple(made)
 
     def links(self, clusters: Iterable[Cluster]) -> tuple[Link, ...]:
@@ -191,7 +197,7 @@ class _Builder:
             if not isinstance(readers, dict):
                 self.add("wrong-type", ("link", source), described(readers), "[link.SOURCE.READER] tables")
                 continue
-            for reader, table in readers.items():
+            for reader, table in self.limited(readers, ("link", source)).items():
                 path = ("link", source, reader)
                 strange = [end for end in (source, reader) if end not in names and not self.suspect(("cluster", end))]
                 for end in strange:
@@ -231,7 +237,7 @@ class _Builder:
                     )
             self.judge_busy(table, (*path, "busy"), [word for _, word in classes], names)
         latency = self.plain.get("latency")
-        latency = latency if isinstance(latency, dict) else {}
+        latency = dict(itertools.islice(latency.items(), MOST_ENTRIES)) if isinstance(latency, dict) else {}
         known = (*CLASSES, "update", "otherwise", "operations")
         for word in latency:
             if word not in known and not (own and IDENTIFIER.fullmatch(word)):
@@ -308,6 +314,7 @@ class _Builder:
         if not isinstance(regions, dict):
             self.add("wrong-type", ("memory", "wait"), described(regions), "[memory.wait.NAME] tables")
             regions = {}
+        regions = self.limited(regions, ("memory", "wait"), MOST_REGIONS)
         waits = []
         for name, region in regions.items():
             path = ("memory", "wait", name)
@@ -319,8 +326,6 @@ class _Builder:
                 if wait.start + wait.bytes > made.size and not self.suspect(("memory", "size")):
                     end = f"bytes {wait.start} to {wait.start + wait.bytes}"
                     self.add("outside-memory", path, end, f"inside the memory of {made.size} bytes")
-        if len(regions) > MOST_REGIONS:
-            self.add("out-of-range", ("memory", "wait"), f"{len(regions)} regions", f"at most {MOST_REGIONS}")
         waits.sort(key=lambda wait: wait.start)
         for one, other in itertools.pairwise(waits):
             if other.start < one.start + one.bytes:
