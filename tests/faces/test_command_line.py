@@ -98,7 +98,7 @@ class TestReports:
     def test_all_cases(self, double: Path, capsys: Captured) -> None:
         assert status_of(["run", str(double), "--case", "all"]) == 0
         out = capsys.readouterr().out
-        assert "  alternating            224  double on pair7, n = 37: right, legal.\n" in out
+        assert "  alternating         224  double on pair7, n = 37: right, legal.\n" in out
         assert out.endswith("\n12 of 12 cases right, legal and within budget.\n")
 
     def test_all_cases_of_a_wrong_kernel(self, tmp_path: Path, capsys: Captured) -> None:

@@ -20,9 +20,9 @@ FRAME = "given x : i16[n] at g1\nreturns total : i32 in g2\nneeds n % 4 == 0 and
 FILTER = """
     given   x     : q15[n]            at g1
     given   c     : q15[taps]         at g2
-    given   shift : i32               in g3
+    given   down : i32               in g3
     returns y     : q15[n - taps + 1] at g4
-    needs   taps >= 1 and n >= taps and 0 <= shift and shift < 16
+    needs   taps >= 1 and n >= taps and 0 <= down and down < 16
 """
 
 
@@ -185,6 +185,12 @@ class TestWhatARunTakes:
             bind(kernel, case_with(kernel, None, None, {"x": [0.5]}).inputs)
 
     def test_given_values_go_on_top_of_a_named_case(self) -> None:
-        case = case_with(header(FILTER), None, "zeros", {"shift": 7})
-        assert case.inputs["shift"] == 7
+        case = case_with(header(FILTER), None, "zeros", {"down": 7})
+        assert case.inputs["down"] == 7
         assert not np.any(case.inputs["x"])
+
+
+def test_small_cases_differ_in_size() -> None:
+    kernel = header("given x : i16[n] at g1\ngiven down : i32 in g2\nneeds n >= 2 and 0 <= down and down < 16")
+    small = [case.inputs["n"] for case in generated_cases(kernel) if case.name.startswith("small")]
+    assert small == [2, 3, 4, 5]

@@ -164,10 +164,12 @@ class _Job:
         from vliwsim.kernel.cases import Case, cases_of
 
         runs: list[KernelRun] = []
-        for case in cases_of(kernel, reference):
+        cases = list(cases_of(kernel, reference))
+        width = max((len(case.name) for case in cases), default=0)
+        for case in cases:
             run = self._run(kernel, reference, Case(case.name, {**case.inputs, **given}))
             runs.append(run)
-            self._say(lambda: line(runs[-1]))
+            self._say(lambda: line(runs[-1], width))
             if run.reason == "stopped":
                 break
         bad = [run for run in runs if not run.ok]

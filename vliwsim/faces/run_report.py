@@ -18,9 +18,9 @@ def report(run: KernelRun, all_notes: bool = False) -> str:
     return "\n\n".join("\n".join(lines) for lines in parts if lines)
 
 
-def line(run: KernelRun) -> str:
-    """One line for one of several cases."""
-    return f"  {run.case:<16} {run.cycles:>9}  {run.verdict}"
+def line(run: KernelRun, width: int) -> str:
+    """One line for one of several cases, the longest of whose names has ``width`` characters."""
+    return f"  {run.case:<{width}}  {run.cycles:>8}  {run.verdict}"
 
 
 def _notes(notes: tuple[Problem, ...], all_notes: bool) -> Iterator[str]:

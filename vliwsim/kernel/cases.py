@@ -113,13 +113,11 @@ def generated_cases(kernel: Kernel, fixed: Mapping[str, Any] | None = None) -> I
         case = _case(interface, name, sizes[size], fixed, fill)
         if case is not None:
             yield case
-    seen = list(sizes.values())
-    for number, values in enumerate(search.smallest(SMALLEST)):
-        if values not in seen:
-            name = "smallest" if number == 0 else f"small-{number + 1}"
-            case = _case(interface, name, values, fixed, _random())
-            if case is not None:
-                yield case
+    for number, values in enumerate(search.smallest_sizes(SMALLEST)):
+        name = "smallest" if number == 0 else f"small-{number + 1}"
+        case = _case(interface, name, values, fixed, _random())
+        if case is not None:
+            yield case
 
 
 def _case(

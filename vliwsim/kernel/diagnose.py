@@ -6,6 +6,7 @@ import re
 from collections.abc import Iterable
 from typing import Protocol
 
+from vliwsim.description.operations import Kind
 from vliwsim.kernel.binding import Setup, excerpt
 from vliwsim.problems import Place, Problem, problem
 from vliwsim.program.kernel import Kernel
@@ -127,7 +128,8 @@ def note_problems(kernel: Kernel, notes: Iterable[tuple[str, int, int, int]]) ->
     problems = []
     for name, bundle, instruction, beat in sorted(notes, key=lambda n: (n[3], n[1], n[2], n[0])):
         place = line_of(kernel, bundle, instruction)
-        operation = kernel.program.bundles[bundle].instructions[instruction].operation.name
-        found = f"{operation} at {where(kernel, bundle)} {NOTES.get(name, name)}, first in beat {beat}"
+        operation = kernel.program.bundles[bundle].instructions[instruction].operation
+        says = "reads undefined bytes" if operation.kind is Kind.LOAD and name == "undefined-read" else NOTES[name]
+        found = f"{operation.name} at {where(kernel, bundle)} {says}, first in beat {beat}"
         problems.append(problem(name, found, place=place, excerpt=excerpt(kernel, place), kind="note"))
     return tuple(problems)

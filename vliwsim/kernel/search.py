@@ -63,6 +63,13 @@ class Search:
         found = (values for values in self._small() if self.holds(values))
         return list(itertools.islice(found, count))
 
+    def smallest_sizes(self, count: int) -> list[dict[str, int]]:
+        """Up to ``count`` assignments that hold and differ in a size, not only in a scalar."""
+        different: dict[tuple[int, ...], dict[str, int]] = {}
+        for values in self.smallest(16 * count):
+            different.setdefault(tuple(v for n, v in values.items() if n not in self.scalars), values)
+        return list(different.values())[:count]
+
     def _small(self) -> Iterator[dict[str, int]]:
         """All assignments of small numbers by growing sum, then those of the numbers the source itself speaks of."""
         if not self.names:
