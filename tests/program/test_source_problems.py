@@ -104,7 +104,7 @@ CODE = [
     "@0 sw 1, [g2 + 4] #~ two-immediates:10\n",
     "@0 beq g1, 0, start #~ two-immediates:15\n",
     "@0 add g1, g2, 1 + #~ bad-expression:18\n",
-    "@0 add g1, g2, 0x #~ bad-expression:17\n",
+    "@0 add g1, g2, 0x #~ bad-expression:16\n",
     "@0 add g1, g2, 007 #~ bad-expression:16\n",
     '@0 add g1, g2, "a" #~ bad-expression:16\n',
     "@0 add g1, g2, f(3) #~ unknown-function:16\n",

@@ -74,6 +74,8 @@ class _Maker:
         self.steps = 0
         self._same: dict[int, Ready] = {}
         """What lines of a repeat that do not use its variable have become, by identity of the line."""
+        self._refused: set[int] = set()
+        """Identities of operations and stamps whose problems have been told: one pass of a repeat is enough."""
 
     def walk(self, nodes: list[Node], variables: frozenset[str]) -> None:
         """Take the lines in order; ``variables`` are those of the repeats around them."""
@@ -100,10 +102,11 @@ class _Maker:
         text = piece.text
         self.has_stamp = True
         self.beat = None
-        if not text:
+        if not text or id(piece) in self._refused:
             return
         value = int(text) if text.isdecimal() and len(text) < 9 else self.reader.integer(piece)
         if value is None:
+            self._refused.add(id(piece))
             return
         if not 0 <= value < MOST_BEATS:
             found = f"@{text}" if str(value) == text else f"@{text} is beat {value}"
@@ -127,9 +130,11 @@ class _Maker:
     def call(self, call: Call, variables: frozenset[str]) -> None:
         beat = self.at(call.mnemonic)
         ready = self._same.get(id(call))
-        if ready is None:
+        if ready is None and id(call) not in self._refused:
             ready = self.reader.read(call)
-            if ready and variables and not _uses(call, variables):
+            if ready is None:
+                self._refused.add(id(call))
+            elif variables and not _uses(call, variables):
                 self._same[id(call)] = ready
         if ready is not None and beat is not None:
             self.sections[-1].bundles.setdefault(beat, []).append(ready)

@@ -28,6 +28,12 @@ DEEPEST = 60
 BIGGEST = 1 << 256
 """No integer may reach this magnitude."""
 
+_GLUED = re.compile(
+    r"(?<![\w.])(?>0[xX][\da-fA-F_]+|0[bB][01_]+|0[oO][0-7_]+|(?:\d[\d_]*\.?[\d_]*|\.\d[\d_]*)(?:[eE][-+]?\d[\d_]*)?)"
+    r"(?=[A-Za-z])"
+)
+"""A number that a letter follows."""
+
 Environment = Mapping[str, Any]
 Evaluate = Callable[[Environment], Any]
 
@@ -343,6 +349,10 @@ def _parse(text: str) -> tuple[dict[str, ast.AST], dict[str, ast.AST], Evaluate]
     if not (text.isascii() and text.isprintable()):
         raise Refused("bad-expression", f"a character that no expression has, in {text!r}", _ALLOWED)
     lead = len(text) - len(text.lstrip())
+    if glued := _GLUED.search(text):  # which Python's tokenizer would only warn of
+        refusal = Refused("bad-expression", f"{glued.group()} with a letter behind it", "a blank behind the number")
+        refusal.column = glued.start()
+        raise refusal
     try:
         tree = ast.parse(text.strip(), mode="eval")
     except SyntaxError as bad:
