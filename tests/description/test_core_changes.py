@@ -161,7 +161,7 @@ def test_a_delta(tmp_path: Path) -> None:
         '[slot.g.early]\nclasses = ["load"]\n[slot.h.flow]\nclasses = ["control"]\n[slot.g.late]\nclasses = ["shift"]\n'
         "[latency]\nload = 6\n"
     )
-    core, base = load_core(tmp_path / "wide.toml"), load_core("pair7")  # type: ignore[arg-type]
+    core, base = load_core(tmp_path / "wide.toml"), load_core("pair7")
     assert core.name == "wide"
     assert [cluster.registers for cluster in core.clusters] == [40, 24]
     assert core.clusters[0].read_ports == base.clusters[0].read_ports

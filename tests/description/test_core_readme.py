@@ -9,8 +9,8 @@ from pathlib import Path
 import pytest
 
 from vliwsim.description import corebuild, corelayers, coreparts, toml_places
-from vliwsim.description.corebuild import shipped_operations
 from vliwsim.description.corefile import load_core
+from vliwsim.description.operation_names import shipped_operations
 from vliwsim.description.places import isa_folder
 from vliwsim.description.tables import load_operations, validate
 from vliwsim.problems import CoreError

@@ -9,8 +9,6 @@ from __future__ import annotations
 import itertools
 import re
 from collections.abc import Iterable, Mapping, Sequence
-from contextlib import suppress
-from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -44,9 +42,8 @@ from vliwsim.description.coreparts import (
     text,
     unknown_key,
 )
-from vliwsim.description.places import isa_folder
-from vliwsim.description.toml_places import KeyPath, listed, nearest, read_toml, shown
-from vliwsim.problems import OperationError
+from vliwsim.description.operation_names import OperationNames, shipped_operations
+from vliwsim.description.toml_places import KeyPath, listed, nearest, shown
 
 PARTS = ("cluster", "slot", "latency", "link", "guards", "branch", "issue", "memory", "words", "interrupt")
 KEYS = ("name", "summary", "base", "remove", "operations", "zero_registers", *PARTS)
@@ -62,11 +59,6 @@ _NAME = re.compile(r"[a-z][a-z0-9_-]{0,39}")
 _RANGE = re.compile(r"([a-z][0-9]{1,5})(?:\.\.([a-z][0-9]{1,5}))?")
 
 Table = Mapping[str, object]
-
-
-def shipped_operations() -> list[str]:
-    """Names of the shipped operation families."""
-    return sorted(path.stem for path in (isa_folder() / "operations").glob("*.toml"))
 
 
 def build_core(plain: Table) -> tuple[Core, list[Finding]]:
@@ -225,7 +217,7 @@ class _Builder:
     def judge_classes(self, core: Core) -> None:
         """Class and operation names in slots, ``busy`` and latencies: in all that is written, well or badly."""
         own = any(entry.endswith(".toml") for entry in core.operations)
-        names = _OperationNames(() if self.suspect(("operations",)) else core.operations)
+        names = OperationNames(() if self.suspect(("operations",)) else core.operations)
         for slot in core.slots:
             path = slot_path(slot.name)
             table = self.plain["slot"][slot.name]  # type: ignore[index]
@@ -247,13 +239,13 @@ class _Builder:
             if OPERATION.fullmatch(word) and word not in names:
                 self.unknown_operation(("latency", "operations", word), word, (), "", names)
 
-    def judge_busy(self, table: object, path: KeyPath, classes: Sequence[str], names: _OperationNames) -> None:
+    def judge_busy(self, table: object, path: KeyPath, classes: Sequence[str], names: OperationNames) -> None:
         for word in _keys(table.get("busy") if isinstance(table, dict) else None):
             if OPERATION.fullmatch(word) and word not in classes and (word in CLASSES or word not in names):
                 self.unknown_operation((*path, word), word, classes, "a class of this slot", names)
 
     def unknown_operation(
-        self, path: KeyPath, word: str, classes: Sequence[str], what: str, names: _OperationNames
+        self, path: KeyPath, word: str, classes: Sequence[str], what: str, names: OperationNames
     ) -> None:
         if not names.entries:  # no files that could be asked
             return
@@ -334,44 +326,6 @@ class _Builder:
         return attrs.evolve(made, waits=tuple(waits))
 
 
-class _OperationNames:
-    """Names of the operations of some files, read only when asked for: two keys of a core file may name operations."""
-
-    def __init__(self, entries: Iterable[str]) -> None:
-        self.entries = tuple(entries)
-        self.names: frozenset[str] | None = None
-
-    def all(self) -> frozenset[str]:
-        if self.names is None:
-            self.names = frozenset().union(*(_names_in(_operations_path(entry)) for entry in self.entries))
-        return self.names
-
-    def __contains__(self, name: str) -> bool:
-        return name in self.all()
-
-
-def _operations_path(entry: str) -> Path:
-    return Path(entry) if entry.endswith(".toml") else isa_folder() / "operations" / f"{entry}.toml"
-
-
-def _names_in(path: Path) -> frozenset[str]:
-    """Names of the operations in a file; of a bad one none, for it is reported where tables are read."""
-    try:
-        status = path.stat()
-    except OSError:
-        return frozenset()
-    return _names_as_of(path, status.st_mtime_ns, status.st_size)
-
-
-@lru_cache(maxsize=64)
-def _names_as_of(path: Path, changed: int, size: int) -> frozenset[str]:
-    """The same, kept as long as the file does not change: a sweep evolves one core many times."""
-    found: set[str] = set()
-    with suppress(OperationError):
-        _collect(read_toml(path, OperationError).data, "", found)
-    return frozenset(found)
-
-
 def _strings(value: object) -> list[tuple[int, str]]:
     """The strings of what should be an array of strings, with their indices."""
     return [(k, v) for k, v in enumerate(value) if isinstance(v, str)][:64] if isinstance(value, list) else []
@@ -380,16 +334,6 @@ def _strings(value: object) -> list[tuple[int, str]]:
 def _keys(value: object) -> list[str]:
     """The first keys of what should be a table."""
     return list(value)[:MOST_FINDINGS] if isinstance(value, dict) else []
-
-
-def _collect(table: Table, name: str, found: set[str], depth: int = 0) -> None:
-    """Names of the operations in a table: the tables that say what the operation ``does``."""
-    for key, inner in table.items():
-        whole = f"{name}.{key}" if name else key
-        if isinstance(inner, dict) and depth < 8:
-            if "does" in inner and OPERATION.fullmatch(whole):
-                found.add(whole)
-            _collect(inner, whole, found, depth + 1)
 
 
 def _operations_entry(entry: object) -> object:

@@ -22,7 +22,7 @@ from vliwsim.problems import CoreError, Problem
 __all__ = ["core_digest", "core_names", "describe", "evolve", "load_core"]
 
 
-def load_core(name_or_path: str, changes: Changes = ()) -> Core:
+def load_core(name_or_path: str | Path, changes: Changes = ()) -> Core:
     """The core of that name or, for a path that ends in ``.toml``, of that file, with ``changes`` made.
 
     Raises :class:`~vliwsim.problems.CoreError` with every mistake of the file, its bases and the changes.

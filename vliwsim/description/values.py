@@ -33,14 +33,16 @@ class Undefined:
         self.size = size
 
     def same(self, other: object) -> bool:
-        return (
-            isinstance(other, Undefined)
-            and (self.bits, self.unknown, self.size) == (other.bits, other.unknown, other.size)
+        return isinstance(other, Undefined) and (self.bits, self.unknown, self.size) == (
+            other.bits,
+            other.unknown,
+            other.size,
         )
 
     def __repr__(self) -> str:
-        shown = "".join("??" if self.unknown >> k & 1 else f"{self.bits >> 8 * k & 255:02x}" for k in reversed(range(self.size)))
-        return f"undefined 0x{shown}"
+        known = [not self.unknown >> k & 1 for k in range(self.size)]
+        shown = [f"{self.bits >> 8 * k & 255:02x}" if known[k] else "??" for k in reversed(range(self.size))]
+        return f"undefined 0x{''.join(shown)}"
 
     def __reduce__(self) -> tuple[object, ...]:
         return (Undefined, (self.bits, self.unknown, self.size))

@@ -18,7 +18,10 @@ from vliwsim.description.operations import Operation
 
 @attrs.frozen
 class Register:
-    """A register operand: its number in the core, and for a half operand which one (0 low, 1 high). Pairs name the even one."""
+    """A register operand: its number in the core, and for a half operand which half (0 low, 1 high).
+
+    A pair is named by its even register.
+    """
 
     number: int
     half: int | None = None
