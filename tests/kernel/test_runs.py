@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 import vliwsim
-from vliwsim.kernel.runner import KernelRun
+from vliwsim.kernel.runner import KernelRun, run_kernel
 from vliwsim.problems import InterfaceError, ReferenceFailure, VliwsimError
 
 from .sources import DOUBLE, REFERENCES, SUM, write
@@ -251,9 +251,76 @@ class TestFromPython:
         with pytest.raises(ReferenceFailure, match="ZeroDivisionError while calling total"):
             kernel.run(x=[1])
 
+    def test_a_bad_case_is_named(self, tmp_path: Path) -> None:
+        code = REFERENCES["total"] + "def cases():\n    yield 'gale', {'x': [1.5]}\n"
+        with pytest.raises(InterfaceError, match=r"x holds floats \(float64\) \(case gale\)"):
+            vliwsim.load_kernel(str(write(tmp_path, SUM, code))).run()
+
     def test_public_names(self) -> None:
         assert set(vliwsim.__all__) <= set(dir(vliwsim))
         for name in [*vliwsim.__all__, "__version__"]:
             assert getattr(vliwsim, name)
         with pytest.raises(AttributeError, match="nothing_like_it"):
             vliwsim.nothing_like_it  # noqa: B018
+
+
+class TestOtherMachines:
+    def test_big_endian_memory_gives_the_same_numbers(self, tmp_path: Path) -> None:
+        one = run(tmp_path, DOUBLE, changes={"memory.endianness": "big"}, x=[1, -2, 300])
+        assert one.outputs["y"].tolist() == [2, -4, 600]  # type: ignore[union-attr]
+        assert one.ok
+
+    def test_waiting_for_memory_is_in_the_account(self, tmp_path: Path) -> None:
+        changes = {"memory.wait.slow.start": 0, "memory.wait.slow.bytes": 4096, "memory.wait.slow.cycles": 2}
+        one = run(tmp_path, SUM, changes=changes, x=[1, 2, 3])
+        assert one.stalls["wait"] == 6
+        assert one.outputs == {"sum": 6}
+        assert (one.cycles, one.account.within_budget) == (23, False)
+        assert adds_up(one)
+
+    def test_drain_is_placed_with_the_halt(self, tmp_path: Path) -> None:
+        one = run(tmp_path, SUM.replace("@0 halt", "@0 lh g5, [g10 - 2]\n@0 halt"), x=[1])
+        assert one.drain == 3  # the load takes 4 beats, the halt's own not counted
+        assert one.account.section("finish").drain == 3
+        assert adds_up(one)
+
+    def test_a_run_can_be_stopped_and_accounts_for_what_it_did(self, tmp_path: Path) -> None:
+        source = SUM.replace("count g16, loop", "jump loop").replace("g10 then +2", "g10 + 0")
+        kernel = vliwsim.load_kernel(str(write(tmp_path, source))).kernel
+        seen: list[int] = []
+
+        def watch(cycle: int) -> bool:
+            seen.append(cycle)
+            return len(seen) == 3
+
+        one = run_kernel(kernel, {"x": [1]}, watch=watch)
+        assert one.reason == "stopped"
+        assert one.cycles == seen[-1]
+        assert one.matches is None
+        assert not one.ok
+        assert not one.problems
+        assert adds_up(one)
+
+
+class TestFormulas:
+    @pytest.mark.parametrize(
+        ("line", "name"),
+        [
+            ("budget  n < 3", "budget-value"),
+            ("budget  1 // (n - 2)", "no-value"),
+            ("within", "within-value"),
+        ],
+    )
+    def test_bad_values_are_told(self, line: str, name: str, tmp_path: Path) -> None:
+        if line == "within":
+            source = SUM.replace("in g4", "in g4 within n / 3")
+        else:
+            source = SUM.replace("budget  5 * n + 2", line)
+        with pytest.raises(VliwsimError) as caught:
+            run(tmp_path, source, x=[1, 2])
+        assert [p.name for p in caught.value.problems] == [name]
+
+    def test_a_budget_need_not_be_whole(self, tmp_path: Path) -> None:
+        one = run(tmp_path, SUM.replace("5 * n + 2", "5.25 * n + 1.25"), x=[1, 2])
+        assert one.budget == 11.75
+        assert one.verdict.endswith("right, legal, 0.25 cycles over budget.")

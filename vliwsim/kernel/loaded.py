@@ -54,7 +54,7 @@ class LoadedKernel:
 
         ``case`` names a case to start from; with nothing given the first one is run. ``given`` takes inputs whose names
         are those of options here. ``reference``: compare with the reference, if there is one. ``limit`` in cycles.
-        ``interrupt_at``: cycle, from 0. ``trace``: keep a record of every beat.
+        ``interrupt_at``: cycle, from 0. ``trace``: keep a record of every beat up to the halt.
 
         A run that is wrong, illegal or over budget is a result, not an exception: look at ``ok`` and ``diagnostics``.
         Raises :class:`~vliwsim.problems.VliwsimError` for inputs that do not fit and a reference that fails.

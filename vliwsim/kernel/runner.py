@@ -86,8 +86,8 @@ class KernelRun:
 
     @property
     def matches(self) -> bool | None:
-        """Do all outputs match the reference; None where nothing was compared."""
-        if self.expected is None:
+        """Do all outputs match the reference; None where nothing was compared or the run was stopped."""
+        if self.expected is None or self.reason == "stopped":
             return None
         return self.reason == "halt" and not any(self.differences.values())
 
@@ -204,7 +204,7 @@ def run_kernel(
     Raises :class:`~vliwsim.problems.InterfaceError` for inputs that do not fit, and
     :class:`~vliwsim.problems.ReferenceFailure`.
     """
-    setup = bind(kernel, inputs)
+    setup = _bound(kernel, inputs, case)
     output = contextlib.redirect_stdout(sys.stderr) if quiet else contextlib.nullcontext()
     with output:
         loaded = load_reference(kernel) if reference is True else reference or None
@@ -216,6 +216,15 @@ def run_kernel(
     simulation = simulate(setup, limit=limit, interrupt_at=interrupt_at, watch=watch, listen=listen)
     run = judged(setup, simulation, case=case, expected=expected, limit=limit)
     return attrs.evolve(run, trace=records)
+
+
+def _bound(kernel: Kernel, inputs: Mapping[str, Any], case: str) -> Setup:
+    try:
+        return bind(kernel, inputs)
+    except InterfaceError as error:
+        if case == "given":
+            raise
+        raise InterfaceError([attrs.evolve(p, found=f"{p.found} (case {case})") for p in error.problems]) from None
 
 
 def judged(
