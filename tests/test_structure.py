@@ -32,6 +32,7 @@ LEVELS = [
 RUNS_CODE = {
     "vliwsim.description.language.compile_python",  # functions made from checked meanings
     "vliwsim.machine.generated",  # functions made from decoded bundles
+    "vliwsim.machine.rows",  # the same
     "vliwsim.kernel.reference",  # the user's reference.py, which is code
 }
 
