@@ -125,7 +125,11 @@ def agree(made: Meaning, draw: random.Random, tries: int, halves: tuple[int | No
         spoilt = [
             value if constant or half_immediate else blotted(value, width, draw)
             for value, width, constant, half_immediate in zip(
-                values, sizes, fixed, [w == 16 and n not in ("loaded",) for w, n in zip(sizes, made.inputs)], strict=True
+                values,
+                sizes,
+                fixed,
+                [w == 16 and n not in ("loaded",) for w, n in zip(sizes, made.inputs)],
+                strict=True,
             )
         ]
         slow = made.evaluate(spoilt, halves)

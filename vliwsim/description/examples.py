@@ -19,6 +19,15 @@ class BadValue(ValueError):
     """A value of an example that its operand cannot have; the message says what was found and what is allowed."""
 
 
+def brief(value: object) -> str:
+    """A value of a data file, short, for a message."""
+    try:
+        text = repr(value)
+    except ValueError:
+        text = "a number of thousands of digits"
+    return text if len(text) <= 60 else text[:59] + "…"
+
+
 def raw_of(value: object, kind: ValueType, register: bool = True) -> int:
     """The raw value of what an example says; ``register``: extended to a whole register as results are."""
     if kind.packed and isinstance(value, (list, tuple)):
@@ -31,7 +40,7 @@ def raw_of(value: object, kind: ValueType, register: bool = True) -> int:
     number = _integer(value, kind)
     width = kind.width
     if not -(1 << width - 1) <= number < 1 << width:
-        raise BadValue(f"{number} for {kind.name}, which has {width} bits")
+        raise BadValue(f"{brief(number)} for {kind.name}, which has {width} bits")
     if register and not kind.packed and width < 32:
         return kind.value(number) & 0xFFFFFFFF
     return number & (1 << width) - 1
@@ -45,7 +54,7 @@ def _integer(value: object, kind: ValueType) -> int:
             pass
     if not isinstance(value, int):
         wanted = f"a list of {kind.lanes} integers" if kind.packed else "an integer"
-        raise BadValue(f"{str(value)[:40]!r} for {kind.name}, not {wanted}")
+        raise BadValue(f"{brief(value)} for {kind.name}, not {wanted}")
     return int(value)
 
 
@@ -64,7 +73,7 @@ def _float_bits(value: object) -> int:
             return from_float(float(value))
     except (ValueError, OverflowError):
         pass
-    raise BadValue(f'{str(value)[:40]!r} for f32, not a number, "nan", "inf" or bits such as "0x7fc00000"')
+    raise BadValue(f'{brief(value)} for f32, not a number, "nan", "inf" or bits such as "0x7fc00000"')
 
 
 def shown(raw: int, kind: ValueType) -> object:
@@ -101,12 +110,12 @@ def check_examples(operation: Operation, place: Place | None = None) -> list[Pro
             problems.append(
                 Problem(
                     "example-fails",
-                    f"{gives} from {list(example[0])}",
+                    f"{gives} from {brief(list(example[0]))}",
                     f"{wants}, as the example says",
                     "correct the meaning or the example",
                     place=place,
                     key=key,
-                )  # fmt: skip
+                )
             )
     return problems
 
@@ -140,7 +149,7 @@ def _raw_example(operation: Operation, example: object) -> tuple[list[int], tupl
 def _constant(value: object, kind: ValueType) -> int:
     number = _integer(value, kind)
     if not kind.low <= number <= kind.high:
-        raise BadValue(f"{number} for the constant {kind.name}, {kind.low} to {kind.high}")
+        raise BadValue(f"{brief(number)} for the constant {kind.name}, {kind.low} to {kind.high}")
     return number & 0xFFFFFFFF
 
 

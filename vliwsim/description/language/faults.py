@@ -40,20 +40,26 @@ class Faults(Exception):
 
 @attrs.frozen
 class Origin:
-    """Where a text stands in its file: ``line`` and ``column`` of its first character, counted from 1."""
+    """Where a text stands in its file: ``line`` and ``column`` of its first character, counted from 1.
+
+    ``before``: what stands before it on its first line.
+    """
 
     file: str
     key: str
     line: int = 1
     column: int = 1
+    before: str = ""
 
 
 def as_problem(fault: Fault, text: str, origin: Origin) -> Problem:
     """The fault as the user reads it, with the line of the text it is in."""
     lines = text.split("\n")
     excerpt = lines[fault.line - 1] if 0 < fault.line <= len(lines) else ""
-    column = fault.column + (origin.column - 1 if fault.line == 1 else 0)
-    indent = " " * (column - fault.column)
+    column = fault.column
+    if fault.line == 1:
+        column += origin.column - 1
+        excerpt = (origin.before or " " * (origin.column - 1)) + excerpt
     return Problem(
         fault.name,
         _short(fault.found),
@@ -61,7 +67,7 @@ def as_problem(fault: Fault, text: str, origin: Origin) -> Problem:
         fault.remedy,
         place=Place(origin.file, origin.line + fault.line - 1, max(1, column)),
         key=f"{origin.key}.{fault.part}",
-        excerpt=indent + excerpt[:200],
+        excerpt=excerpt[:200],
     )
 
 

@@ -14,9 +14,11 @@ _NAME = re.compile(r"[a-z][a-z0-9_]*\Z", re.ASCII)
 _ROLES = {"inout": Role.INOUT, "sticky": Role.STICKY, "const": Role.CONSTANT}
 
 RESERVED = frozenset(
-    """mem link loaded stored taken halt sum abs min max wrap uwrap sat usat unsigned signed bits concat clz ctz
-    popcount clmul tdiv trem round iterate sqrt fma fmin fmax float_to_int int_to_float classify as_float half_up half_even
-    half_away floor ceiling truncate k""".split()
+    """
+    mem link loaded stored taken halt k sum concat min max abs bits clz ctz popcount clmul tdiv trem round iterate
+    wrap uwrap sat usat unsigned signed sqrt fma fmin fmax float_to_int int_to_float as_float classify
+    half_up half_even half_away floor ceiling truncate
+    """.split()
 )
 """Words of the language: no operand or local name."""
 

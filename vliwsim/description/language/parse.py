@@ -95,7 +95,7 @@ class _Parser(Expressions):
                 faults.append(Fault("not-used", f"address {name} without an access", f"one mem[{name}, type]"))
             if operand.role is Role.TARGET and "taken" not in self.assigned:
                 faults.append(Fault("not-assigned", "a target, but taken is not assigned", "taken = condition"))
-        if not self.assigned:
+        if not self.assigned and not faults:
             faults.append(Fault("nothing-said", "nothing is assigned", "at least one result"))
         return faults
 
