@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import gc
 import os
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -27,6 +29,8 @@ from vliwsim.program.source.tree import Tree
 MOST_BYTES = 8 << 20
 """The largest source file that is read, in bytes."""
 MOST_LINES = 200_000
+MANY_LINES = 1000
+"""From here on assembling is worth some care with memory."""
 
 LoadCore = Callable[..., Core]
 Draft = list[tuple[Ready, int]] | int
@@ -56,6 +60,20 @@ def assemble(
     name = os.fspath(path)
     source = read_source(name) if text is None else text
     lines = source.splitlines()
+    with _collector_paused(len(lines) > MANY_LINES):
+        return _assemble(name, source, lines, core, load_core, changes, operations, allow_illegal)
+
+
+def _assemble(
+    name: str,
+    source: str,
+    lines: list[str],
+    core: Core | None,
+    load_core: LoadCore | None,
+    changes: Mapping[str, Any] | Sequence[str],
+    operations: OperationSet | None,
+    allow_illegal: bool,
+) -> Kernel:
     complaints = Complaints(name, lines)
     if len(lines) > MOST_LINES:
         complaints.add("too-long", (MOST_LINES + 1, 1), f"{len(lines)} lines", f"at most {MOST_LINES}")
@@ -76,6 +94,19 @@ def assemble(
 
         operations = load_operations(core.operations)
     return _Assembly(name, source, core, operations, tree, complaints, allow_illegal).kernel()
+
+
+@contextmanager
+def _collector_paused(pause: bool) -> Iterator[None]:
+    """Keep the garbage collector from looking through a growing program again and again: a third of the time."""
+    pause = pause and gc.isenabled()
+    if pause:
+        gc.disable()
+    try:
+        yield
+    finally:
+        if pause:
+            gc.enable()
 
 
 def read_source(path: str) -> str:
