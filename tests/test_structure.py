@@ -31,8 +31,7 @@ LEVELS = [
 
 RUNS_CODE = {
     "vliwsim.description.language.compile_python",  # functions made from checked meanings
-    "vliwsim.machine.generated",  # functions made from decoded bundles
-    "vliwsim.machine.rows",  # the same
+    "vliwsim.machine.rows",  # functions made from decoded bundles
     "vliwsim.kernel.reference",  # the user's reference.py, which is code
 }
 
