@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import os
+import subprocess
+import sys
 from pathlib import Path
 
 import attrs
@@ -372,6 +375,46 @@ def test_an_unknown_core_is_told_at_its_name() -> None:
     assert caught.value.problems[0].remedy == "pair7"
     with pytest.raises(CoreError):
         assemble("a.vliw", text="kernel a\ncore pair7\nstart:\n@0 halt\n", changes=["latency.load=-1"])
+
+
+def test_a_core_file_beside_the_source(tmp_path: Path) -> None:
+    (tmp_path / "mine.toml").write_text('name = "mine"\nbase = "pair7"\nlatency.load = 6\n', encoding="utf-8")
+    path = tmp_path / "a.vliw"
+    path.write_text("kernel a\ncore mine.toml\nstart:\n@load halt\n", encoding="utf-8")
+    built = assemble(path)
+    assert built.map.bundle_at[-1] == ("start", 6)
+    assert not built.notes
+    path.write_text("kernel a\ncore ../mine.toml\nstart:\n@load halt\n", encoding="utf-8")
+    with pytest.raises(SourceError, match=r"a.vliw:2:6  bad-name"):
+        assemble(path)
+
+
+def python(code: str, **environment: str) -> str:
+    """What a fresh Python prints."""
+    run = subprocess.run(
+        [sys.executable, "-c", code], env={**os.environ, **environment}, capture_output=True, text=True, check=True
+    )
+    return run.stdout
+
+
+def test_the_same_bytes_and_words_whatever_the_hash_seed() -> None:
+    code = (
+        "import hashlib\nfrom vliwsim.program.assembler import assemble\nfrom vliwsim.problems import VliwsimError\n"
+        f"print(hashlib.sha256(assemble({str(ENERGY)!r}).image).hexdigest())\n"
+        f"text = open({str(ENERGY)!r}).read().replace('g20', 'g2o').replace('lw', 'lww').replace('n >=', 'm >=')\n"
+        "try:\n    assemble('e.vliw', text=text)\nexcept VliwsimError as error:\n    print(error)\n"
+    )
+    one, other = (python(code, PYTHONHASHSEED=seed) for seed in ("1", "2"))
+    assert "unknown-name" in one
+    assert one == other
+
+
+def test_assembling_loads_no_heavy_library() -> None:
+    code = (
+        f"import sys\nfrom vliwsim.program.assembler import assemble\nassemble({str(ENERGY)!r})\n"
+        "print([m for m in ('networkx', 'numpy', 'scipy', 'rich', 'hypothesis') if m in sys.modules])"
+    )
+    assert python(code).strip() == "[]"
 
 
 def test_another_core_than_those_named_is_noted() -> None:

@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 from vliwsim.description.core import Core
+from vliwsim.description.files import open_regular
 from vliwsim.description.operations import Kind, OperationSet
 from vliwsim.problems import CoreError, ImageError, OptionError, Place, SourceError, problem
 from vliwsim.program.assembly.legality import Judge
@@ -86,7 +87,7 @@ def _assemble(
         from vliwsim.description.corefile import evolve
 
         core = evolve(core, changes)
-    if tree.cores and core.name not in [named.text for named in tree.cores]:
+    if tree.cores and core.name not in [named.text.removesuffix(".toml") for named in tree.cores]:
         where, found = tree.cores[0].where, f"assembled for {core.name}"
         complaints.add("other-core", where, found, "named here: " + ", ".join(c.text for c in tree.cores), kind="note")
     if operations is None:
@@ -112,7 +113,7 @@ def _collector_paused(pause: bool) -> Iterator[None]:
 def read_source(path: str) -> str:
     """The text of a source file; raises :class:`OptionError` when it cannot be read as text."""
     try:
-        with Path(path).open("rb") as file:
+        with open_regular(path) as file:
             data = file.read(MOST_BYTES + 1)
     except (OSError, ValueError) as error:
         said = error.strerror if isinstance(error, OSError) and error.strerror else str(error)
@@ -123,7 +124,7 @@ def read_source(path: str) -> str:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         line = data.count(b"\n", 0, error.start) + 1
-        raise SourceError(
+        raise OptionError(
             problem(
                 "not-text", f"byte {data[error.start]:#04x}, which is no UTF-8", "UTF-8 text", place=Place(path, line)
             )
@@ -155,8 +156,9 @@ def _core(tree: Tree, load: LoadCore | None, changes: Any, complaints: Complaint
 
         load = load_core
     named = tree.cores[0]
+    beside = named.text.endswith(".toml")  # a file of the user's own, in the source's folder
     try:
-        return load(named.text, changes)
+        return load(str(Path(complaints.file).parent / named.text) if beside else named.text, changes)
     except CoreError as error:
         first = error.problems[0]
         if len(error.problems) > 1 or first.place or first.key:

@@ -259,8 +259,10 @@ class OperandReader:
     def _address(self, operand: Operand, piece: Piece) -> Address | None:
         """An address form: ``[r]``, ``[r + s]``, ``[r then +s]``, ``[+s then r]``, ``[r then +s in ring N]``."""
         if operand.role is not Role.ADDRESS or piece.text[:1] != "[" or piece.text[-1:] != "]":
-            wanted = operand_form(operand)
-            self.complaints.add("bad-operand", piece.where, f"{piece.text} for {operand.name}", wanted)
+            wanted = operand.role is Role.ADDRESS
+            found = f"{piece.text}, where an address stands" if wanted else f"address {piece.text} for {operand.name}"
+            remedy = f"[{piece.text}]" if wanted and piece.text in self.scope.registers else ""
+            self.complaints.add("bad-operand", piece.where, found, operand_form(operand), remedy)
             return None
         inner = piece.part(1, len(piece.text) - 1)
         then = _THEN.search(inner.text)
