@@ -113,10 +113,10 @@ def some_regions(r: Random, core: PlainCore) -> tuple[PlainRegion, ...]:
     regions, start = [], 8 * r.randrange(3)
     while start < core.memory_size - 40 and len(regions) < 3:
         size, over = r.choice((16, 30, 64, 128)), r.choice((0, 4, 16, 9))
+        size = min(size, core.memory_size - start)
+        over = min(over, core.memory_size - start - size)  # nothing lies beyond memory
         content = tuple(None if r.random() < 0.05 else r.randrange(256) for _ in range(size))
-        regions.append(
-            PlainRegion(start, min(size, core.memory_size - start), over, content[: core.memory_size - start])
-        )
+        regions.append(PlainRegion(start, size, over, content))
         start += size + over + r.choice((0, 3, 16))
         start += -start % 8 if r.random() < 0.7 else 0
     return tuple(regions)

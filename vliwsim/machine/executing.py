@@ -55,7 +55,8 @@ def execute(ready: Preparation, state: State, prepared: Prepared, issued: Issued
         loaded = state.memory.load(addresses[k], access.bytes) if access and not access.store else 0
         inputs = input_values(state, part, loaded)
         outputs[k] = part.operation.evaluate(inputs, part.halves)
-        if any(isinstance(v, Undefined) for v in inputs) and any(isinstance(v, Undefined) for v in outputs[k]):
+        computed = any(isinstance(v, Undefined) for v in inputs) and any(isinstance(v, Undefined) for v in outputs[k])
+        if computed and not (access and not access.store and state.memory.declared_over(addresses[k], access.bytes)):
             issued.notes.append(NoteSite("undefined-read", prepared.index, k))
         gather(ready, state, issued, k, part, addresses.get(k, 0), outputs[k])
 

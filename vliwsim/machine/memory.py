@@ -85,6 +85,10 @@ class Memory:
             return False
         return OUTSIDE not in self.status[address : address + size]
 
+    def declared_over(self, address: int, size: int) -> bool:
+        """Whether the only undefined bytes of a readable access are those an ``over`` declares."""
+        return UNDEFINED not in self.status[address : address + size]
+
     def writable(self, address: int, size: int) -> bool:
         """May all ``size`` bytes be written."""
         if address + size > self.parameters.size:
