@@ -8,6 +8,7 @@ from collections.abc import Iterable, Mapping
 from pathlib import Path
 
 from vliwsim.description.examples import brief, check_examples
+from vliwsim.description.files import open_regular
 from vliwsim.description.language.tree import Iterate, Node
 from vliwsim.description.tablerows import (
     CLASS_NAME,
@@ -61,7 +62,7 @@ def _find(name: str) -> tuple[Path, bool]:
 
     folder = isa_folder() / "operations"
     path = folder / f"{name}.toml"
-    if not CLASS_NAME.match(name) or not path.is_file():
+    if not CLASS_NAME.match(name) or len(name) > 60 or not path.is_file():
         families = ", ".join(sorted(found.stem for found in folder.glob("*.toml")))
         raise OperationError(
             Problem("no-such-operations", f"operations {brief(name)}", f"{families}, or a path ending in .toml")
@@ -71,7 +72,7 @@ def _find(name: str) -> tuple[Path, bool]:
 
 def _read(path: Path) -> bytes:
     try:
-        with path.open("rb") as stream:
+        with open_regular(path) as stream:
             content = stream.read(LARGEST_FILE + 1)
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
