@@ -73,7 +73,10 @@ class Reach:
 
 @attrs.frozen
 class Part:
-    """One instruction, prepared. ``results``: for every output that is a register, its write numbers (two for a pair).
+    """One instruction, prepared.
+
+    ``numbers``: the write number of each of the effects' writes. ``results``: for every output that is a register, its
+    write numbers (two for a pair).
 
     ``target``: bundle index a direct branch goes to (None: nowhere), or for an indirect one the operand-file index in
     ``target_register``. ``link``: the link value of a call, None where no word begins there.
@@ -82,12 +85,17 @@ class Part:
     instruction: Instruction
     effects: Effects
     inputs: tuple[Input, ...]
+    numbers: range
     results: tuple[tuple[int, ...], ...]
     reach: Reach | None
     target: int | None
     target_register: int | None
     link: int | None
-    function: Callable[..., object]
+
+    @property
+    def function(self) -> Callable[..., object]:
+        """The operation's fast function for these operands, compiled when first asked for."""
+        return self.operation.compiled(self.halves)
 
     @property
     def operation(self) -> Operation:

@@ -92,12 +92,12 @@ class Preparation:
             instruction,
             found,
             wanted,
+            range(first, len(self.sites)),
             results,
             reach,
             target,
             target_register,
             self._link(bundle),
-            operation.compiled(tuple(i.half for i in wanted)),
         )
 
     def _index(self, place: object) -> int:

@@ -1,0 +1,1 @@
+"""The graph of pipeline contexts: everything a schedule can be in the middle of, whatever its data."""
