@@ -324,7 +324,7 @@ class TestCatalogue:
         assert status_of(["ops", "mul.half"]) == 0
         assert "16 × 16 → 32" in capsys.readouterr().out
         assert status_of(["ops", "mul.half", "--core", "pair7"]) == 0
-        assert "on pair7: latency 3; slots g.mul, h.mul" in capsys.readouterr().out
+        assert "On pair7  latency 3; slots g.mul, h.mul\n" in capsys.readouterr().out
         assert status_of(["ops", "--core", "float3"]) == 0
 
     def test_layout(self, capsys: Captured) -> None:

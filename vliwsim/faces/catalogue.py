@@ -94,15 +94,20 @@ def _listing(operations: OperationSet) -> str:
 
 
 def _page(operations: OperationSet, name: str, core: Core | None) -> str:
-    from vliwsim.description.language.manual import manual_page
+    from vliwsim.description.manual import manual
 
     operation = _find(operations, name)
-    text = manual_page(operation)
-    if core is None:
-        return text
-    slots = [s.name for s in core.slots if operation.operation_class in s.classes]
-    latency = core.latency.of(operation.name, operation.operation_class)
-    return f"{text}\n\non {core.name}: latency {latency}; slots {', '.join(slots) or 'none'}"
+    page = manual(operation)
+    if core is not None:
+        slots = [s.name for s in core.slots if operation.operation_class in s.classes]
+        latency = core.latency.of(operation.name, operation.operation_class)
+        page.append((f"On {core.name}", f"latency {latency}; slots {', '.join(slots) or 'none'}"))
+    width = max(len(heading) for heading, _ in page)
+    lines = [operation.name, ""]
+    for heading, text in page:
+        first, *rest = text.splitlines() or [""]
+        lines += [f"  {heading:<{width}}  {first}", *(f"  {'':<{width}}  {line}" for line in rest)]
+    return "\n".join(lines)
 
 
 @click.command(short_help="Draw the bit fields of a core's operation words.")
