@@ -444,9 +444,9 @@ class _Step:
 
     def judge_branches(self) -> None:
         branches = [k for k, part in enumerate(self.prepared.parts) if part.branches]
-        if not self.core.branch.overlap and branches:
-            if len(branches) > 1 or self.context.behind < self.core.branch.latency:
-                self.find("branch-overlap", [self.here(k) for k in branches], True)
+        crowded = len(branches) > 1 or self.context.behind < self.core.branch.latency
+        if branches and crowded and not self.core.branch.overlap:
+            self.find("branch-overlap", [self.here(k) for k in branches], True)
         for k in branches:
             part, on = self.prepared.parts[k], self.guard(k)
             if part.uses_link and part.link is None and on is not None:

@@ -1,9 +1,9 @@
 """What is known of values that decide: guards, counts, conditions, code addresses.
 
-A value is an identity, not a number: two places that hold the same identity hold the same number. Of an identity it may
-be known that it is zero or that it is not. A ``count`` steps a value v to a value D(v) that is v - 1 where v is not zero
-and v itself where it is: so where v is zero D(v) is, and where D(v) is not zero v is not. That alone keeps a drained
-epilogue out of its loop.
+A value is an identity, not a number: two places that hold the same identity hold the same number. Of an identity it
+may be known that it is zero or that it is not. A ``count`` steps a value v to a value D(v) that is v - 1 where v is not
+zero and v itself where it is: so where v is zero D(v) is, and where D(v) is not zero v is not. That alone keeps a
+drained epilogue out of its loop.
 """
 
 from __future__ import annotations
