@@ -10,6 +10,11 @@ from collections.abc import Iterable
 
 import attrs
 
+WIDEST = 160
+"""Characters of a source line that are shown."""
+LONGEST = 1000
+"""Characters of a found, allowed or try that are printed; ``as_json`` has them whole."""
+
 
 @attrs.frozen
 class Place:
@@ -50,15 +55,10 @@ class Problem:
         head.append(f"{self.name}  ({self.kind})")
         lines = ["  ".join(head)]
         if self.excerpt.strip() and self.place:
-            text = self.excerpt.rstrip()
-            indent = len(text) - len(text.lstrip())
-            lines.append("    " + text.lstrip().expandtabs(1))
-            lines.append("    " + " " * max(0, self.place.column - 1 - indent) + "^")
-        lines.append(f"  found    {self.found}")
-        if self.allowed:
-            lines.append(f"  allowed  {self.allowed}")
-        if self.remedy:
-            lines.append(f"  try      {self.remedy}")
+            text, caret = _window(self.excerpt.rstrip(), self.place.column - 1)
+            lines += [f"    {_plain(text)}", "    " + " " * caret + "^"]
+        parts = (("found   ", self.found), ("allowed ", self.allowed), ("try     ", self.remedy))
+        lines += [f"  {word} {_short(_plain(text))}" for word, text in parts if text or word == "found   "]
         return "\n".join(lines)
 
     def as_json(self) -> dict[str, object]:
@@ -72,6 +72,30 @@ class Problem:
         if self.remedy:
             out["try"] = self.remedy
         return out
+
+
+def _plain(text: str) -> str:
+    """One line of printable characters: files of strangers neither steer a terminal nor break our form."""
+    if text.isprintable():
+        return text
+    return "".join([c if c.isprintable() else " " if c == "\t" else "\N{REPLACEMENT CHARACTER}" for c in text])
+
+
+def _short(text: str) -> str:
+    """The text, its middle left out where it is longer than :data:`LONGEST` characters."""
+    half = LONGEST // 2
+    return text if len(text) <= LONGEST else f"{text[:half]} … {text[-half:]}"
+
+
+def _window(line: str, at: int) -> tuple[str, int]:
+    """What is shown of a line: all but its indentation, or WIDEST characters around ``at``; and where ``at`` is now."""
+    start = len(line) - len(line.lstrip())
+    if len(line) - start <= WIDEST:
+        return line[start:], max(0, at - start)
+    start = max(start, min(at - WIDEST // 2, len(line) - WIDEST))
+    shown = line[start : start + WIDEST]
+    left, right = start > 0 and line[:start].strip() != "", start + WIDEST < len(line)
+    return ("…" if left else "") + shown + ("…" if right else ""), max(0, min(at - start, WIDEST)) + left
 
 
 class VliwsimError(Exception):

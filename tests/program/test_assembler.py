@@ -346,7 +346,7 @@ def test_files_that_cannot_be_read(tmp_path: Path) -> None:
             assemble(path)
     bad = tmp_path / "bad.vliw"
     bad.write_bytes(b"kernel a\ncore \xff\n")
-    with pytest.raises(SourceError, match=r"bad.vliw:2:1  not-text"):
+    with pytest.raises(OptionError, match=r"bad.vliw:2:1  not-text"):
         assemble(bad)
     bad.write_bytes(b"\0" * 1000)
     with pytest.raises(SourceError):

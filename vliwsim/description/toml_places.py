@@ -16,6 +16,7 @@ from pathlib import Path
 
 import attrs
 
+from vliwsim.description.files import open_regular
 from vliwsim.problems import Place, Problem, VliwsimError
 
 LARGEST = 1 << 20
@@ -140,7 +141,7 @@ def read_toml(path: Path | str, error: type[VliwsimError]) -> TomlFile:
         target = Path(path)
         if target.exists() and not target.is_file():
             raise refuse("file-unreadable", "a folder or device", "a regular file that ends in .toml")
-        with open(target, "rb") as stream:
+        with open_regular(target) as stream:
             raw = stream.read(LARGEST + 1)
     except FileNotFoundError:
         raise refuse("file-missing", f"no file {file}", "a file that exists") from None

@@ -9,6 +9,7 @@ from typing import BinaryIO
 
 import numpy as np
 
+from vliwsim.description.files import open_regular
 from vliwsim.problems import InterfaceError, problem
 
 
@@ -19,7 +20,7 @@ def read_npy(path: Path, label: str) -> np.ndarray:
     Raises :class:`~vliwsim.problems.InterfaceError`.
     """
     try:
-        with path.open("rb") as stream:
+        with open_regular(path) as stream:
             magic = stream.read(6)
             if magic[:4] == b"PK\x03\x04":
                 raise _bad(label, f"{path} is an archive of several arrays", "a .npy file", "numpy.save(…) one array")

@@ -18,6 +18,7 @@ from typing import Any
 import attrs
 import numpy as np
 
+from vliwsim.description.files import open_regular
 from vliwsim.kernel.binding import Setup
 from vliwsim.kernel.elements import Element, convert
 from vliwsim.kernel.interface import interface_of
@@ -48,11 +49,13 @@ def load_reference(kernel: Kernel) -> Reference | None:
     """
     path = reference_path(kernel)
     try:
-        source = path.read_text(encoding="utf-8")
+        with open_regular(path) as stream:
+            source = stream.read().decode("utf-8-sig")
     except FileNotFoundError:
         return None
     except (OSError, UnicodeDecodeError) as error:
-        raise ReferenceFailure(problem("reference-file", f"{path}: {error}", "a Python file in UTF-8")) from None
+        said = getattr(error, "strerror", None) or str(error)
+        raise ReferenceFailure(problem("reference-file", f"{path}: {said}", "a Python file in UTF-8")) from None
     module = types.ModuleType("vliwsim_reference")
     module.__file__ = str(path)
     with judged_code(path, source, "loading it"), _importable(path.parent, module):

@@ -12,7 +12,7 @@ from typing import Any
 from vliwsim.description.core import Core
 from vliwsim.description.files import open_regular
 from vliwsim.description.operations import Kind, OperationSet
-from vliwsim.problems import CoreError, ImageError, OptionError, Place, SourceError, problem
+from vliwsim.problems import CoreError, ImageError, OptionError, Place, problem
 from vliwsim.program.assembly.legality import Judge
 from vliwsim.program.assembly.operands import Ready
 from vliwsim.program.assembly.schedule import Section as Stretch

@@ -20,6 +20,7 @@ from pathlib import Path
 
 import attrs
 
+from vliwsim.description.files import open_regular
 from vliwsim.problems import ImageError, Problem, problem
 
 MAGIC = b"vliwsim image 1\n"
@@ -105,7 +106,7 @@ def read_image(source: str | os.PathLike[str] | bytes) -> Image:
         return from_bytes(source)
     path = Path(source)
     try:
-        with path.open("rb") as file:
+        with open_regular(path) as file:
             data = file.read(MOST_BYTES + 1)
     except (OSError, ValueError) as error:
         said = error.strerror if isinstance(error, OSError) and error.strerror else str(error)

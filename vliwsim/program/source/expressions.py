@@ -299,14 +299,8 @@ class Formula:
             value = self._evaluate(environment)
         except Refused as refusal:
             raise self._error(refusal) from None
-        except KeyError as missing:
-            raise self._error(Refused("unknown-name", f"{missing.args[0]} has no value here")) from None
-        except ZeroDivisionError:
-            raise self._error(Refused("no-value", f"a division by zero in {self.text}")) from None
-        except (ArithmeticError, ValueError) as reason:
-            raise self._error(Refused("no-value", f"{self.text} has no value: {reason}")) from None
-        except TypeError:
-            raise self._error(Refused("no-value", f"{self.text} mixes values that do not go together")) from None
+        except (KeyError, ArithmeticError, ValueError, TypeError) as reason:
+            raise self._error(_no_value(self.text, reason)) from None
         if type(value) is float and not math.isfinite(value):
             raise self._error(Refused("no-value", f"{self.text} is {value}", "finite numbers"))
         return value
@@ -323,6 +317,17 @@ class Formula:
 
     def __reduce__(self) -> tuple[object, ...]:
         return (formula, (self.text, self.place, dict(self.bound), self.excerpt))
+
+
+def _no_value(text: str, reason: Exception) -> Refused:
+    """Why evaluating ``text`` ended in ``reason``."""
+    if isinstance(reason, KeyError):
+        return Refused("unknown-name", f"{reason.args[0]} has no value here", "names with a value")
+    if isinstance(reason, ZeroDivisionError):
+        return Refused("no-value", f"a division by zero in {text}", "a divisor other than 0")
+    if isinstance(reason, TypeError):
+        return Refused("no-value", f"{text} mixes values that do not go together", "numbers, each where it fits")
+    return Refused("no-value", f"{text} has no value: {reason}", "an expression with a value")
 
 
 def formula(text: str, place: Place | None = None, bound: Mapping[str, object] = {}, excerpt: str = "") -> Formula:
@@ -356,13 +361,15 @@ def _parse(text: str) -> tuple[dict[str, ast.AST], dict[str, ast.AST], Evaluate]
     try:
         tree = ast.parse(text.strip(), mode="eval")
     except SyntaxError as bad:
+        if "too many nested" in str(bad.msg):
+            raise Refused("too-deep", f"more than {DEEPEST} levels of nesting", f"at most {DEEPEST}") from None
         remedy = "==" if re.search(r"(?<![=<>!])=(?!=)", text) else ""
         refusal = Refused("bad-expression", f"{text.strip()} is not an expression", _ALLOWED, remedy)
         offset = bad.offset or len(text.strip())  # 0: at the end
         refusal.column = lead + max(0, min(offset - 1, len(text) - 1))
         raise refusal from None
     except (RecursionError, MemoryError, ValueError):
-        raise Refused("too-deep", f"more than {DEEPEST} levels of nesting") from None
+        raise Refused("too-deep", f"more than {DEEPEST} levels of nesting", f"at most {DEEPEST}") from None
     builder = _Builder()
     try:
         evaluate = builder.build(tree.body)
