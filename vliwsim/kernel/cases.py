@@ -159,11 +159,22 @@ def cases_of(kernel: Kernel, reference: Reference | None) -> Iterator[Case]:
         yield Case(name, dict(inputs))
 
 
+class _Generated:
+    """The generated cases as (name, inputs) pairs, made while somebody iterates, afresh every time."""
+
+    def __init__(self, kernel: Kernel) -> None:
+        self._kernel = kernel
+
+    def __iter__(self) -> Iterator[tuple[str, dict[str, Any]]]:
+        for case in generated_cases(self._kernel):
+            yield case.name, dict(case.inputs)
+
+
 def _own_cases(kernel: Kernel, reference: Reference) -> Iterator[tuple[Any, Any]]:
     assert reference.cases is not None
     with judged_code(reference.path, reference.source, "calling cases"):
         wanted = inspect.signature(reference.cases).parameters
-        arguments = [[(c.name, dict(c.inputs)) for c in generated_cases(kernel)]] if wanted else []
+        arguments = [_Generated(kernel)] if wanted else []
         result = reference.cases(*arguments)
         pairs = iter(result.items() if isinstance(result, Mapping) else result)
     while True:
