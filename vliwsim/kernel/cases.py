@@ -210,6 +210,7 @@ def find_case(kernel: Kernel, reference: Reference | None, name: str | None) -> 
             if case.name == name:
                 return case
     if name is None:
+        _say_why_none(kernel)
         found = f"no sizes and values were found for which {kernel.name} can run"
         raise InterfaceError(
             problem(
@@ -217,6 +218,18 @@ def find_case(kernel: Kernel, reference: Reference | None, name: str | None) -> 
             )
         )
     raise InterfaceError(problem("unknown-case", f"{kernel.name} has no case {name}", ", ".join(seen) or "none"))
+
+
+def _say_why_none(kernel: Kernel) -> None:
+    """Raise what keeps every case from binding, where that is neither ``needs`` nor a missing input."""
+    interface = interface_of(kernel)
+    sizes = Search(interface, {}).decent() or dict.fromkeys(interface.size_names, 1)
+    try:
+        bind(kernel, _zeros(interface, sizes))
+    except InterfaceError as error:
+        telling = [p for p in error.problems if p.name not in ("needs-violated", "missing-input")]
+        if telling:
+            raise InterfaceError(telling) from None
 
 
 def case_with(kernel: Kernel, reference: Reference | None, name: str | None, given: Mapping[str, Any]) -> Case:

@@ -22,7 +22,7 @@ from vliwsim.program.code import Instruction, Program
 from vliwsim.program.encoding.layout import MOST_OPERATIONS
 from vliwsim.program.kernel import Kernel, Section, SourceMap
 from vliwsim.program.source.complaints import Complaints
-from vliwsim.program.source.interface import interface
+from vliwsim.program.source.interface import interface, judge_type
 from vliwsim.program.source.parser import parse
 from vliwsim.program.source.scope import Scope
 from vliwsim.program.source.tree import Tree
@@ -164,6 +164,8 @@ def _core(tree: Tree, load: LoadCore | None, changes: Any, complaints: Complaint
         if len(error.problems) > 1 or first.place or first.key:
             raise
         complaints.add("unknown-core", named.where, first.found, first.allowed, first.remedy)
+        for line in tree.items:
+            judge_type(line, complaints)
         complaints.raise_if_any()
         raise
 

@@ -45,6 +45,13 @@ def interface(tree: Tree, scope: Scope) -> Interface:
     return Interface(items, needs, budget, frozenset(reader.sizes))
 
 
+def judge_type(line: ItemLine, complaints: Complaints) -> None:
+    """Complain of a type that is none, for which no core is needed."""
+    if line.type.text not in TYPES:
+        near = complaints.nearest(line.type.text, TYPES)
+        complaints.add("unknown-type", line.type.where, f"type {line.type.text}", " ".join(TYPES), near)
+
+
 class _Reader:
     def __init__(self, tree: Tree, scope: Scope) -> None:
         self.tree = tree
@@ -63,9 +70,7 @@ class _Reader:
         complaints, clauses = self.complaints, line.clauses
         before = len(complaints.problems)
         self._name(line.name)
-        if line.type.text not in TYPES:
-            near = self.complaints.nearest(line.type.text, TYPES)
-            complaints.add("unknown-type", line.type.where, f"type {line.type.text}", " ".join(TYPES), near)
+        judge_type(line, complaints)
         self._shape(line)
         values: dict[str, Formula | None] = {}
         for word, field in _FORMULAS.items():
