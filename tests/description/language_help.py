@@ -29,10 +29,12 @@ def fault_names(operands: str, does: str) -> list[str]:
     try:
         checked(operands, does)
     except OperationError as error:
-        assert str(error)
-        assert all(problem.found for problem in error.problems)
-        return [problem.name for problem in error.problems]
-    return []
+        refused = error
+    else:
+        return []
+    assert str(refused)
+    assert all(problem.found for problem in refused.problems)
+    return [problem.name for problem in refused.problems]
 
 
 def widths(made: Meaning, halves: tuple[int | None, ...] = ()) -> list[int]:

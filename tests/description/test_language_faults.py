@@ -263,9 +263,11 @@ def test_accepted(operands: str, does: str) -> None:
 @pytest.mark.parametrize(
     "operands",
     [
-        "d", "d:", "d:i31", "d:i32,", "d:i32, d:i32", "D:i32", "1:i32", "min:i32", "k:i32", "if:i32", "i32:i32", "d:i32.half",
+        "d", "d:", "d:i31", "d:i32,", "d:i32, d:i32", "D:i32", "1:i32", "min:i32", "k:i32", "if:i32", "i32:i32",
+        "d:i32.half",
         "d:i16.hal", "d:pair i32", "d:inout const i32", "n:const u0", "n:const u33", "n:const f32",
-        "n:const u5.half", "a:inout i16.half", "f:sticky i64", "d:address i32", "a:address, b:address", "t:target, u:target",
+        "n:const u5.half", "a:inout i16.half", "f:sticky i64", "d:address i32", "a:address, b:address",
+        "t:target, u:target",
         "d:i32 a:i32", "a:i32, b:i32, c:i32, d:i32, e:i32, f:i32, g:i32, h:i32, i:i32", "d:i32, " * 200,
         "a:u\u0661", "\u00e9:i32",
     ],

@@ -1,4 +1,4 @@
-"""Random meanings: whatever the check accepts, both engines compute alike, in range, and undefined bytes are followed."""
+"""Random meanings: what the check accepts, both engines compute alike, in range, and undefined bytes are followed."""
 
 from __future__ import annotations
 
@@ -32,7 +32,8 @@ MODES = ("half_up", "half_even", "half_away", "floor", "ceiling", "truncate")
 FORMS = (
     "({x} {arithmetic} {y})", "({x} {arithmetic} {y})", "({x} {arithmetic} {y})", "{fit}({x}, {width})",
     "{fit}({x}, {width})", "(-{x})", "(~{x})", "({x} {shift} {count})", "({x} // {y} if {y} != 0 else -1)",
-    "({x} % (({y} & 255) + 1))", "(tdiv({x}, {name}) if {name} != 0 else 7)", "(trem({x}, {name}) if {name} != 0 else 7)",
+    "({x} % (({y} & 255) + 1))", "(tdiv({x}, {name}) if {name} != 0 else 7)",
+    "(trem({x}, {name}) if {name} != 0 else 7)",
     "({x} if {y} {compare} {z} else {y})", "({x} if {y} {compare} {z} and not {x} < {z} else {z})",
     "({x} if {name} {compare} {z} or {y} > 0 else {z})", "({y} if {name} else {z})", "min({x}, {y})", "max({x}, {y})",
     "min({name}, b)", "max(a, {name})", "abs({x})", "({x} {compare} {y})", "round({x}, {count}, {mode})",

@@ -292,8 +292,19 @@ def test_values_of_examples(value: object, kind: str, raw: int) -> None:
     assert raw_of(value, TYPES[kind]) == raw
 
 
-@pytest.mark.parametrize(("value", "kind"), [(2**32, "i32"), (-(2**31) - 1, "i32"), ([1], "i16x2"), ("y", "f32"), ([], "f32"),
-                                             ("0x1ffffffff", "f32"), (None, "i32"), ([40000, 0], "i8x4")])  # fmt: skip
+@pytest.mark.parametrize(
+    ("value", "kind"),
+    [
+        (2**32, "i32"),
+        (-(2**31) - 1, "i32"),
+        (None, "i32"),
+        ([1], "i16x2"),
+        ([40000, 0, 0, 0], "i8x4"),
+        ("y", "f32"),
+        ([], "f32"),
+        ("0x1ffffffff", "f32"),
+    ],
+)
 def test_values_that_no_example_has(value: object, kind: str) -> None:
     with pytest.raises(BadValue):
         raw_of(value, TYPES[kind])

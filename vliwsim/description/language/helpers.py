@@ -13,14 +13,6 @@ def clmul(a: int, b: int) -> int:
     return product ^ (a & 0)  # refuses an undefined a even where b is 0
 
 
-def concat(parts: list[tuple[int, int]]) -> int:
-    """Bit patterns of known widths put together, the highest first."""
-    made = 0
-    for value, width in parts:
-        made = made << width | value & (1 << width) - 1
-    return made
-
-
 def rounded(x: int, n: int, mode: str) -> int:
     """x / 2**n as an integer, rounded by ``mode``."""
     if n == 0 or mode == "floor":

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 from vliwsim.description.language.faults import Fault, Faults, Origin, as_problem
 from vliwsim.description.language.operands import parse_operands
 from vliwsim.description.language.parse import Parsed, parse
-from vliwsim.description.language.tree import Assign, Input, walk
+from vliwsim.description.language.tree import Assign
 from vliwsim.description.language.types import TYPES, ValueType, type_named
 from vliwsim.description.operations import Access, Kind, Operand, Role
 from vliwsim.description.values import Value
@@ -159,8 +159,3 @@ def _outputs(parsed: Parsed) -> tuple[str, ...]:
 def _half_names(halves: tuple[int | None, ...]) -> str:
     named = ["-" if half is None else ("lo", "hi")[half] for half in halves]
     return " " + " ".join(named) if any(half is not None for half in halves) else ""
-
-
-def reads(statements: Sequence[Assign]) -> set[str]:
-    """Names of the inputs a meaning reads."""
-    return {node.name for assign in statements for node in walk(assign.value) if isinstance(node, Input)}

@@ -123,7 +123,7 @@ class _Parser(Expressions):
             self.lane = lane if target.each else None
             self.aim = kind
             value = self.expression(node.value)
-            assigns.append(self.assign(target.name, lane, kind, value, place))
+            assigns.append(self.assign(target.name, lane, kind, value))
         self.lane = None
         for assign in assigns:
             self.variables[target.name, assign.lane] = assign.variable
@@ -186,20 +186,19 @@ class _Parser(Expressions):
             )
         return kind
 
-    def assign(self, name: str, lane: int | None, kind: ValueType | None, value: Node, place: ast.expr) -> Assign:
+    def assign(self, name: str, lane: int | None, kind: ValueType | None, value: Node) -> Assign:
         output = name if kind is not None else ""
         if output:
             self.assigned.setdefault(name, set()).add(lane)
         variable = Variable(self.identifier(name, lane), kind)
-        return Assign(variable, value, output, lane, line=place.lineno, column=place.col_offset)
+        return Assign(variable, value, output, lane)
 
     def store(self, place: ast.Subscript, value: ast.expr) -> Assign:
         kind = self.memory(place, store=True)
         self.aim, self.lane = kind, None
         node = self.expression(value)
         self.assigned["stored"] = {None}
-        return Assign(Variable(self.identifier("_stored", None), kind), node, "stored", None,
-                      line=place.lineno, column=place.col_offset)  # fmt: skip
+        return Assign(Variable(self.identifier("_stored", None), kind), node, "stored")
 
 
 def _names_written(statement: ast.stmt) -> list[str]:

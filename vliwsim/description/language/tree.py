@@ -13,9 +13,7 @@ After :func:`~vliwsim.description.language.check.intervals.check` every node has
 
 from __future__ import annotations
 
-from typing import Any
-
-import attrs
+from typing import Any, NamedTuple
 
 from vliwsim.description.language.types import ValueType
 
@@ -24,8 +22,7 @@ INTEGER, TRUTH, FLOAT, PACKED = "integer", "truth", "float", "packed"
 whole register of a packed operand, as bits, which can be cut and copied but not computed with."""
 
 
-@attrs.frozen
-class Interval:
+class Interval(NamedTuple):
     """Integers from ``low`` to ``high``, both included; ``nonzero`` leaves out 0."""
 
     low: int
@@ -48,19 +45,26 @@ class Interval:
         )
 
 
-@attrs.define(eq=False)
+NOTHING_YET = Interval(0, 0)
+
+
 class Node:
     """An expression, at ``line`` and ``column`` (from 1) of its text.
 
-    ``pattern``: the number of bits of a value that stands for a bit pattern (an operand, a field, a wrapped value);
-    None for a value that is only a number.
+    ``pattern``: how many low bits of the value stand for a bit pattern (an operand, a field, a wrapped value); None for
+    a value that is only a number.
+
+    Plain classes, written out: this module is loaded by every cold run, and generated ones would take most of its time.
     """
 
-    line: int = attrs.field(default=1, kw_only=True)
-    column: int = attrs.field(default=1, kw_only=True)
-    kind: str = attrs.field(default=INTEGER, kw_only=True)
-    interval: Interval = attrs.field(default=Interval(0, 0), kw_only=True)
-    pattern: int | None = attrs.field(default=None, kw_only=True)
+    __slots__ = ("column", "interval", "kind", "line", "pattern")
+
+    def __init__(self, kind: str = INTEGER) -> None:
+        self.line = 1
+        self.column = 1
+        self.kind = kind
+        self.interval = NOTHING_YET
+        self.pattern: int | None = None
 
     @property
     def signed(self) -> bool:
@@ -79,125 +83,164 @@ class Node:
     def children(self) -> tuple[Node, ...]:
         return ()
 
+    def __repr__(self) -> str:
+        own = ", ".join(f"{name}={getattr(self, name)!r}" for name in type(self).__slots__)
+        return f"{type(self).__name__}({own})"
 
-@attrs.define(eq=False)
+
 class Number(Node):
     """A literal integer."""
 
-    value: int
+    __slots__ = ("value",)
+
+    def __init__(self, value: int, kind: str = INTEGER) -> None:
+        super().__init__(kind)
+        self.value = value
 
 
-@attrs.define(eq=False)
 class Real(Node):
     """A literal binary32 number, as its bits."""
 
-    bits: int
+    __slots__ = ("bits",)
+
+    def __init__(self, bits: int) -> None:
+        super().__init__(FLOAT)
+        self.bits = bits
 
 
-@attrs.define(eq=False)
 class Input(Node):
     """The value brought in by operand ``name`` (or ``loaded``, ``link``), or lane ``lane`` of it.
 
     ``type``: the whole operand's type. ``lane`` None of a packed type means all of it, as bits.
     """
 
-    name: str
-    type: ValueType
-    lane: int | None = None
+    __slots__ = ("lane", "name", "type")
+
+    def __init__(self, name: str, type: ValueType, lane: int | None = None) -> None:
+        super().__init__()
+        self.name = name
+        self.type = type
+        self.lane = lane
 
 
-@attrs.define(eq=False)
 class Variable:
     """A name assigned once. ``type`` is the output's type, or None of a local name or loop variable.
 
-    ``identifier`` is unique in its meaning and a legal identifier of C and Python.
+    ``identifier`` is unique in its meaning and a legal identifier of C and Python. ``kind``, ``interval``, ``pattern``:
+    as of a node. ``sound`` is False once the assignment was found wrong: later faults of it would only repeat that.
     """
 
-    identifier: str
-    type: ValueType | None = None
-    interval: Interval = Interval(0, 0)
-    kind: str = INTEGER
-    pattern: int | None = None
-    sound: bool = True
-    """False once its assignment was found wrong: later faults of it would only repeat that."""
+    __slots__ = ("identifier", "interval", "kind", "pattern", "sound", "type")
+
+    def __init__(self, identifier: str, type: ValueType | None = None) -> None:
+        self.identifier = identifier
+        self.type = type
+        self.interval = NOTHING_YET
+        self.kind = INTEGER
+        self.pattern: int | None = None
+        self.sound = True
+
+    def __repr__(self) -> str:
+        return f"Variable({self.identifier})"
 
 
-@attrs.define(eq=False)
 class Local(Node):
     """The value of a variable assigned before."""
 
-    variable: Variable
+    __slots__ = ("variable",)
+
+    def __init__(self, variable: Variable) -> None:
+        super().__init__()
+        self.variable = variable
 
 
-@attrs.define(eq=False)
 class Unary(Node):
     """``-`` (integers and floats), ``~`` (integers), ``not`` (truths)."""
 
-    operator: str
-    operand: Node
+    __slots__ = ("operand", "operator")
+
+    def __init__(self, operator: str, operand: Node) -> None:
+        super().__init__()
+        self.operator = operator
+        self.operand = operand
 
     def children(self) -> tuple[Node, ...]:
         return (self.operand,)
 
 
-@attrs.define(eq=False)
-class Binary(Node):
+class _Two(Node):
+    """An operator between two expressions."""
+
+    __slots__ = ("left", "operator", "right")
+
+    def __init__(self, operator: str, left: Node, right: Node) -> None:
+        super().__init__()
+        self.operator = operator
+        self.left = left
+        self.right = right
+
+    def children(self) -> tuple[Node, ...]:
+        return (self.left, self.right)
+
+    def __repr__(self) -> str:
+        return f"{type(self).__name__}({self.left!r} {self.operator} {self.right!r})"
+
+
+class Binary(_Two):
     """``+ - * // % << >> & | ^`` over integers (``//``, ``%``, ``>>`` floor); ``+ - * /`` over floats."""
 
-    operator: str
-    left: Node
-    right: Node
-
-    def children(self) -> tuple[Node, ...]:
-        return (self.left, self.right)
+    __slots__ = ()
 
 
-@attrs.define(eq=False)
-class Compare(Node):
+class Compare(_Two):
     """``== != < <= > >=``; of floats, every comparison with a NaN is false except ``!=``. A truth."""
 
-    operator: str
-    left: Node
-    right: Node
-
-    def children(self) -> tuple[Node, ...]:
-        return (self.left, self.right)
+    __slots__ = ()
 
 
-@attrs.define(eq=False)
 class Logic(Node):
     """``and`` or ``or`` of truths, from the left, stopping where the answer is known. A truth."""
 
-    operator: str
-    parts: tuple[Node, ...]
+    __slots__ = ("operator", "parts")
+
+    def __init__(self, operator: str, parts: tuple[Node, ...]) -> None:
+        super().__init__()
+        self.operator = operator
+        self.parts = parts
 
     def children(self) -> tuple[Node, ...]:
         return self.parts
 
 
-@attrs.define(eq=False)
 class Choose(Node):
     """``yes if test else no``; only the chosen arm is computed. ``test`` is a truth, or an integer that is not 0."""
 
-    test: Node
-    yes: Node
-    no: Node
+    __slots__ = ("no", "test", "yes")
+
+    def __init__(self, test: Node, yes: Node, no: Node) -> None:
+        super().__init__()
+        self.test = test
+        self.yes = yes
+        self.no = no
 
     def children(self) -> tuple[Node, ...]:
         return (self.test, self.yes, self.no)
 
 
-@attrs.define(eq=False)
 class Fit(Node):
     """``wrap``/``uwrap`` (the low ``bits``, read as signed or not) or ``sat``/``usat`` (the nearest that fits).
 
     ``how`` is ``wrap`` or ``sat``.
     """
 
-    how: str
-    bits: int
-    to_signed: bool
-    operand: Node
+    __slots__ = ("bits", "how", "operand", "to_signed")
+
+    def __init__(self, how: str, bits: int, to_signed: bool, operand: Node) -> None:
+        super().__init__()
+        self.how = how
+        self.bits = bits
+        self.to_signed = to_signed
+        self.operand = operand
 
     @property
     def low(self) -> int:
@@ -211,36 +254,41 @@ class Fit(Node):
         return (self.operand,)
 
 
-@attrs.define(eq=False)
 class Call(Node):
     """A built-in function; :data:`~vliwsim.description.language.expressions.FUNCTIONS` has them and their arguments.
 
     ``mode``: of ``round`` and ``float_to_int``, the rounding. ``to``: the integer type ``float_to_int`` gives.
     """
 
-    function: str
-    arguments: tuple[Node, ...]
-    mode: str = ""
-    to: ValueType | None = None
+    __slots__ = ("arguments", "function", "mode", "to")
+
+    def __init__(self, function: str, arguments: tuple[Node, ...], mode: str = "", to: ValueType | None = None) -> None:
+        super().__init__()
+        self.function = function
+        self.arguments = arguments
+        self.mode = mode
+        self.to = to
 
     def children(self) -> tuple[Node, ...]:
         return self.arguments
 
 
-@attrs.define(eq=False)
 class Iterate(Node):
     """``variable`` begins as ``start`` and becomes ``step`` (which reads it) ``count`` times; the last is the value."""
 
-    count: int
-    variable: Variable
-    start: Node
-    step: Node
+    __slots__ = ("count", "start", "step", "variable")
+
+    def __init__(self, count: int, variable: Variable, start: Node, step: Node) -> None:
+        super().__init__()
+        self.count = count
+        self.variable = variable
+        self.start = start
+        self.step = step
 
     def children(self) -> tuple[Node, ...]:
         return (self.start, self.step)
 
 
-@attrs.define(eq=False)
 class Assign:
     """``variable = value``. ``output``: the operand (or ``stored``, ``taken``) it gives, else ``""``; ``lane`` of it.
 
@@ -248,12 +296,16 @@ class Assign:
     (``lane`` None) from a 32-bit pattern holds the bits.
     """
 
-    variable: Variable
-    value: Node
-    output: str = ""
-    lane: int | None = None
-    line: int = 1
-    column: int = 1
+    __slots__ = ("lane", "output", "value", "variable")
+
+    def __init__(self, variable: Variable, value: Node, output: str = "", lane: int | None = None) -> None:
+        self.variable = variable
+        self.value = value
+        self.output = output
+        self.lane = lane
+
+    def __repr__(self) -> str:
+        return f"Assign({self.variable!r}, {self.value!r}, {self.output!r}, {self.lane})"
 
 
 def walk(node: Node) -> list[Node]:

@@ -189,7 +189,7 @@ class _Checker(Functions):
                     )
                 from vliwsim.description.language.floats import from_int
 
-                real = Real(from_int(side.value), line=side.line, column=side.column)
+                real = Real(from_int(side.value))
                 self.real(real, {})
                 setattr(node, name, real)
 
