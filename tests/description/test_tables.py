@@ -198,7 +198,7 @@ def test_a_fault_of_the_meaning_points_into_the_file(tmp_path: Path) -> None:
     text = GOOD.replace('"d = a * b"', '"d = a * c"')
     (problem,) = refused(tmp_path, text)
     assert (problem.place.line, problem.place.column) == (6, 21)
-    assert problem.excerpt[problem.place.column - 1 :] == "c"
+    assert problem.excerpt[problem.place.column - 1 :] == 'c"'
 
 
 def test_names_and_codes_are_taken_once_over_all_files(tmp_path: Path) -> None:

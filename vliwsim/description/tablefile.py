@@ -19,6 +19,7 @@ from vliwsim.description.tablerows import (
     TableFile,
     class_fault,
     shape_problems,
+    text_problems,
 )
 from vliwsim.problems import OperationError, Place, Problem
 
@@ -145,7 +146,9 @@ def _check_rows(file: TableFile, problems: list[Problem]) -> None:
         wrong = shape_problems(row)
         code = (row.data or {}).get("code")
         row.code = code if type(code) is int else 0
-        if not wrong:
+        if wrong:
+            wrong += text_problems(row)
+        else:
             try:
                 operation = row.operation()
                 operation.compiled()

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import re
 from collections.abc import Mapping
 
@@ -9,7 +10,7 @@ import attrs
 
 from vliwsim.description.examples import brief, examples_of
 from vliwsim.description.language.faults import Origin
-from vliwsim.description.language.meaning import read_meaning
+from vliwsim.description.language.meaning import Meaning, read_meaning
 from vliwsim.description.operations import Operation
 from vliwsim.problems import OperationError, Place, Problem
 
@@ -37,6 +38,10 @@ class TableFile:
         """The place of a character of the text."""
         start = self.text.rfind("\n", 0, offset) + 1
         return Place(self.path, self.text.count("\n", 0, offset) + 1, offset - start + 1)
+
+    def line(self, number: int) -> str:
+        """The text of a line, counted from 1."""
+        return next(itertools.islice(self.text.split("\n"), number - 1, None), "")
 
 
 @attrs.define(eq=False)
@@ -90,10 +95,7 @@ def _build(row: Row) -> Operation:
         if problems := shape_problems(row):
             raise OperationError(problems)
     data = row.data
-    try:
-        meaning = read_meaning(row.name, str(data["operands"]), str(data["does"]), row.origin("does"))
-    except OperationError as error:
-        raise OperationError(_moved(row, problem) for problem in error.problems) from None
+    meaning = _meaning(row, str(data["operands"]), str(data["does"]))
     return Operation(
         name=row.name,
         code=row.code,
@@ -112,6 +114,13 @@ def _build(row: Row) -> Operation:
     )
 
 
+def _meaning(row: Row, operands: str, does: str) -> Meaning:
+    try:
+        return read_meaning(row.name, operands, does, row.origin("does"))
+    except OperationError as error:
+        raise OperationError(_moved(row, problem) for problem in error.problems) from None
+
+
 def _parsed(row: Row) -> Mapping[str, object]:
     """The keys of a row of a file that was only cut at its headers."""
     import tomllib
@@ -124,13 +133,14 @@ def _parsed(row: Row) -> Mapping[str, object]:
 
 
 def _moved(row: Row, problem: Problem) -> Problem:
-    """A problem of the operands, moved from the meaning's place to theirs."""
-    if not problem.key.endswith(".operands") or problem.place is None:
+    """The problem with the line it is in; one of the operands is moved from the place of the meaning to theirs."""
+    place = problem.place
+    if place is None:
         return problem
-    origin, does = row.origin("operands"), row.origin("does")
-    column = origin.column + problem.place.column - does.column
-    excerpt = origin.before + problem.excerpt[does.column - 1 :]
-    return attrs.evolve(problem, place=Place(origin.file, origin.line, max(1, column)), excerpt=excerpt)
+    if problem.key.endswith(".operands"):
+        origin, does = row.origin("operands"), row.origin("does")
+        place = Place(origin.file, origin.line, max(1, origin.column + place.column - does.column))
+    return attrs.evolve(problem, place=place, excerpt=row.file.line(place.line))
 
 
 def shape_problems(row: Row) -> list[Problem]:
@@ -139,7 +149,9 @@ def shape_problems(row: Row) -> list[Problem]:
     problems: list[Problem] = []
 
     def bad(name: str, key: str, found: str, allowed: str) -> None:
-        problems.append(Problem(name, found, allowed, place=row.place(key), key=f"{row.name}.{key}"[:80]))
+        place = row.place(key)
+        excerpt = row.file.line(place.line)
+        problems.append(Problem(name, found, allowed, place=place, key=f"{row.name}.{key}"[:80], excerpt=excerpt))
 
     for key in data:
         if key not in KEYS:
@@ -162,6 +174,17 @@ def shape_problems(row: Row) -> list[Problem]:
     if not isinstance(examples, list) or len(examples) > MOST_EXAMPLES:
         bad("bad-value", "examples", brief(examples), f"a list of at most {MOST_EXAMPLES} [[inputs], [outputs]]")
     return problems
+
+
+def text_problems(row: Row) -> list[Problem]:
+    """Mistakes in the operands and the meaning of a row whose keys are wrong."""
+    operands, does = ((row.data or {}).get(key) for key in ("operands", "does"))
+    if isinstance(operands, str) and isinstance(does, str):
+        try:
+            _meaning(row, operands, does)
+        except OperationError as error:
+            return list(error.problems)
+    return []
 
 
 def class_fault(name: object) -> str:

@@ -6,9 +6,11 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import BinaryIO
 
+import attrs
 import click
 
 from vliwsim.faces.options import core_options, load
+from vliwsim.problems import ImageError, problem
 
 
 @click.command(short_help="Assemble a kernel into an image.")
@@ -49,16 +51,24 @@ def disassemble(image: str, core: str | None, changes: Sequence[str], output: st
 
     The image names its core; --core says where to find it when that is not a shipped one.
     """
-    from vliwsim.description.corefile import core_digest, load_core
+    from vliwsim.description.corefile import core_digest, core_names, load_core
     from vliwsim.description.tables import load_operations
     from vliwsim.program.disassembly import disassemble as source_of
     from vliwsim.program.encoding.decode import decode
     from vliwsim.program.encoding.image import read_image
 
     found = read_image(image)
+    if core is None and found.core not in core_names():
+        said, allowed = f"{image} is for a core {found.core!r}", f"a shipped core ({', '.join(core_names())})"
+        raise ImageError(
+            problem("unknown-core", said, allowed, "--core FILE")
+        )  # a stranger's file names no file of ours
     chosen = load_core(core or found.core, tuple(changes))
     operations = load_operations(chosen.operations)
-    program = decode(chosen, operations, found, core_digest(chosen, operations.digest) if found.digest else None)
+    try:
+        program = decode(chosen, operations, found, core_digest(chosen, operations.digest) if found.digest else None)
+    except ImageError as error:
+        raise ImageError([attrs.evolve(p, found=f"{image}: {p.found}") for p in error.problems]) from None
     text = source_of(program)
     if output is None:
         click.echo(text, nl=False)
