@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 
 import attrs
 
-from vliwsim.flow.values import Condition, Constant, Identity, Knowledge, Known, Literal
+from vliwsim.flow.values import Condition, Constant, Identity, Implied, Knowledge, Known, Literal
 
 
 @attrs.frozen(order=True)
@@ -44,7 +44,7 @@ class Context:
 
     ``at``: bundle index, ``within``: beats of its idle word already issued. ``busy``: (slot, beats still taken).
     ``behind``: bundles since the last branch issued, at most the branch latency. ``values``: of the registers that are
-    followed, in their order. ``facts``: (identity, is it nonzero), ``steps``: (identity, counted down from).
+    followed, in order. ``facts``: (identity, is it nonzero), ``implied``: (identity, what holds where it is not zero).
     ``waited``: the bundle has had its wait for a fresh operand.
     """
 
@@ -56,12 +56,12 @@ class Context:
     behind: int
     values: tuple[Known, ...]
     facts: tuple[tuple[Identity, bool], ...]
-    steps: tuple[tuple[Identity, Identity], ...]
+    implied: tuple[tuple[Identity, Implied], ...]
     waited: bool = False
 
     @property
     def knowledge(self) -> Knowledge:
-        return Knowledge(dict(self.facts), dict(self.steps))
+        return Knowledge(dict(self.facts), dict(self.implied))
 
 
 def normal(
@@ -104,13 +104,36 @@ def normal(
     )
     new_turns = tuple(Turn(t.bundles, t.site, condition(on), t.target) for t, on in kept_turns)
     facts = tuple(sorted((numbers[v], nonzero) for v, nonzero in knowledge.facts.items() if v in numbers))
-    steps = []
+    implied = []
     for old, new in numbers.items():
-        parent = knowledge.steps.get(old)
-        while parent is not None and parent not in numbers:
-            parent = knowledge.steps.get(parent)
-        if parent is not None and knowledge.facts.get(old) is None:
-            steps.append((new, numbers[parent]))
+        if knowledge.facts.get(old) is None:
+            kept = [Literal(numbers[i.value], i.nonzero) for i in _told(old, knowledge, numbers)]
+            if kept:
+                implied.append((new, tuple(sorted(kept))))
     return Context(
-        at, within, new_flights, new_turns, tuple(sorted(busy)), behind, new_values, facts, tuple(sorted(steps)), waited
+        at,
+        within,
+        new_flights,
+        new_turns,
+        tuple(sorted(busy)),
+        behind,
+        new_values,
+        facts,
+        tuple(sorted(implied)),
+        waited,
     )
+
+
+def _told(value: Identity, knowledge: Knowledge, kept: Mapping[Identity, Identity]) -> set[Literal]:
+    """What follows for the ``kept`` identities where ``value`` is not zero, through those that are not kept."""
+    found: set[Literal] = set()
+    ahead, seen = [value], {value}
+    while ahead:
+        for item in knowledge.implied.get(ahead.pop(), ()):
+            if item.value in kept:
+                if knowledge.facts.get(item.value) is None:
+                    found.add(item)
+            elif item.nonzero and item.value not in seen:
+                seen.add(item.value)
+                ahead.append(item.value)
+    return found

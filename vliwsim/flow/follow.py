@@ -2,21 +2,28 @@
 
 Followed are registers that decide something: guards, ``count`` registers, branch operands and indirect targets, and
 what they are copied or told from. Of the operations only what their meaning says plainly is known: a copy, a constant,
-a comparison with zero, a count, a link; any other result is a value of its own.
+a comparison with zero, a value passed where another is (not) zero, a count, a link; any other result is a value of
+its own.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Protocol
 
-from vliwsim.description.language.tree import Choose, Compare, Fit, Input, Node, Number
+from vliwsim.description.language.tree import INTEGER, Choose, Compare, Fit, Input, Node, Number
 from vliwsim.description.operations import Kind, Operation
-from vliwsim.flow.values import ALWAYS, Condition, Constant, Identity, Knowledge, Known, literal
+from vliwsim.flow.values import ALWAYS, Condition, Constant, Identity, Knowledge, Known, Literal, literal
 from vliwsim.machine.parts import Part
 from vliwsim.machine.prepared import Preparation
 
 COUNTED_OUT = 64
 """Constants up to this are counted down exactly; larger ones become values of which nothing is known."""
+
+
+WHOLE = ("i32", "u32", "f32")
+"""Types of operands that are a whole register and nothing else."""
+OTHER = {"zero": "nonzero", "nonzero": "zero"}
 
 
 class Values(Protocol):
@@ -48,8 +55,7 @@ class Follow:
                 part.inputs[source].index
                 for part in parts
                 if len(part.results) == 1 and part.effects.writes[0].register in followed
-                for source in [told_from(part.operation)]
-                if source is not None
+                for source in told_from(part.operation)
             }
             more = {r for r in more if 0 <= r < ready.first_constant} - followed
             if not more:
@@ -81,6 +87,8 @@ class Follow:
         value = self.operand(values, part, 0)
         if kind == "copy":
             return value, None
+        if kind.startswith("passed"):
+            return self.passed(values, value, literal(self.operand(values, part, 1), kind == "passed nonzero")), None
         return self.compared(values, value, kind), None
 
     @staticmethod
@@ -90,9 +98,7 @@ class Follow:
                 return values.fresh_identity()
             return Constant(max(0, old.bits - 1))
         new = values.fresh_identity()
-        values.knowledge.steps[new] = old
-        if values.knowledge.facts.get(old) is False:
-            values.knowledge.facts[new] = False
+        values.knowledge.imply(new, [Literal(old, True)])
         return new
 
     @staticmethod
@@ -104,7 +110,22 @@ class Follow:
         known = values.knowledge.facts.get(value)
         if known is not None:
             return Constant(int(known == nonzero))
-        return value if nonzero else values.fresh_identity()
+        if nonzero:
+            return value
+        new = values.fresh_identity()
+        values.knowledge.imply(new, [Literal(value, False)])
+        return new
+
+    @staticmethod
+    def passed(values: Values, value: Known, where: Condition | None) -> Known:
+        """``value`` where a condition holds, else 0."""
+        if where is None or value == Constant(0):
+            return Constant(0)
+        if not where:
+            return value
+        new = values.fresh_identity()
+        values.knowledge.imply(new, [*where, *([] if isinstance(value, Constant) else [Literal(value, True)])])
+        return new
 
     def taken(self, values: Values, part: Part) -> Condition | None:
         """The condition that a guard-on branch is taken; None where it is not for certain."""
@@ -132,21 +153,28 @@ class Follow:
         return self.ready.program.index_at.get(address.bits, -1)
 
 
-def told_from(operation: Operation) -> int | None:
-    """The input that a result is a copy of, or tells zero from: its index, None for other operations."""
-    return None if telling(operation) is None else 0
+def told_from(operation: Operation) -> range:
+    """The inputs that a result is a copy of, or tells something about: their indices, none for other operations."""
+    kind = telling(operation)
+    return range(0) if kind is None else range(2) if kind.startswith("passed") else range(1)
 
 
 def telling(operation: Operation) -> str | None:
-    """``copy``, ``nonzero`` (of input 0, as 1 or 0), ``zero``, or None: read off the meaning, not the name."""
-    if operation.kind is not Kind.COMPUTE or len(operation.inputs) != 1 or len(operation.outputs) != 1:
+    """What a result tells of the inputs, read off the meaning, not the name; None where that is nothing.
+
+    ``copy`` of input 0; ``nonzero`` or ``zero``: 1 where input 0 is (not) zero, else 0; ``passed nonzero`` or ``passed
+    zero``: input 0 where input 1 is (not) zero, else 0.
+    """
+    if operation.kind is not Kind.COMPUTE or not 1 <= len(operation.inputs) <= 2 or len(operation.outputs) != 1:
         return None
-    if any(operand.half or operand.pair for operand in operation.operands):
+    if any(operand.half or operand.pair or operand.type not in WHOLE for operand in operation.operands):
         return None
     statements = operation.meaning.statements
     if len(statements) != 1 or statements[0].lane is not None:
         return None
     node = bare(statements[0].value)
+    if len(operation.inputs) == 2:
+        return passing(node, operation.inputs)
     if isinstance(node, Input) and node.lane is None:
         return "copy"
     if isinstance(node, Choose) and isinstance(node.yes, Number) and isinstance(node.no, Number):
@@ -156,13 +184,29 @@ def telling(operation: Operation) -> str | None:
         told = compared_with_zero(test)
         if told is None:
             return None
-        return told if yes else {"zero": "nonzero", "nonzero": "zero"}[told]
+        return told if yes else OTHER[told]
     return compared_with_zero(node)
+
+
+def passing(node: Node, inputs: Sequence[str]) -> str | None:
+    """``passed nonzero`` or ``passed zero`` for a choice between input 0 and 0 by a comparison of input 1 with 0."""
+    if not isinstance(node, Choose):
+        return None
+    told, yes, no = compared_with_zero(node.test), bare(node.yes), bare(node.no)
+    if told is None or bare(node.test.left).name != inputs[1]:  # type: ignore[attr-defined]
+        return None
+    if isinstance(yes, Number):
+        yes, no, told = no, yes, OTHER[told]
+    if isinstance(no, Number) and no.value == 0 and isinstance(yes, Input) and yes.name == inputs[0]:
+        return f"passed {told}"
+    return None
 
 
 def compared_with_zero(node: Node) -> str | None:
     """``zero`` or ``nonzero`` for ``input == 0`` and ``input != 0``."""
     if not isinstance(node, Compare) or not isinstance(bare(node.left), Input) or not isinstance(node.right, Number):
+        return None
+    if node.left.kind != INTEGER:  # a float may be zero and have bits: -0.0
         return None
     if node.right.value != 0:
         return None

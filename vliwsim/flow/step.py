@@ -45,13 +45,15 @@ class Beat:
     """What one beat of a context may do. ``successors``: contexts, or None for the end of the program.
 
     ``did``: ``issue``, ``hold``, ``fresh``, or ``fork`` where only a fact is learned and no time passes.
-    ``landed``: write numbers that (may) land.
+    ``landed``: write numbers that (may) land. ``guards``: of a bundle that issues, for each instruction whether its
+    guard is on (True), off (False) or not known (None).
     """
 
     did: str
     successors: tuple[Context | None, ...]
     findings: tuple[Finding, ...]
     landed: tuple[tuple[int, bool], ...] = ()
+    guards: tuple[bool | None, ...] = ()
 
 
 class _Fork(Exception):
@@ -118,6 +120,7 @@ class _Step:
         self.prepared: Prepared = self.ready[context.at]
         self.findings: list[Finding] = []
         self.landed: list[tuple[int, bool]] = []
+        self.guards: tuple[bool | None, ...] = ()
         self.flights = [f for f in context.flights if f.beats > 0]
         self.next_identity = 1 + max(
             [v for v in context.values if isinstance(v, int)]
@@ -135,13 +138,15 @@ class _Step:
             return self.beat(cause, [self.later(self.context.at, self.context.within, self.context.turns, waited)])
         if not self.read():
             return self.beat("issue", [])
+        conditions = [self.guard(k) for k in range(len(self.prepared.parts))]
+        self.guards = tuple(None if on else on is not None for on in conditions)
         turns, halts = self.execute()
         return self.redirect(turns, halts)
 
     # ------------------------------------------------------------------------------------------------------ helpers
 
     def beat(self, did: str, successors: Iterable[Context | None]) -> Beat:
-        return Beat(did, tuple(dict.fromkeys(successors)), tuple(self.findings), tuple(self.landed))
+        return Beat(did, tuple(dict.fromkeys(successors)), tuple(self.findings), tuple(self.landed), self.guards)
 
     def find(self, rule: str, sites: Iterable[tuple[int, int]], sure: bool, **more: object) -> None:
         self.findings.append(Finding(rule, self.prepared.index, tuple(dict.fromkeys(sites)), sure, **more))  # type: ignore[arg-type]
@@ -182,30 +187,33 @@ class _Step:
     # --------------------------------------------------------------------------------------------------------- land
 
     def land(self, due: Sequence[Flight]) -> None:
+        self.landed += [(flight.number, not flight.on) for flight in due]
+        self.judge_landing(due)
+        for flight in due:
+            if self.register(flight) in self.follow.index:
+                self.bring(flight)
+
+    def judge_landing(self, due: Sequence[Flight], sure: bool = True) -> None:
+        """``lands-twice`` and ``write-ports`` of results that land together, ``sure`` if they land at all."""
         by_register: dict[int, list[Flight]] = {}
         for flight in due:
-            self.landed.append((flight.number, not flight.on))
             if self.ready.sites[flight.number].write.what != "sticky":
                 by_register.setdefault(self.register(flight), []).append(flight)
         for register, flights in by_register.items():
             for k, one in enumerate(flights):
                 for other in flights[k + 1 :]:
                     if self.knowledge.possible(one.on, other.on):
-                        sure = not one.on and not other.on
-                        rule = "lands-twice"
-                        self.find(rule, [self.site(one), self.site(other)], sure, register=register)
-        self.judge_ports(due)
-        for flight in due:
-            if self.register(flight) in self.follow.index:
-                self.bring(flight)
+                        both_on = sure and not one.on and not other.on
+                        self.find("lands-twice", [self.site(one), self.site(other)], both_on, register=register)
+        self.judge_ports(due, sure)
 
-    def judge_ports(self, due: Sequence[Flight]) -> None:
+    def judge_ports(self, due: Sequence[Flight], sure: bool) -> None:
         for index, cluster in enumerate(self.core.clusters):
             here = [f for f in due if self.core.register_clusters[self.register(f)] == index]
             if len(here) <= cluster.write_ports or self.most(f.on for f in here) <= cluster.write_ports:
                 continue
-            sure = sum(not f.on for f in here) > cluster.write_ports
-            self.find("write-ports", [self.site(f) for f in here], sure, detail=cluster.name)
+            all_on = sure and sum(not f.on for f in here) > cluster.write_ports
+            self.find("write-ports", [self.site(f) for f in here], all_on, detail=cluster.name)
 
     def most(self, conditions: Iterable[Condition]) -> int:
         """An upper bound of how many of the conditions may hold together: literals of one value exclude each other."""
@@ -396,6 +404,7 @@ class _Step:
                 if self.knowledge.possible(turn.on, halts):
                     at_halt = [self.here(k) for k, p in enumerate(prepared.parts) if p.operation.kind is Kind.HALT]
                     self.find("branch-past-halt", [turn.site, *at_halt], not turn.on and not halts)
+            self.drain(halts)
             successors.append(None)
             if not halts:
                 return self.beat("issue", successors)
@@ -409,12 +418,26 @@ class _Step:
             successors += self.not_taken(landing, flying)
         return self.beat("issue", successors)
 
+    def drain(self, halts: Condition) -> None:
+        """Judge what lands behind a ``halt``."""
+        kept = self.knowledge
+        self.knowledge = Knowledge(kept.facts, kept.implied)
+        if self.knowledge.learn(sorted(halts)):
+            by_beat: dict[int, list[Flight]] = {}
+            for flight in self.flights:
+                on = self.knowledge.settle(flight.on)
+                if on is not None:
+                    by_beat.setdefault(flight.beats, []).append(attrs.evolve(flight, on=on))
+            for _, flights in sorted(by_beat.items()):
+                self.judge_landing(flights, not halts)
+        self.knowledge = kept
+
     def learn_opposite(self, condition: Condition) -> bool:
         """Go on where ``condition`` does not hold; False if it then cannot go on."""
         return len(condition) > 1 or self.knowledge.learn(item.opposite for item in condition)
 
     def taken(self, turn: Turn, flying: Sequence[Turn]) -> list[Context]:
-        knowledge = Knowledge(self.knowledge.facts, self.knowledge.steps)
+        knowledge = Knowledge(self.knowledge.facts, self.knowledge.implied)
         if not knowledge.learn(sorted(turn.on)):
             return []
         if turn.target is None:
@@ -426,7 +449,7 @@ class _Step:
         return self.some(self.later(turn.target, 0, flying, False, knowledge))
 
     def not_taken(self, landing: Sequence[Turn], flying: Sequence[Turn]) -> list[Context]:
-        knowledge = Knowledge(self.knowledge.facts, self.knowledge.steps)
+        knowledge = Knowledge(self.knowledge.facts, self.knowledge.implied)
         for turn in landing:
             if len(turn.on) == 1 and not knowledge.learn(item.opposite for item in turn.on):
                 return []

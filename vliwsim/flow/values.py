@@ -1,9 +1,9 @@
 """What is known of values that decide: guards, counts, conditions, code addresses.
 
 A value is an identity, not a number: two places that hold the same identity hold the same number. Of an identity it
-may be known that it is zero or that it is not. A ``count`` steps a value v to a value D(v) that is v - 1 where v is not
-zero and v itself where it is: so where v is zero D(v) is, and where D(v) is not zero v is not. That alone keeps a
-drained epilogue out of its loop.
+may be known that it is zero or that it is not, and of some what follows where they are not zero: a ``count`` steps v to
+a value D(v) that is v - 1 where v is not zero and v itself where it is, so where D(v) is not zero v is not. That alone
+keeps a drained epilogue out of its loop. A comparison with zero and a value that another lets pass tell alike.
 """
 
 from __future__ import annotations
@@ -59,12 +59,24 @@ def both(one: Condition | None, other: Condition | None) -> Condition | None:
     return None if any(item.opposite in joined for item in joined) else joined
 
 
-class Knowledge:
-    """Facts (identity → is it nonzero) and steps (identity → the identity it was counted down from)."""
+Implied = tuple[Literal, ...]
+"""What holds where a value is not zero; so where one of these does not, the value is zero."""
 
-    def __init__(self, facts: Mapping[Identity, bool] = {}, steps: Mapping[Identity, Identity] = {}) -> None:
+
+class Knowledge:
+    """Facts (identity → is it nonzero) and implications (identity → what holds where it is not zero)."""
+
+    def __init__(self, facts: Mapping[Identity, bool] = {}, implied: Mapping[Identity, Implied] = {}) -> None:
         self.facts = dict(facts)
-        self.steps = dict(steps)
+        self.implied = dict(implied)
+
+    def imply(self, value: Identity, literals: Iterable[Literal]) -> None:
+        """``value`` is new; where it is not zero, all ``literals`` hold."""
+        new = tuple(item for item in literals if self.facts.get(item.value) != item.nonzero)
+        if any(item.value in self.facts for item in new):
+            self.facts[value] = False
+        elif new:
+            self.implied[value] = new
 
     def learn(self, items: Iterable[Literal]) -> bool:
         """Add facts and what follows from them; False where they contradict what is known."""
@@ -77,10 +89,10 @@ class Knowledge:
                     return False
                 continue
             self.facts[value] = nonzero
-            if nonzero and value in self.steps:
-                ahead.append((self.steps[value], True))
-            if not nonzero:
-                ahead += [(child, False) for child, parent in self.steps.items() if parent == value]
+            if nonzero:
+                ahead += [(item.value, item.nonzero) for item in self.implied.get(value, ())]
+            opposite = Literal(value, not nonzero)
+            ahead += [(child, False) for child, literals in self.implied.items() if opposite in literals]
         return True
 
     def settle(self, condition: Condition) -> Condition | None:
@@ -98,5 +110,5 @@ class Knowledge:
         """Whether all conditions may hold together, as far as is known."""
         if any(condition is None for condition in conditions):
             return False
-        trial = Knowledge(self.facts, self.steps)
+        trial = Knowledge(self.facts, self.implied)
         return trial.learn(item for condition in conditions if condition for item in sorted(condition))
