@@ -175,7 +175,7 @@ MEANINGS: dict[str, Meaning] = {
     "mv": Meaning("compute", ("d",), ("a",), does=copied),
     "li": Meaning("compute", ("d",), ("n",), does=copied),
     "select": Meaning("compute", ("d",), ("a", "b", "c"), does=select),
-    "pack": Meaning("compute", ("d",), ("a", "b"), does=pack),
+    "pack.h2": Meaning("compute", ("d",), ("a", "b"), does=pack),
     "add.pair": Meaning("compute", ("d",), ("a", "b"), ("d", "a", "b"), does=wide(lambda a, b: a + b)),
     "mul.pair": Meaning("compute", ("d",), ("a", "b"), ("d",), does=wide(lambda a, b: signed(a) * signed(b))),
     "mul.pair.acc": Meaning(

@@ -7,6 +7,7 @@ own business.
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
+from contextlib import suppress
 from functools import lru_cache
 
 from vliwsim.description import core as description
@@ -160,10 +161,8 @@ def by_cycles(machine: Machine, state: State, limit: int, passed: list[Passed], 
         place, counts, stalls, drain = state.at, sum(state.counts), dict(state.stalls), state.drain
         if snapshots:
             saved = state.save()
-            try:
+            with suppress(HazardMet):
                 machine.advance(state, state.cycle + 3)
-            except HazardMet:
-                pass
             state.restore(saved)
         try:
             machine.advance(state, state.cycle + 1)

@@ -31,7 +31,7 @@ from .plain import (
 )
 
 WORDS = {
-    "arithmetic": "add:d,a,b sub:d,a,b and:d,a,b or:d,a,b xor:d,a,b mv:d,a li:d,n select:d,c,a,b pack:d,a,b "
+    "arithmetic": "add:d,a,b sub:d,a,b and:d,a,b or:d,a,b xor:d,a,b mv:d,a li:d,n select:d,c,a,b pack.h2:d,a,b "
     "add.h2:d,a,b add.pair:d,a,b add.sat.flag:d,f,a,b",
     "shift": "sll:d,a,b srl:d,a,b sra:d,a,b",
     "multiply": "mul:d,a,b mul.half:d,a,b mul.half.acc:acc,a,b mul.pair:d,a,b",
@@ -1178,8 +1178,8 @@ UNDEFINEDS = [
     rule(
         "bytes-keep-it",
         "results inherit it lane by lane, …, bytes keep it through load, store and pack",
-        "g.mem sb g1, [g2] ; g.sum pack g3, g4.lo, g5.hi",  # g5: bytes 2, 3 known, 0, 1 not; g4 known
-        "g.mem lw g6, [g2] ; g.sum pack g7, g5.lo, g4.lo ; g.mul mul.half g8, g5.hi, g4.lo",
+        "g.mem sb g1, [g2] ; g.sum pack.h2 g3, g4.lo, g5.hi",  # g5: bytes 2, 3 known, 0, 1 not; g4 known
+        "g.mem lw g6, [g2] ; g.sum pack.h2 g7, g5.lo, g4.lo ; g.mul mul.half g8, g5.hi, g4.lo",
         "g.mem lh g9, [g2] ; g.sum add.h2 g10, g5, g4",
         "g.mem lh g11, [g2 + 2] ; g.sum add g12, g5, g4 ; g.flow halt",  # lands 6: drain 2
         given={

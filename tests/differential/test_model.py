@@ -4,14 +4,20 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Callable
+from functools import partial
 
 import pytest
 
+from . import real
 from .model import run
 from .plain import CAUSES, UNDEFINED, Outcome, Value
 from .rules import RULES, Rule, assemble, register_number, rule, words
 
-ENGINES: dict[str, Callable[..., Outcome]] = {"model": run}
+ENGINES: dict[str, Callable[..., Outcome]] = {
+    "model": run,
+    "hot loop": real.run,
+    "definition": partial(real.run, careful=True),
+}
 """What is held to the table: functions with the signature of :func:`.model.run`."""
 
 
@@ -106,7 +112,7 @@ def test_every_hazard_of_the_text_has_a_rule() -> None:
         slot-taken slot-class guard-register busy read-ports links fresh early-read
         misaligned out-of-array store-twice bank-conflict
         two-redirects ran-off-the-end branch-overlap link-nowhere branch-past-halt
-        """.split()  # noqa: SIM905
+        """.split()
     )
 
 
