@@ -62,10 +62,14 @@ class Held:
 
 
 def function(text: str, name: str) -> Callable[..., object]:
-    """Compiles ``text`` (made by :func:`source`) under a stable file name, so that a debugger shows it."""
-    import linecache
+    """Compiles ``text`` (made by :func:`source`) under a stable file name, so that a debugger shows it.
 
-    file = f"<operation {name}>"
+    The name depends on the text too: two cores of one session may mean different things by one operation.
+    """
+    import linecache
+    import zlib
+
+    file = f"<operation {name} {zlib.crc32(text.encode()):08x}>"
     namespace: dict[str, object] = {"__builtins__": {}, **HELPERS}
     exec(compile(text, file, "exec"), namespace)
     linecache.cache[file] = (len(text), None, text.splitlines(keepends=True), file)
