@@ -70,8 +70,13 @@ def _extreme_of(writer: Writer, node: Call, write: Callable[[Node], Text]) -> Te
         test = writer.comparison(Compare(symbol, left, right))
         one, other = write(left), write(right)
         return Text(f"{one.inner} if {test.code} else {other.inner}")  # the test has refused undefined values
-    one_name, other_name = writer.temporary(), writer.temporary()
+    if isinstance(left, Number):
+        left, right = right, left
+    one_name = writer.temporary()
     one, other = writer.value(left), writer.value(right)
+    if isinstance(right, Number):
+        return Text(f"{one_name} if ({one_name} := {one.bare}) {symbol} {other.code} else {other.code}")
+    other_name = writer.temporary()
     return Text(f"{one_name} if ({one_name} := {one.bare}) {symbol} ({other_name} := {other.bare}) else {other_name}")
 
 
