@@ -50,6 +50,8 @@ make_environment() {
     rm -f "$(stamp "$wanted")"
     "$bin/python" -m pip install --quiet --disable-pip-version-check --no-input \
         --editable "$root${wanted:+[$wanted]}" >&2 </dev/null || fail "pip could not install what pyproject.toml asks for"
+    # As pip does for a package that is not editable; some machines forbid Python to do it at the first import.
+    "$bin/python" -m compileall -q "$root/vliwsim" >/dev/null 2>&1 || true
     local made
     for made in "" ${wanted:+"$wanted"}; do
         contents >"$(stamp "$made").new" && mv -f "$(stamp "$made").new" "$(stamp "$made")" || fail "$root/.venv cannot be written"
