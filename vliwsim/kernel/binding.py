@@ -169,7 +169,8 @@ class _Binder:
     def _size(self, name: str, value: object) -> None:
         if isinstance(value, np.ndarray) and value.ndim == 0:
             value = value[()]
-        if isinstance(value, (bool, np.bool_)) or not isinstance(value, (int, np.integer)):
+        odd = (bool, np.bool_, np.timedelta64)  # a span of time counts as an integer to NumPy
+        if isinstance(value, odd) or not isinstance(value, (int, np.integer)):
             self.problems.append(problem("size-value", f"{name} = {value!r:.40}", "a whole number", f"{name}=40"))
         else:
             self.sizes[name] = int(value)
