@@ -79,6 +79,17 @@ class Section:
 
 
 @attrs.frozen
+class ItemTag:
+    """What the source says of an operation: it works on the item of the loop that is ``age`` passes old.
+
+    ``others``: (register, age) of operands that come from another item.
+    """
+
+    age: int
+    others: tuple[tuple[int, int], ...] = ()
+
+
+@attrs.frozen
 class SourceMap:
     """From bundles (by index in the program) and their instructions (in bundle order) back to the source."""
 
@@ -87,6 +98,8 @@ class SourceMap:
     """For each bundle index its (label, beat within the label's section); an idle word's is its first beat."""
     instruction_places: tuple[tuple[Place, ...], ...]
     """For each bundle index, for each of its instructions, where the source says it (column at the mnemonic)."""
+    items: tuple[tuple[ItemTag | None, ...], ...] = ()
+    """For each bundle index, for each of its instructions, the item it works on; empty where nothing is tagged."""
 
 
 @attrs.frozen

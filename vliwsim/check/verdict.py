@@ -1,0 +1,115 @@
+"""What a check finds, as data: each rule's outcome with the paths behind it, reads before a landing, interrupts."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import attrs
+
+from vliwsim.check.interrupts import Interrupts
+
+PROVED, VIOLATED, NEEDS_INPUT, UNDECIDED = "proved", "violated", "needs input", "undecided"
+OUTCOMES = (VIOLATED, UNDECIDED, NEEDS_INPUT, PROVED)
+"""In the order of a report: what to act on first."""
+
+Site = tuple[int, int]
+"""(bundle index, instruction index)."""
+
+
+@attrs.frozen
+class Moment:
+    """A beat on a path: the bundle at hand and what it ``did`` (``issue``, ``hold``, ``fresh``).
+
+    ``within``: beats of its idle word before. ``landed``: write numbers of results due in this beat, and whether each
+    lands for certain.
+    """
+
+    bundle: int
+    within: int
+    did: str
+    landed: tuple[tuple[int, bool], ...] = ()
+
+
+@attrs.frozen
+class Incident:
+    """Where a rule is broken for certain on a path (``sure``), or on some data.
+
+    ``bundle``: the one at hand. ``sites``: the operations behind it. ``detail``: what the rule wants to add.
+    ``path``: the beats from the first to this one.
+    """
+
+    rule: str
+    sure: bool
+    bundle: int
+    sites: tuple[Site, ...]
+    register: int | None = None
+    detail: str = ""
+    path: tuple[Moment, ...] = attrs.field(default=(), repr=lambda path: f"{len(path)} beats")
+
+
+@attrs.frozen
+class Judgement:
+    """One rule's outcome. ``because``: why it is undecided, or proved without a look at the program."""
+
+    rule: str
+    outcome: str
+    incidents: tuple[Incident, ...] = ()
+    because: str = ""
+
+
+@attrs.frozen
+class EarlyRead:
+    """A register read with results in flight for it: by ``site``; ``flights``: (who sent it, beats to go, for certain).
+
+    ``meant``: whether the item that the source says is the one read; None where it says nothing.
+    """
+
+    site: Site
+    register: int
+    flights: tuple[tuple[Site, int, bool], ...]
+    meant: bool | None
+
+
+@attrs.frozen
+class Wait:
+    """A bundle that is held up ``least`` to ``most`` beats whenever it comes up."""
+
+    bundle: int
+    least: int
+    most: int
+
+
+@attrs.frozen
+class Verdict:
+    """All that a check found.
+
+    ``contexts``: how many there are, and whether that is all of them (``complete``). ``blown_up``: the bundle with most
+    of them where it is not. ``tagged``: does the source say which items its operations work on. ``right_beats``: for
+    operations that work on another item than is said, the bundles where all their operands are of the right one.
+    """
+
+    contexts: int
+    complete: bool
+    blown_up: int | None
+    judgements: Mapping[str, Judgement]
+    early: tuple[EarlyRead, ...]
+    waits: tuple[Wait, ...]
+    interrupts: Interrupts | None
+    tagged: bool
+    right_beats: Mapping[Site, tuple[int, ...]] = attrs.field(factory=dict)
+
+    def outcome(self, rule: str) -> str:
+        return self.judgements[rule].outcome
+
+    @property
+    def violated(self) -> tuple[Judgement, ...]:
+        return tuple(j for j in self.judgements.values() if j.outcome == VIOLATED)
+
+    @property
+    def undecided(self) -> tuple[Judgement, ...]:
+        return tuple(j for j in self.judgements.values() if j.outcome == UNDECIDED)
+
+    @property
+    def ok(self) -> bool:
+        """Nothing is violated, and nothing undecided: what is left open depends on data alone."""
+        return not self.violated and not self.undecided
