@@ -1,0 +1,1 @@
+"""The fast engine: pipeline contexts as machine code, with data where the graph of contexts has conditions."""
