@@ -32,7 +32,9 @@ def but(old: str, new: str) -> str:
     return PEAK.replace(old, new)
 
 
-def meaning(title: str, names: str | list[str], does: str, operands: str = "d:i32, a:i32, b:i32", **more: object) -> Row:
+def meaning(
+    title: str, names: str | list[str], does: str, operands: str = "d:i32, a:i32, b:i32", **more: object
+) -> Row:
     """An operation that means ``does``."""
     table = but(DOES, f"'''{does}'''").replace("d:i32, a:i32, b:i32", operands).replace(EXAMPLES, "[]")
     return refused(title, names, table, **more)
@@ -52,23 +54,23 @@ FILES = [
 KEYS = [
     refused("no code", "missing-key", but("code     = 0x300\n", "")),
     refused("no meaning", "missing-key", but(f"does     = {DOES}\n", "")),
-    refused("a code of text", "wrong-type", but("0x300", '"0x300"')),
-    refused("a code too big", "out-of-range", but("0x300", "4096")),
+    refused("a code of text", "bad-value", but("0x300", '"0x300"')),
+    refused("a code too big", "bad-value", but("0x300", "4096")),
     refused("a code of another operation", "code-taken", but("0x300", "1")),
     refused("a name of another operation", "name-taken", but("[peak.fade]", "[add]")),
-    refused("a class of its own", "unknown-class", but('"arithmetic"', '"peaks"')),
+    refused("a class with the name of a latency", "bad-value", but('"arithmetic"', '"update"')),
     refused("a key nobody has", "unknown-key", PEAK + "colour = 3\n"),
     refused("a name in capitals", "bad-name", but("[peak.fade]", "[PEAK]")),
     refused("an operand without a type", "bad-operand", but("a:i32", "a")),
-    refused("an operand of a type nobody has", "unknown-type", but("a:i32", "a:i31")),
+    refused("an operand of a type nobody has", "bad-operand", but("a:i32", "a:i31")),
     refused("an operand twice", "bad-operand", but("b:i32", "a:i32")),
-    refused("examples that are no list", "wrong-type", but(EXAMPLES, "3")),
+    refused("examples that are no list", "bad-value", but(EXAMPLES, "3")),
     refused("an example of one input", "bad-example", but("[[100, 64], [100]]", "[[100], [100]]")),
     refused("an example out of range", "bad-example", but("[[100, 64], [100]]", "[[4294967296, 64], [100]]")),
     refused("an example that is wrong", "example-fails", but("[[100, 64], [100]]", "[[100, 64], [101]]")),
     refused(
         "four mistakes, all said",
-        ["bad-operand", "missing-key", "out-of-range", "unknown-key"],
+        ["bad-operand", "missing-key", "bad-value", "unknown-key"],
         but("0x300", "0").replace("a:i32", "a").replace("summary ", "sumary "),
     ),
 ]
@@ -78,24 +80,25 @@ MEANINGS = [
     meaning("an unknown name", "unknown-name", "d = a + c"),
     meaning("an import", "unknown-function", "d = __import__('os').system('true')"),
     meaning("an attribute", "not-in-language", "d = a.__class__"),
-    meaning("a lambda", "not-in-language", "d = (lambda: a)()"),
+    meaning("a lambda", "unknown-function", "d = (lambda: a)()"),
     meaning("a comprehension", "not-in-language", "d = [a for x in b]"),
-    meaning("a loop", "not-in-language", "while a: d = b"),
-    meaning("no result", "not-assigned", "x = a + b"),
+    meaning("a loop", "bad-statement", "while a: d = b"),
+    meaning("no result", "not-used", "x = a + b"),
     meaning("an operand unused", "not-used", "d = a + 1 if a < 3 else 4"),
     meaning("a result that may not fit", "may-not-fit", "d = a + b", remedy="wrap"),
     meaning("a division by what may be zero", "may-divide-by-zero", "d = wrap(a // b)"),
     meaning("a negative shift", "bad-shift", "d = wrap(a << b)"),
-    meaning("a number of a million digits", "too-big", "d = wrap(a + b + 9 ** 9 ** 9)"),
+    meaning("a number of a million digits", "not-in-language", "d = wrap(a + b + 9 ** 9 ** 9)"),
     meaning("a product too wide", "too-big", "d = wrap(a * b * a * b * a)"),
-    meaning("a long iteration", "too-big", "d = iterate(1000000000, a, wrap(a + b))"),
+    meaning("a long iteration", "bad-arguments", "d = iterate(1000000000, a, wrap(a + b))"),
     meaning("an iteration of an operand", "bad-arguments", "d = iterate(b, a, wrap(a + 1))"),
-    meaning("nested deeper than Python reads", "too-deep", f"d = {'(' * 500}a{')' * 500} + b"),
+    meaning("nested deeper than Python reads", "bad-syntax", f"d = {'(' * 500}a{')' * 500} + b"),
     meaning("nested deep", "too-deep", f"d = {'~' * 900}(a ^ b)"),
     meaning("long", "too-long", "d = wrap(a + b" + " + a" * 20_000 + ")"),
     meaning("lanes of a word", "no-such-lane", "d = a[0] + wrap(b)"),
     meaning("a lane too far", "no-such-lane", "d = a[2] + b", "d:i32, a:i16x2, b:i16"),
-    meaning("two accesses", "bad-access", "d = wrap(mem[a, i32] + mem[b, i32])", "d:i32, a:address, b:address"),
+    meaning("two addresses", "bad-operand", "d = wrap(mem[a, i32] + mem[b, i32])", "d:i32, a:address, b:address"),
+    meaning("two accesses", "bad-access", "d = wrap(mem[a, i32] + mem[a, i16])", "d:i32, a:address"),
     meaning("memory without an address", "bad-access", "d = mem[a, i32] + wrap(b)"),
     meaning("a result twice", "assigned-twice", "d = a; d = b"),
     meaning("a string", "not-in-language", "d = wrap(a + b) if 'x' else 3"),

@@ -24,7 +24,8 @@ Content = str | bytes | Callable[[Path], None]
 """A file's text, its bytes, or what makes it at a path."""
 
 HEAD = re.compile(
-    r"(?:(?P<place>\S.*?:\d+:\d+)  )?(?:(?P<key>\S.*?)  )?(?P<name>[a-z]+(?:-[a-z]+)*)  \((?P<kind>error|illegal|note)\)\Z"
+    r"(?:(?P<place>\S.*?:\d+:\d+)  )?(?:(?P<key>\S.*?)  )?"
+    r"(?P<name>[a-z]+(?:-[a-z]+)*)  \((?P<kind>error|illegal|note)\)\Z"
 )
 PART = re.compile(r"  (found   |allowed |try     ) (.*)\Z")
 
@@ -102,7 +103,6 @@ class Row:
 
     ``names``: the problems, all of them, with repeats, in any order. ``says`` must stand in the output, ``remedy`` in a
     `try` line. ``changed``: files that may come, go or change. ``process``: run it as a process of its own.
-    ``silent``: names of problems that have no `allowed` part, because nothing of the kind is.
     """
 
     title: str

@@ -6,6 +6,8 @@ user stopped it. A mistake of the user is said as found, allowed, try on standar
 
 from __future__ import annotations
 
+import errno
+import io
 import os
 import sys
 from collections.abc import Iterable, Sequence
@@ -71,13 +73,17 @@ def main(arguments: Sequence[str] | None = None) -> NoReturn:
     sys.exit(status_of(arguments))
 
 
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="replace")  # what a terminal has no letter for is no reason to fail
 def status_of(arguments: Sequence[str] | None = None) -> int:
     """Run the command line; the exit status."""
     try:
         # not cli.main(): that would end the process itself when a pipe breaks
         with cli.make_context("vliwsim", list(sys.argv[1:] if arguments is None else arguments)) as context:
             result = cli.invoke(context)
-        sys.stdout.flush()
+        if sys.stdout is not None:  # it is where the caller has closed it
+            sys.stdout.flush()
         return result if isinstance(result, int) else 0
     except VliwsimError as error:
         complain(error.problems)
@@ -88,26 +94,41 @@ def status_of(arguments: Sequence[str] | None = None) -> int:
         click.echo("stopped", err=True)
         return STOPPED
     except click.ClickException as error:
-        complain([usage_problem(error)])
+        complain([usage_problem(error, arguments)])
         return 2
     except MemoryError:
         complain([problem("out-of-memory", "not enough memory on this machine", "", "smaller sizes or memory.size")])
         return 2
     except BrokenPipeError:
-        # whoever read our output has gone; keep the interpreter's own flush at exit quiet too
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        _drop_output()  # whoever read it has gone
         return 0
 
 
 def complain(problems: Iterable[Problem]) -> None:
+    except OSError as error:
+        if error.errno not in _FULL or error.filename is not None:
+            raise
+        _drop_output()
+        said = f"standard output: {error.strerror}"
+        complain([problem("output-file", said, "an output that can be written", "another place for it")])
+        return 2
+
+
+_FULL = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO)
+
+
+def _drop_output() -> None:
+    """Let what is not yet written go nowhere, so that the interpreter's own flush at exit is quiet too."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
     """Print problems on standard error, a blank line between them."""
     click.echo("\n\n".join(str(p) for p in problems), err=True)
 
 
-def usage_problem(error: click.ClickException) -> Problem:
-    """A mistake in the arguments, as click found it, in our form."""
+def usage_problem(error: click.ClickException, arguments: Sequence[str] | None = None) -> Problem:
+    """A mistake in the ``arguments``, as click found it, in our form."""
     context = getattr(error, "ctx", None)
-    path = context.command_path if context else "vliwsim"
+    named = [word for word in (sys.argv[1:] if arguments is None else arguments)[:1] if word in COMMANDS]
+    path = context.command_path if context else " ".join(["vliwsim", *named])
     remedy = f"{path} --help"
     if isinstance(error, click.NoSuchOption):
         options = [o for p in context.command.params for o in p.opts if o.startswith("-")] if context else []
@@ -121,7 +142,9 @@ def usage_problem(error: click.ClickException) -> Problem:
         what = error.param.human_readable_name if error.param else "an argument"
         return problem("missing-argument", f"nothing for {what}", f"{path} {what}", remedy)
     if isinstance(error, click.BadOptionUsage):
-        return problem("bad-option", error.format_message().rstrip("."), "", remedy)
+        message = error.format_message().rstrip(".")
+        allowed = f"{error.option_name} and nothing" if "not take" in message else f"{error.option_name} and a value"
+        return problem("bad-option", message[:1].lower() + message[1:], allowed, remedy)
     if isinstance(error, click.BadParameter):
         name = error.param.opts[0] if error.param else "an argument"
         kind = error.param.type if error.param else None
@@ -131,7 +154,9 @@ def usage_problem(error: click.ClickException) -> Problem:
         given = error.message.split("'")[1] if "'" in error.message else ""
         near = _near(given, list(COMMANDS), "--help")
         return problem("no-such-command", f"command {given}", ", ".join(COMMANDS), f"vliwsim {near}")
-    return problem("bad-usage", error.format_message().rstrip("."), "", remedy)
+    usage = context.get_usage().removeprefix("Usage: ") if context else f"{path} and its arguments"
+    message = error.format_message().rstrip(".").removeprefix("Got ")
+    return problem("bad-usage", message[:1].lower() + message[1:], " ".join(usage.split()), remedy)
 
 
 def _near(text: str, known: Sequence[str], otherwise: str) -> str:

@@ -101,14 +101,27 @@ def save_targets(texts: Sequence[str], outputs: Sequence[str], replace: bool) ->
             problems.append(problem("bad-option", f"--save {text} besides another of that name or file", "each once"))
         elif path.suffix != ".npy":
             problems.append(problem("bad-option", f"--save {text}", "a file whose name ends in .npy"))
-        elif not path.parent.is_dir():
+        elif not os.path.isdir(path.parent):
             problems.append(problem("output-file", f"no folder {path.parent}", "a folder that is there"))
-        elif path.exists() and not replace:
+        elif impossible := _impossible(path):
+            problems.append(problem("output-file", f"{path}: {impossible}", "a name that a file can have"))
+        elif os.path.lexists(path) and not replace:
             problems += exists(path).problems
         targets.setdefault(name, path)
     if problems:
         raise OptionError(problems)
     return targets
+
+
+def _impossible(path: Path) -> str:
+    """Why no file can have this name; empty where one can."""
+    try:
+        path.lstat()
+    except FileNotFoundError:
+        return ""
+    except (OSError, ValueError) as error:
+        return getattr(error, "strerror", None) or str(error)
+    return ""
 
 
 def save_outputs(targets: dict[str, Path], outputs: dict[str, Output], replace: bool) -> None:

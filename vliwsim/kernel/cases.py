@@ -254,6 +254,8 @@ def case_with(kernel: Kernel, reference: Reference | None, name: str | None, giv
 def _zeros(interface: Interface, given: Mapping[str, Any]) -> dict[str, Any]:
     solver = Sizes(interface, {**interface.kernel.constants, **given})
     lengths = solver.check({})
+    if solver.problems:
+        raise InterfaceError(solver.problems)
     zeros = {
         n: np.zeros(lengths.get(n, 0), interface.element(n).dtype)
         for n, i in interface.inputs.items()

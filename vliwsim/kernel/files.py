@@ -79,14 +79,13 @@ def write_whole(path: Path, write: Callable[[BinaryIO], None], *, replace: bool 
     """
     import tempfile
 
-    if path.is_dir():
+    if os.path.isdir(path):
         raise InterfaceError(problem("output-file", f"{path} is a folder", "the name of a file"))
     try:
-        handle, name = tempfile.mkstemp(prefix=f".{path.name}.", dir=path.parent)
-    except OSError as error:
-        raise InterfaceError(
-            problem("output-file", f"{path}: {error.strerror}", "a folder that can be written")
-        ) from None
+        handle, name = tempfile.mkstemp(prefix=f".{path.name[:40]}.", dir=path.parent)
+    except (OSError, ValueError) as error:
+        said = getattr(error, "strerror", None) or str(error)
+        raise InterfaceError(problem("output-file", f"{path}: {said}", "a folder that can be written")) from None
     try:
         with os.fdopen(handle, "wb") as stream:
             write(stream)

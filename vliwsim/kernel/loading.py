@@ -41,7 +41,10 @@ def find_source(path: str) -> Path:
 
 def _near(path: Path) -> Path:
     """The path as seen from the working folder, where it is below that."""
-    here = Path.cwd()
+    try:
+        here = Path.cwd()
+    except OSError:  # it is gone
+        return path
     return path.relative_to(here) if path.is_relative_to(here) else path
 
 

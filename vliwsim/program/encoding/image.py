@@ -126,7 +126,7 @@ def write_image(path: str | os.PathLike[str], image: Image, overwrite: bool = Fa
     target = Path(path)
     data = to_bytes(image)
     try:
-        handle, temporary = tempfile.mkstemp(prefix=f".{target.name}.", dir=target.parent)
+        handle, temporary = tempfile.mkstemp(prefix=f".{target.name[:40]}.", dir=target.parent)
         try:
             with os.fdopen(handle, "wb") as file:
                 file.write(data)
@@ -139,10 +139,11 @@ def write_image(path: str | os.PathLike[str], image: Image, overwrite: bool = Fa
             Path(temporary).unlink(missing_ok=True)
     except FileExistsError:
         raise ImageError(
-            problem("file-exists", f"{target} is there already", "a new file", "another name, or ask to overwrite")
+            problem("file-exists", f"{target} is there already", "a new file", "--replace, or another name")
         ) from None
-    except OSError as error:
-        raise ImageError(problem("unwritable", f"{target}: {error.strerror or error}", "a file to write")) from None
+    except (OSError, ValueError) as error:
+        said = getattr(error, "strerror", None) or str(error)
+        raise ImageError(problem("unwritable", f"{target}: {said}", "a file to write")) from None
 
 
 def _place_new(temporary: str, target: Path) -> None:
