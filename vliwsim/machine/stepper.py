@@ -13,7 +13,7 @@ from vliwsim.description.core import Core
 from vliwsim.description.values import Value
 from vliwsim.machine import beat as phases
 from vliwsim.machine.hazards import Hazard, HazardMet
-from vliwsim.machine.hurry import Entry, Land, hurry
+from vliwsim.machine.hurry import HotLoop
 from vliwsim.machine.issued import Issued
 from vliwsim.machine.memory import Memory, Region
 from vliwsim.machine.outcome import Outcome
@@ -39,9 +39,7 @@ class Machine:
         self.core: Core = program.core
         self.ready = Preparation(program)
         self.careful = careful
-        self.verdicts: dict[object, Land] = {}
-        self.met: dict[object, int] = {}
-        self.entries: list[Entry | None] = [None] * len(program.bundles)
+        self.hot = HotLoop(self.ready)
 
     def start(
         self,
@@ -126,7 +124,7 @@ class Machine:
             if state.cycle >= until or state.frozen:
                 return None
             if hurried and not state.service and not state.waited_fresh and state.interrupt_at is None:
-                hurry(self, state, until)
+                self.hot.run(state, until)
                 if state.halt_beat is not None or state.cycle >= until or state.frozen:
                     continue
             self.step(state)
