@@ -20,6 +20,10 @@ from vliwsim.problems import Problem, VliwsimError, problem
 
 COMMANDS = {
     "run": ("vliwsim.faces.run", "Run a kernel: compare it with its reference, account for every cycle."),
+    "check": ("vliwsim.faces.check_command", "Prove kernels legal without input: every rule on every path."),
+    "compare": ("vliwsim.faces.compare_command", "Set kernels of one interface side by side."),
+    "regress": ("vliwsim.faces.regress_command", "Judge all kernels below some paths."),
+    "golden": ("vliwsim.faces.golden_command", "Record what a kernel gives, to hold it against that later."),
     "assemble": ("vliwsim.faces.images", "Assemble a kernel into an image."),
     "disassemble": ("vliwsim.faces.images", "Turn an image back into a source."),
     "layout": ("vliwsim.faces.catalogue", "Draw the bit fields of a core's operation words."),
@@ -70,12 +74,12 @@ def cli(ctx: click.Context, version: bool) -> None:
 
 def main(arguments: Sequence[str] | None = None) -> NoReturn:
     """Run the command line and leave with its exit status."""
-    sys.exit(status_of(arguments))
-
-
     for stream in (sys.stdout, sys.stderr):
         if isinstance(stream, io.TextIOWrapper):
             stream.reconfigure(errors="replace")  # what a terminal has no letter for is no reason to fail
+    sys.exit(status_of(arguments))
+
+
 def status_of(arguments: Sequence[str] | None = None) -> int:
     """Run the command line; the exit status."""
     try:
@@ -102,9 +106,6 @@ def status_of(arguments: Sequence[str] | None = None) -> int:
     except BrokenPipeError:
         _drop_output()  # whoever read it has gone
         return 0
-
-
-def complain(problems: Iterable[Problem]) -> None:
     except OSError as error:
         if error.errno not in _FULL or error.filename is not None:
             raise
@@ -120,6 +121,9 @@ _FULL = (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EIO)
 def _drop_output() -> None:
     """Let what is not yet written go nowhere, so that the interpreter's own flush at exit is quiet too."""
     os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
+def complain(problems: Iterable[Problem]) -> None:
     """Print problems on standard error, a blank line between them."""
     click.echo("\n\n".join(str(p) for p in problems), err=True)
 
