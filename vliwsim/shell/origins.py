@@ -9,7 +9,6 @@ in the operations behind a value.
 from __future__ import annotations
 
 import heapq
-from collections.abc import Iterator
 
 import attrs
 
@@ -439,48 +438,11 @@ def reached_elements(origin: Origin, node: Step) -> set[tuple[str, int]]:
     return found
 
 
-def last_store(session: Session, address: int, size: int, watch: Watch | None = None) -> tuple[Store, Beat] | None:
-    """The latest store before this cycle to any of these bytes, with the bundle that made it; None if there is none."""
-    storers = {
-        k
-        for k, bundle in enumerate(session.kernel.program.bundles)
-        for i in bundle.instructions
-        if i.operation.access and i.operation.access.store
-    }
-
-    def quiet(before: Saved, after: Saved) -> bool:
-        return not any(before["counts"][b] != after["counts"][b] for b in storers)
-
-    for stretch in _all_stretches(session, quiet, watch):
-        stores = [s for b in range(address, address + size) for s in stretch.stores_by_byte.get(b, ())]
-        if stores:
-            latest = max(stores, key=lambda s: s.beat)
-            return latest, stretch.beats[latest.beat]
-    return None
-
-
-def last_landing(session: Session, register: int, watch: Watch | None = None) -> tuple[Landed, Stretch] | None:
-    """The latest result that has landed in a register before this cycle's beat."""
-    writers = {s.bundle for s in session.machine.ready.sites if s.write.register == register}
-    sites = session.machine.ready.sites
-
-    def quiet(before: Saved, after: Saved) -> bool:
-        flying = (n for batches in before["flight"].values() for numbers, _ in batches for n in numbers)
-        still = not any(before["counts"][b] != after["counts"][b] for b in writers)
-        return still and not any(sites[n].write.register == register for n in flying)
-
-    for stretch in _all_stretches(session, quiet, watch):
-        if stretch.landings.get(register):
-            return stretch.landings[register][-1], stretch
-    return None
-
-
-def _all_stretches(session: Session, quiet: object, watch: Watch | None) -> Iterator[Stretch]:
-    course: History | None = session.history.course(session.cycle)
-    until = session.cycle
-    while course is not None:
-        yield from backwards(session, course, until, quiet, watch)  # type: ignore[arg-type]
-        until, course = course.begin, course.parent
+def maker(session: Session, what: str, watch: Watch | None = None) -> Step | None:
+    """The operation that made the present value of a register or element, None where none did."""
+    nodes = origin_of(session, what, watch, most=1).root.nodes
+    made = [node for node in nodes if isinstance(node, Step) and node.cycle >= 0]
+    return max(made, key=lambda step: step.beat) if made else None
 
 
 def origin_of(session: Session, what: str, watch: Watch | None = None, most: int = MOST) -> Origin:
