@@ -28,7 +28,6 @@ from vliwsim.flow.graph import MOST_CONTEXTS, Graph
 from vliwsim.program.code import Program
 from vliwsim.program.kernel import ItemTag, Kernel
 
-
 NOTHING_GIVEN = Inputs()
 
 
@@ -114,7 +113,9 @@ class _Judge:
         for index in way:
             context, beat = self.graph.contexts[index], self.graph.beats[index]
             if beat is not None and beat.did != "fork":
-                found.append(Moment(context.at, context.within, beat.did, beat.landed))
+                sites = [self.graph.ready.sites[number] for number, _ in beat.landed]
+                landed = tuple(((site.bundle, site.instruction), site.write.register) for site in sites)
+                found.append(Moment(context.at, context.within, beat.did, landed))
         return tuple(found)
 
     def _flow(self) -> None:

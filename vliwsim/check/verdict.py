@@ -20,14 +20,13 @@ Site = tuple[int, int]
 class Moment:
     """A beat on a path: the bundle at hand and what it ``did`` (``issue``, ``hold``, ``fresh``).
 
-    ``within``: beats of its idle word before. ``landed``: write numbers of results due in this beat, and whether each
-    lands for certain.
+    ``within``: beats of its idle word before. ``landed``: (who sent it, register) of results due in this beat.
     """
 
     bundle: int
     within: int
     did: str
-    landed: tuple[tuple[int, bool], ...] = ()
+    landed: tuple[tuple[Site, int], ...] = ()
 
 
 @attrs.frozen

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 
 from vliwsim.check.rules import ALLOWS, WRONG_ITEM
 from vliwsim.check.verdict import NEEDS_INPUT, UNDECIDED, VIOLATED, EarlyRead, Incident, Judgement, Site, Verdict
+from vliwsim.description.operations import Kind
 from vliwsim.problems import Place, Problem, problem
 from vliwsim.program.effects import effects
 from vliwsim.program.kernel import Kernel
@@ -44,10 +45,9 @@ class Words:
 
     def name(self, site: Site) -> str:
         """The mnemonic of an operation and where it stands: ``dot.h2 (line 24, loop@0)``."""
-        bundle, instruction = site
         place = self.place(site)
         line = f"line {place.line}, " if place else ""
-        return f"{self.mnemonic(site)} ({line}{self.at(bundle)})"
+        return f"{self.mnemonic(site)} ({line}{self.at(site[0])})"
 
     def mnemonic(self, site: Site) -> str:
         return self.bundles[site[0]].instructions[site[1]].operation.name
@@ -72,7 +72,7 @@ class Words:
         rule, violated = judgement.rule, judgement.outcome == VIOLATED
         name = CANNOT_EXCLUDE if rule in PAIRS and not incident.sure else rule
         site = self._main(incident)
-        place = self.place(site) if site else self._last_line(incident.bundle)
+        place = self.place(site) if site else self._output(incident) or self._last_line(incident.bundle)
         kind = "note" if not violated else "error" if rule == WRONG_ITEM else "illegal"
         return problem(
             name,
@@ -89,8 +89,13 @@ class Words:
         here = [site for site in incident.sites if site[0] == incident.bundle]
         return next(iter([*here, *incident.sites]), None)
 
+    def _output(self, incident: Incident) -> Place | None:
+        """Where the header says the output that an incident is about."""
+        what, _, name = incident.detail.partition(",")[0].partition(" ")
+        return next((item.place for item in self.kernel.items if what == "output" and item.name == name), None)
+
     def _last_line(self, bundle: int) -> Place | None:
-        """The place of the nearest operation at or before a bundle; of an output, its own."""
+        """The place of the nearest operation at or before a bundle."""
         places = self.kernel.map.instruction_places
         for index in range(min(bundle, len(places) - 1), -1, -1):
             if places[index]:
@@ -234,11 +239,12 @@ class Words:
             f"{self.name(read.site)} reads {self.core.register_names[read.register]} with results in flight: {flights}"
         )
 
-    def latency(self, site: Site, register: int | None) -> int:
-        """Beats until the result of an operation lands (in ``register``); 0 of one without."""
+    def flight(self, site: Site, incident: Incident) -> int:
+        """Beats until what an operation sends lands: a branch, or the result that the incident is about; 0 of none."""
         instruction = self.bundles[site[0]].instructions[site[1]]
-        writes = effects(self.core, instruction).writes
-        chosen = [w.latency for w in writes if register is None or w.register == register]
+        if instruction.operation.kind is Kind.BRANCH and incident.register is None:
+            return self.core.branch.latency
+        chosen = [w.latency for w in effects(self.core, instruction).writes if incident.register in (None, w.register)]
         return max(chosen, default=0)
 
 

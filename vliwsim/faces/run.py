@@ -20,6 +20,15 @@ if TYPE_CHECKING:
     from vliwsim.program.kernel import Kernel
 
 STOPPED = 130
+PATIENCE = 2000
+"""Contexts that a kernel may take before a run goes on without knowing whether it is legal."""
+FEW_REFUSALS = 5
+"""Reasons not to simulate that are told."""
+NOT_SIMULATED = (
+    *("sizes", "case", "cycles", "bundles", "stalls", "drain", "budget", "within_budget"),
+    *("code_bytes", "matches", "outputs"),
+)
+"""What the JSON object of a kernel that is not simulated has no value for."""
 
 
 @click.command(short_help="Run a kernel.")
@@ -45,6 +54,7 @@ STOPPED = 130
 )
 @click.option("--save", multiple=True, metavar="NAME=FILE.npy", help="Write an output to a new file.")
 @click.option("--replace", is_flag=True, help="Let --save replace files.")
+@click.option("--anyway", is_flag=True, help="Simulate a kernel even if `vliwsim check` shows it illegal.")
 @click.option("--trace", is_flag=True, help="Print a line a beat: what issued, what landed.")
 @click.option("--notes", is_flag=True, help="Show every note, not only the first of each kind.")
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of the report.")
@@ -52,7 +62,8 @@ def run(kernel: str, as_json: bool, **options: Any) -> int:
     """Run KERNEL, compare its outputs with reference.py beside it, and account for every cycle.
 
     KERNEL is a .vliw file, a folder with one, or the name of a shipped kernel. With no inputs given its first case is
-    run. Loading reference.py executes it: it is code; every other file of a kernel is data.
+    run. What is illegal whatever the input is told first, and not simulated. Loading reference.py executes it: it is
+    code; every other file of a kernel is data.
     """
     try:
         with contextlib.redirect_stdout(sys.stderr) if as_json else contextlib.nullcontext():
@@ -101,6 +112,10 @@ class _Job:
         reference = None if options["no_reference"] else load_reference(kernel)
         if options["cases"]:
             return self._list(kernel, reference)
+        if not options["anyway"]:
+            refused = self._refused(kernel)
+            if refused is not None:
+                return refused
         if options["case"] == "all":
             return self._all(kernel, reference, given)
         from vliwsim.kernel.cases import case_with
@@ -112,6 +127,30 @@ class _Job:
         elif targets:
             self._say(lambda: "  nothing saved: the run did not finish")
         return run.as_json()
+
+    def _refused(self, kernel: Kernel) -> object | None:
+        """What to print instead of running a kernel that is illegal on some path; None for one that may run."""
+        from vliwsim.check.judge import check_kernel
+        from vliwsim.check.words import Words
+
+        words = Words(kernel, check_kernel(kernel, PATIENCE, interrupts=False))
+        if not words.verdict.violated:
+            return None
+        from vliwsim.faces.check_report import verdict_sentence
+
+        self.status = 1
+        told = words.violations()
+        shown = "\n\n".join(map(str, told[:FEW_REFUSALS]))
+        more = f"{len(told) - FEW_REFUSALS} more. " if len(told) > FEW_REFUSALS else ""
+        advice = f"{more}Not simulated: `vliwsim check` shows the paths there, `--anyway` simulates it."
+        self._say(lambda: f"{verdict_sentence(words)}\n\n{shown}\n\n  {advice}")
+        nothing = dict.fromkeys(NOT_SIMULATED)
+        return {
+            "kernel": kernel.name,
+            "core": kernel.core.name,
+            **nothing,
+            "diagnostics": [p.as_json() for p in told],
+        }
 
     def _say(self, text: Callable[[], str]) -> None:
         if not self.as_json:

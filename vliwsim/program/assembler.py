@@ -20,7 +20,7 @@ from vliwsim.program.assembly.schedule import schedule
 from vliwsim.program.assembly.slots import NoSlots, SlotChooser
 from vliwsim.program.code import Instruction, Program
 from vliwsim.program.encoding.layout import MOST_OPERATIONS
-from vliwsim.program.kernel import Kernel, Section, SourceMap
+from vliwsim.program.kernel import ItemTag, Kernel, Section, SourceMap
 from vliwsim.program.source.complaints import Complaints
 from vliwsim.program.source.interface import interface, judge_type
 from vliwsim.program.source.parser import parse
@@ -331,6 +331,7 @@ class _Assembly:
         """The way back from bundles to the source."""
         where: list[tuple[str, int]] = []
         places: list[tuple[Place, ...]] = []
+        items: list[tuple[ItemTag | None, ...]] = []
         known: dict[int, Place] = {}
         ends = [*first_bundles[1:], len(program.bundles)]
         for draft, (label, beat), first, end in zip(self.drafts, self.at, first_bundles, ends):
@@ -339,11 +340,13 @@ class _Assembly:
                 beat += bundle.beats
                 if isinstance(draft, int):
                     places.append(())
+                    items.append(())
             if not isinstance(draft, int):
                 for ready, _ in draft:
                     if id(ready.call) not in known:
                         known[id(ready.call)] = self._instruction_place(ready)
                 places.append(tuple([known[id(ready.call)] for ready, _ in draft]))
+                items.append(tuple([ready.item for ready, _ in draft]))
         stretches = tuple(
             Section(
                 section.label.text,
@@ -353,4 +356,5 @@ class _Assembly:
             )
             for section in sections
         )
-        return SourceMap(stretches, tuple(where), tuple(places))
+        tagged = any(any(bundle) for bundle in items)
+        return SourceMap(stretches, tuple(where), tuple(places), tuple(items) if tagged else ())

@@ -12,11 +12,14 @@ from vliwsim.description.operations import Operand, Operation, Role
 from vliwsim.program.code import Address, Guard, Immediate, Label, Mode, Place, Register
 from vliwsim.program.effects import touched
 from vliwsim.program.encoding.layout import constant_limits, takes_immediate
+from vliwsim.program.kernel import ItemTag
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
 from vliwsim.program.source.tree import Call
 
 MOST_RING = 1 << 31
+OLDEST_ITEM = 4096
+"""Passes that an `item` may be old."""
 
 _HALVES = {".lo": 0, ".hi": 1}
 _INTEGER = re.compile(r"-?(?:\d+|0[xX][0-9a-fA-F]+|0[bB][01]+)\Z")
@@ -43,6 +46,7 @@ class Ready:
     call: Call
     reads: list[tuple[int, str]]
     writes: list[tuple[int, str, str]]
+    item: ItemTag | None = None
 
 
 class OperandReader:
@@ -80,7 +84,7 @@ class OperandReader:
                 places.append(place)
         if len(places) < len(call.operands) or len(self.complaints.problems) > before:
             return None
-        ready = Ready(operation, tuple(places), guard, pin, call, *touched(operation, places))
+        ready = Ready(operation, tuple(places), guard, pin, call, *touched(operation, places), self.item(call))
         self._check_whole(ready)
         return ready
 
@@ -99,6 +103,27 @@ class OperandReader:
         form = f"{operation.name} {', '.join(operand_form(operand) for operand in operation.operands)}".strip()
         found = f"{len(call.operands)} operands for {operation.name}"
         self.complaints.add("operand-count", call.mnemonic.where, found, form)
+
+    def item(self, call: Call) -> ItemTag | None:
+        """The item that an operation works on, where it says so."""
+        if call.item is None:
+            return None
+        age = self.age(call.item)
+        others = []
+        for name, piece in call.others:
+            register, other = self.register(name), self.age(piece)
+            if register is not None and other is not None:
+                others.append((register, other))
+        return None if age is None else ItemTag(age, tuple(others))
+
+    def age(self, piece: Piece) -> int | None:
+        """A number of passes."""
+        value = self.integer(piece)
+        if value is not None and not 0 <= value <= OLDEST_ITEM:
+            found = f"item {piece.text}" + ("" if str(value) == piece.text else f", which is {value}")
+            self.complaints.add("bad-item", piece.where, found, f"0, the newest, to {OLDEST_ITEM}")
+            return None
+        return value
 
     def guard(self, call: Call) -> Guard | None:
         assert call.guard

@@ -179,4 +179,6 @@ class _Maker:
 def _uses(call: Call, variables: frozenset[str]) -> bool:
     """Whether the text of an operation holds one of the names."""
     pieces = (*call.operands, call.guard) if call.guard else call.operands
+    if call.item:
+        pieces = (*pieces, call.item, *(piece for other in call.others for piece in other))
     return any(not variables.isdisjoint(_NAMES.findall(piece.text)) for piece in pieces)

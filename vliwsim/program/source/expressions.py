@@ -126,7 +126,7 @@ REFERENCES = ("addr", "len", "latency")
 
 CONSTANTS = {"pi": math.pi}
 
-RESERVED = frozenset((*FUNCTIONS, *REFERENCES, *CONSTANTS, "and", "or", "not", "if", "else", "i"))
+RESERVED = frozenset((*FUNCTIONS, *REFERENCES, *CONSTANTS, "and", "or", "not", "if", "else", "item", "with", "i"))
 """Names that no size, item or ``let`` may take. (``i`` counts elements in tables.)"""
 
 _ALLOWED = "numbers, names, + - * // / % ** & | ^ ~ << >>, comparisons, and or not, A if C else B, " + ", ".join(

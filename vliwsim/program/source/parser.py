@@ -17,6 +17,7 @@ _LABEL = re.compile(r"\s*([A-Za-z_]\w*)\s*:")
 _WORD = re.compile(r"\s*([A-Za-z_][\w.]*)")
 _QUICK_STAMP = re.compile(r"\s*@(\d+)(?=\s+[A-Za-z]|\s*$)")
 _REPEAT_AS = re.compile(r"\s+as(?:\s+|$)")
+_OF = re.compile(r"\s+of\s+")
 _VARIABLE = re.compile(r"[A-Za-z_]\w*\Z")
 
 
@@ -184,7 +185,7 @@ class _Parser:
         self.target = self.blocks[-1][0].body if self.blocks else self.tree.body
 
     def call(self, piece: Piece, start: int) -> None:
-        """An operation: mnemonic, operands between commas, then ``if`` and ``on`` in any order."""
+        """An operation: mnemonic, operands between commas, then ``if``, ``on``, ``item`` and ``with`` in any order."""
         text = piece.text
         try:
             commas, tails = cut_call(text[start:])
@@ -200,19 +201,34 @@ class _Parser:
                     operands.append(piece.part(at, start + comma))
                     at = start + comma + 1
             operands.append(piece.part(at, end))
-        guard = pin = None
+        guard = pin = item = None
+        others: list[tuple[Piece, Piece]] = []
         negated = False
         for k, (word, where) in enumerate(tails):
             stop = start + tails[k + 1][1] if k + 1 < len(tails) else len(text)
             value = piece.part(start + where + len(word), stop)
-            if (word == "if" and guard) or (word == "on" and pin):
+            if (word == "if" and guard) or (word == "on" and pin) or (word == "item" and item):
                 self.complaints.add("twice", (piece.line, piece.column + start + where), f"{word} twice", f"one {word}")
             elif word == "on":
                 pin = value
+            elif word == "item":
+                item = value
+            elif word == "with":
+                others += self.other(value)
             else:
                 negated = value.text.split(None, 1)[:1] == ["not"]
                 guard = value.part(3) if negated else value
-        self.target.append(Call(mnemonic, tuple(operands), guard, negated, pin))
+        if others and not item:
+            self.complaints.add("no-item", others[0][0].where, "with without item", "item N with REGISTER of M")
+        self.target.append(Call(mnemonic, tuple(operands), guard, negated, pin, item, tuple(others)))
+
+    def other(self, value: Piece) -> list[tuple[Piece, Piece]]:
+        """``REGISTER of EXPRESSION`` behind ``with``."""
+        match = _OF.search(value.text)
+        if not match:
+            self.complaints.add("bad-item", value.where, f"with {value.text}", "with REGISTER of N", "with g2 of 1")
+            return []
+        return [(value.part(0, match.start()), value.part(match.end()))]
 
     def finish(self) -> None:
         for _, piece in self.blocks:

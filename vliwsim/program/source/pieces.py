@@ -25,7 +25,7 @@ class Piece(NamedTuple):
         return Piece(bare, self.line, self.column + start + len(text) - len(text.lstrip()))
 
 
-_OF_INTEREST = re.compile(r"[\[\](){},]|(?<![\w.])(?:if|on)(?![\w.])")
+_OF_INTEREST = re.compile(r"[\[\](){},]|(?<![\w.])(?:if|on|item|with)(?![\w.])")
 _OPEN = {"[": "]", "(": ")", "{": "}"}
 _TOKEN = re.compile(r"\s*(?:(0[xXbB]\w+|\d+(?:\.\d+)?|[A-Za-z_]\w*)|(\*\*|//|<<|>>|[-+*/%&|^~])|(\())")
 
@@ -54,7 +54,7 @@ class Unbalanced(Exception):
 
 
 def cut_call(text: str) -> tuple[list[int], list[tuple[str, int]]]:
-    """Where the top-level commas of a statement are, and its top-level ``if`` and ``on`` words.
+    """Where the top-level commas of a statement are, and its top-level ``if``, ``on``, ``item`` and ``with`` words.
 
     Raises :class:`Unbalanced`.
     """

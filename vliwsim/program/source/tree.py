@@ -42,13 +42,18 @@ class Name(NamedTuple):
 
 
 class Call(NamedTuple):
-    """One operation as written. ``guard`` is the register's text, ``pin`` the slot's."""
+    """One operation as written. ``guard`` is the register's text, ``pin`` the slot's, ``item`` an expression.
+
+    ``others``: of operands from another item than ``item``, the register's text and the item's expression.
+    """
 
     mnemonic: Piece
     operands: tuple[Piece, ...]
     guard: Piece | None = None
     negated: bool = False
     pin: Piece | None = None
+    item: Piece | None = None
+    others: tuple[tuple[Piece, Piece], ...] = ()
 
 
 class Repeat(NamedTuple):
