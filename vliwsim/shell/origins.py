@@ -14,12 +14,15 @@ import attrs
 
 from vliwsim.description.values import Value, join
 from vliwsim.machine.parts import Part
+from vliwsim.program.code import Mode
 from vliwsim.shell.faults import unclear
 from vliwsim.shell.history import History, Saved, Watch
 from vliwsim.shell.influence import influence
 from vliwsim.shell.session import Session
 from vliwsim.shell.trace import Beat, Landed, Store, Stretch, backwards
 
+Key = tuple[int, int, int, bool]
+"""Beat, bundle, instruction, and whether its updated base is meant: that depends on less than its results do."""
 MOST = 60_000
 """Operations that one question follows, at most."""
 
@@ -66,6 +69,8 @@ class Step:
     counted: int = 0
     within: int = 0
     stored: tuple[Value, int, int] | None = None
+    updates: bool = False
+    """Whether this is the update of a base, not the results."""
     given: bool = False
     """Whether it depends on elements of given arrays, or on what is supposed or undefined."""
 
@@ -99,8 +104,8 @@ class Walk:
         self.session, self.watch, self.most = session, watch, most
         self.machine = session.machine
         self.root = Source("", "operand", None)
-        self.steps: dict[tuple[int, int, int], Step] = {}
-        self._open: list[tuple[int, int, int]] = []
+        self.steps: dict[Key, Step] = {}
+        self._open: list[Key] = []
         self._registers: dict[int, list[_Waiting]] = {}
         self._bytes: dict[int, list[_Waiting]] = {}
         self._stopped = False
@@ -153,7 +158,7 @@ class Walk:
                 self._supposed(course)
             until, course = course.begin, course.parent
         self._end_at_start()
-        steps = sorted(self.steps.values(), key=lambda s: (s.beat, s.bundle, s.instruction))
+        steps = sorted(self.steps.values(), key=lambda s: (s.beat, s.bundle, s.instruction, s.updates))
         for step in steps:
             step.given = any(_given(node) for source in step.sources for node in source.nodes)
         return Origin(self.root, steps, self._elements, not self._stopped)
@@ -195,9 +200,9 @@ class Walk:
                 self._find_store(stretch, byte, one)
         first = min(stretch.beats, default=1 << 62)
         while self._open and -self._open[0][0] >= first:
-            _, bundle, instruction = key = heapq.heappop(self._open)
-            beat = -key[0]
-            self._expand(stretch, stretch.beats[beat], self.steps[beat, bundle, instruction])
+            minus, *rest = heapq.heappop(self._open)
+            step = self.steps[-minus, *rest]  # type: ignore[index]
+            self._expand(stretch, stretch.beats[step.beat], step)
             if len(self.steps) >= self.most:
                 self._stopped = True
                 return
@@ -227,9 +232,10 @@ class Walk:
         number = getattr(landed, "number", None)
         site = self.machine.ready.sites[number] if number is not None else landed.site  # type: ignore[attr-defined]
         lands = landed.beat if isinstance(landed, Landed) else landed.lands  # type: ignore[attr-defined]
-        step = self._demand(source, lands - site.write.latency, bundle, instruction)
+        updates = site.write.what == "update"
+        step = self._demand(source, (lands - site.write.latency, bundle, instruction, updates))
         step.values[register] = landed.value  # type: ignore[attr-defined]
-        if site.write.what == "update":
+        if updates:
             self._ask(step, "base", 15)
         else:
             part = self.machine.ready[bundle].parts[instruction]
@@ -244,17 +250,16 @@ class Walk:
         self._wait(self._bytes, byte, one)
 
     def _demand_store(self, source: Source, store: Store, byte: int) -> None:
-        step = self._demand(source, store.beat, store.bundle, store.instruction)
+        step = self._demand(source, (store.beat, store.bundle, store.instruction, False))
         little = self.session.kernel.core.memory.endianness == "little"
         offset = byte - store.address
         self._ask(step, "stored", 1 << (offset if little else store.size - 1 - offset))
 
-    def _demand(self, source: Source, beat: int, bundle: int, instruction: int) -> Step:
-        key = beat, bundle, instruction
+    def _demand(self, source: Source, key: Key) -> Step:
         step = self.steps.get(key)
         if step is None:
-            step = self.steps[key] = Step(beat, bundle, instruction)
-            heapq.heappush(self._open, (-beat, bundle, instruction))
+            step = self.steps[key] = Step(*key[:3], updates=key[3])
+            heapq.heappush(self._open, (-key[0], *key[1:]))
         if step not in source.nodes:
             source.nodes.append(step)
         return step
@@ -275,12 +280,12 @@ class Walk:
             self._from_register(stretch, step, beat, "guard", "guard", guard, 15)
         reach = part.reach
         if reach:
-            based = "base" in step.asked
-            first = reach.base
-            self._from_register(stretch, step, beat, "base", "operand" if based else "address", first, 15)
-            if reach.step < len(self.session.kernel.core.register_names):
-                self._from_register(stretch, step, beat, "step", "operand" if based else "address", reach.step, 15)
-        if set(step.asked) <= {"base"}:
+            role = "operand" if step.updates else "address"
+            self._from_register(stretch, step, beat, "base", role, reach.base, 15)
+            stepped = step.updates or reach.mode is not Mode.AFTER  # [base then +step] is made of the base alone
+            if stepped and reach.step < len(self.session.kernel.core.register_names):
+                self._from_register(stretch, step, beat, "step", role, reach.step, 15)
+        if step.updates:
             return
         inputs = [self._input(registers, wanted) for wanted in part.inputs]
         sizes = [self._size(part, k) for k in range(len(inputs))]

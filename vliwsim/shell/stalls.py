@@ -6,7 +6,6 @@ import attrs
 
 from vliwsim.machine.memory import Touch
 from vliwsim.machine.state import State
-from vliwsim.shell.faults import unclear
 from vliwsim.shell.history import Watch
 from vliwsim.shell.moment import Flight, Moment, guard_is_on, resting
 from vliwsim.shell.session import Session
@@ -42,15 +41,15 @@ class Stall:
     crossing: tuple[str, ...] = ()
 
 
-def stall_here(session: Session, watch: Watch | None = None) -> Stall:
-    """The stall of this cycle, or the latest one before it; raises ``Unclear`` where there was none."""
+def stall_here(session: Session, watch: Watch | None = None) -> Stall | None:
+    """The stall of this cycle, or the latest one before it; None where there was none."""
     cause = session.looker.stalls(session.state)
     state = session.machine.start({}, (), session.state.memory.regions)
     session.history.put(state, session.cycle)
     if cause is None:
         total = sum(state.stalls.values())
         if not total:
-            raise unclear("no cycle has stalled up to here", "why stall at or behind one", "seek stalled")
+            return None
         first, _ = session.first_cycle(lambda s: sum(s.stalls.values()) >= total, 0, watch)
         assert first is not None
         session.history.put(state, first - 1)

@@ -267,7 +267,9 @@ class Shell:
         if not rest:
             raise unclear("nothing to explain", "a register, an element such as y[3], or stall", "why g6")
         if rest == "stall":
-            self.write(reasons.stall(self.session, stall_here(self.session, self.watch), self.width()))
+            found = stall_here(self.session, self.watch)
+            nothing: list[Line] = [[("", "  no cycle has stalled up to here")]]
+            self.write(reasons.stall(self.session, found, self.width()) if found else nothing)
             return
         origin = origin_of(self.session, rest, self.watch)
         self.write(reasons.why(self.session, origin, self.width()))

@@ -78,7 +78,7 @@ class _Telling:
     def _step(self, source: Source, step: Step, depth: int) -> None:
         head = self._head(source, step)
         if id(step) in self.told:
-            self._say(depth, [*head, ("faint", ", told above")])
+            self._say(depth, [*head[: len(step.values) * 2 - 1 or 1], ("faint", ", told above")])
             return
         self.told.add(id(step))
         self._say(depth, head)
@@ -108,9 +108,13 @@ class _Telling:
         """What the operation used, but for the one that the chain goes on with; guards and addresses where data."""
         if not step.sources and step.cycle < 0:
             self._say(depth, [("faint", "not followed further back")])
-        memory = [s for s in step.sources if s.role == "memory"]
-        for source in [s for s in step.sources if s.role == "operand"] + memory:
+        told: set[tuple[str, tuple[int, ...]]] = set()
+        for source in sorted(step.sources, key=lambda s: s.role == "memory"):
             nodes = [n for n in source.nodes if n is not left_out]
+            key = source.name, tuple(id(n) for n in source.nodes)
+            if source.role not in ("operand", "memory") or key in told:
+                continue
+            told.add(key)
             if len(nodes) > 1 and all(isinstance(n, Leaf) and n.kind == "element" for n in nodes):
                 self._say(depth, [("", self._elements([n for n in nodes if isinstance(n, Leaf)]))])
             else:
@@ -150,9 +154,12 @@ class _Telling:
             if source.role != "operand":
                 continue
             for node in source.nodes:
-                if isinstance(node, Step) and self._name(node) == self._name(step) and registers & set(node.values):
+                if isinstance(node, Step) and self._alike(node, step) and registers & set(node.values):
                     return node
         return None
+
+    def _alike(self, one: Step, other: Step) -> bool:
+        return one.updates == other.updates and self._name(one) == self._name(other)
 
     def _name(self, step: Step) -> str:
         return self.session.machine.ready[step.bundle].parts[step.instruction].operation.name
@@ -169,7 +176,7 @@ class _Telling:
         return self.session.layout.repeats(self.session.layout.section_at(step.bundle))
 
     def _head(self, source: Source, step: Step) -> Line:
-        """``g6 = 9, from dot.h2 g6, g2, g2 at loop@0 pass 7, cycle 14 (line 27)``."""
+        """``g6 = 9, at loop@0 pass 7, cycle 14 (line 27): dot.h2 g6, g2, g2``."""
         layout = self.session.layout
         if step.stored is not None and source.role == "memory":
             value, address, size = step.stored
@@ -182,11 +189,8 @@ class _Telling:
                 shown.append((tint(register, held), f"{name} = {value_text(held)}"))
         else:
             shown = [("", source.name)]
-        return [
-            *shown,
-            ("", f", from {layout.text(step.bundle, step.instruction)}"),
-            ("faint", where(self.session, step)),
-        ]
+        text = layout.text(step.bundle, step.instruction)
+        return [*shown, ("faint", f",{where(self.session, step)}"), ("", f": {text}")]
 
     def _summary(self) -> list[Line]:
         """One sentence: how much was followed, and to which inputs."""
