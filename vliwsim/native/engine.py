@@ -1,0 +1,119 @@
+"""The fast engine: machine code where there is some for what the machine is in the middle of, the stepper elsewhere."""
+
+from __future__ import annotations
+
+from vliwsim.description.values import Undefined
+from vliwsim.machine.hazards import HazardMet
+from vliwsim.machine.outcome import Outcome
+from vliwsim.machine.state import State
+from vliwsim.machine.stepper import FOREVER, Machine
+from vliwsim.native import exchange
+from vliwsim.native.compiler import Code, compile_text
+from vliwsim.native.contexts import Context, Contexts, Flight, Turn
+from vliwsim.native.loaded import Loaded
+from vliwsim.native.region import Region
+from vliwsim.native.translate import Translation
+
+MOST_REGIONS = 8
+"""Translations of one program; beyond that the stepper goes on alone where none fits."""
+
+PATIENCE = 4096
+"""Cycles the stepper goes on, where no context fits, before a translation from there is made."""
+
+
+class Native:
+    """One program on its core, run fast. ``regions``: what has been translated."""
+
+    def __init__(self, machine: Machine) -> None:
+        self.machine = machine
+        self.walker = Contexts(machine.ready)
+        self.regions: list[Loaded] = []
+
+    # -------------------------------------------------------------------------------------------------- translations
+
+    def translate(self, state: State) -> Loaded | None:
+        """A translation that begins at ``state``; None where there is none to begin with."""
+        seed = self.context_of(state)
+        if seed is None or len(self.regions) >= MOST_REGIONS:
+            return None
+        undefined = 0
+        for register in range(len(self.machine.core.register_names)):
+            if isinstance(state.operands[register], Undefined):
+                undefined |= 1 << register
+        translation = Translation(Region(self.walker, seed, undefined))
+        made = Loaded(self.machine, translation, Code(compile_text(translation.text("run"))))
+        self.regions.append(made)
+        return made
+
+    def context_of(self, state: State) -> Context | None:
+        """The context a state is in; None within a freeze, a service, behind ``halt`` or with undefined data in flight."""
+        if state.frozen or state.service or state.halt_beat is not None:
+            return None
+        flights = []
+        for beat, batches in state.flight.items():
+            for numbers, values in batches:
+                if any(isinstance(value, Undefined) for value in values):
+                    return None
+                flights += [Flight(beat - state.beat, n, True) for n in numbers]
+        turns = self._turns_of(state)
+        if turns is None:
+            return None
+        busy = tuple((slot, until - state.beat) for slot, until in enumerate(state.busy_until) if until > state.beat)
+        return Context(
+            state.at, state.within, state.waited_fresh, tuple(sorted(flights)), tuple(sorted(turns)), busy
+        )
+
+    def _turns_of(self, state: State) -> list[Turn] | None:
+        """The branches in flight, each from some bundle that could have sent it; None where none is found."""
+        if not state.redirects and state.issue - state.last_branch >= self.machine.core.branch.latency:
+            return []
+        return None
+
+    # ------------------------------------------------------------------------------------------------------- running
+
+    def advance(self, state: State, until: int = FOREVER) -> None:
+        """As :meth:`vliwsim.machine.stepper.Machine.advance`."""
+        machine, alone = self.machine, 0
+        while not state.finished and state.cycle < until:
+            asked = state.interrupt_at
+            if state.halt_beat is not None or state.frozen or (asked is not None and state.cycle >= asked):
+                machine.advance(state, min(until, state.cycle + 1))
+                continue
+            if self.leap(state, until if asked is None else min(until, asked)):
+                alone = 0
+                continue
+            machine.advance(state, min(until, state.cycle + 1))
+            alone += 1
+            if alone > PATIENCE and self.translate(state) is None and len(self.regions) >= MOST_REGIONS:
+                machine.advance(state, min(until, state.cycle + (1 << 16)))
+
+    def leap(self, state: State, until: int) -> bool:
+        """Run machine code from here if there is some; whether time has passed."""
+        if not self.regions:
+            self.translate(state)
+        for loaded in self.regions:
+            match = loaded.match(state)
+            if match is None:
+                continue
+            fuel = min((until - state.cycle) // loaded.region.span - 1, 1 << 60)
+            if fuel < (match[0] in loaded.region.heads):
+                return False
+            before = state.cycle
+            loaded.run(state, match, fuel)
+            return state.cycle > before
+        return False
+
+    def run(self, state: State, *, limit: int | None = None, interrupt_at: int | None = None) -> Outcome:
+        """As :meth:`vliwsim.machine.stepper.Machine.run`."""
+        machine = self.machine
+        if interrupt_at is not None:
+            state.interrupt_at = interrupt_at
+        end = FOREVER if limit is None else limit
+        try:
+            self.advance(state, end)
+        except HazardMet:
+            pass
+        return machine.run(state, limit=end)
+
+
+__all__ = ["Native", "exchange"]

@@ -1,0 +1,125 @@
+"""A region: the contexts of one translation, found breadth first from a seed, with what the translation needs of them."""
+
+from __future__ import annotations
+
+from collections import deque
+from collections.abc import Iterator
+
+from vliwsim.native.contexts import Context, Contexts, Step
+
+MOST_CONTEXTS = 3000
+"""Contexts of a region; the ways beyond lead back to the stepper."""
+
+MOST_ENTRIES = 64
+
+
+class Region:
+    """Contexts by index; ``contexts[0]`` is the seed.
+
+    ``undefined``: registers that may be undefined at the seed, as bits. ``entries``: contexts that may be entered, the
+    seed and the heads of loops. ``heads``: contexts that loops come back to. ``may``: for every context the registers
+    that may be undefined, as bits. ``span``: an upper bound of the cycles from one head to the next, or to the end.
+    """
+
+    def __init__(self, walker: Contexts, seed: Context, undefined: int, cap: int = MOST_CONTEXTS) -> None:
+        self.walker = walker
+        self.index: dict[Context, int] = {seed: 0}
+        self.steps: list[Step] = []
+        ahead = deque([seed])
+        while ahead:
+            step = walker.step(ahead.popleft())
+            self.steps.append(step)
+            for context in step.successors:
+                if context not in self.index and len(self.index) < cap:
+                    self.index[context] = len(self.index)
+                    ahead.append(context)
+        self.successors = [
+            [self.index[c] for c in step.successors if c in self.index] for step in self.steps
+        ]
+        self.heads, self._order = self._search()
+        self.entries = [0, *sorted(self.heads - {0})][:MOST_ENTRIES]
+        self.may = self._may_be_undefined(undefined)
+        self.chain, self.place = self._chains()
+        self.span = self._span()
+
+    def __len__(self) -> int:
+        return len(self.steps)
+
+    def _search(self) -> tuple[set[int], list[int]]:
+        """Heads of loops (targets of retreating edges), and the contexts, each behind all it leads to otherwise."""
+        heads: set[int] = set()
+        order: list[int] = []
+        state = [0] * len(self)  # 1 while under way, 2 when done
+        stack: list[tuple[int, Iterator[int]]] = [(0, iter(self.successors[0]))]
+        state[0] = 1
+        while stack:
+            here, rest = stack[-1]
+            following = next(rest, None)
+            if following is None:
+                state[here] = 2
+                order.append(here)
+                stack.pop()
+            elif state[following] == 1:
+                heads.add(following)
+            elif state[following] == 0:
+                state[following] = 1
+                stack.append((following, iter(self.successors[following])))
+        return heads, order
+
+    def _may_be_undefined(self, undefined: int) -> list[int]:
+        may = [0] * len(self)
+        may[0] = undefined
+        ahead = deque([0])
+        reached = {0}
+        while ahead:
+            here = ahead.popleft()
+            after = may[here]
+            for flight in self.steps[here].due:
+                if flight.sure:
+                    after &= ~(1 << self.walker.register(flight))
+            for following in self.successors[here]:
+                joined = may[following] | after
+                if joined != may[following] or following not in reached:
+                    reached.add(following)
+                    may[following] = joined
+                    ahead.append(following)
+        return may
+
+    def _chains(self) -> tuple[list[int], list[int]]:
+        """For every context the first of its chain, and how far behind it stands; a chain is run from its first on."""
+        before: list[list[int]] = [[] for _ in self.steps]
+        for here, following in enumerate(self.successors):
+            for context in following:
+                before[context].append(here)
+        entries = {*self.entries, *self.heads}
+        chain, place = [-1] * len(self), [0] * len(self)
+
+        def begins(context: int) -> bool:
+            return context in entries or len(before[context]) != 1 or self.steps[before[context][0]].ways != 1
+
+        for first in range(len(self)):
+            if not begins(first):
+                continue
+            here, far = first, 0
+            while True:
+                chain[here], place[here] = first, far
+                following = self.successors[here]
+                if self.steps[here].ways != 1 or len(following) != 1 or begins(following[0]):
+                    break
+                here, far = following[0], far + 1
+        assert -1 not in chain
+        return chain, place
+
+    def _span(self) -> int:
+        """The longest way between heads, in cycles."""
+        core = self.walker.core
+        slowest = max((w.cycles for w in core.memory.waits), default=0)
+        each = core.branch.taken_penalty + core.words.straddle_freeze + 1
+        far = [0] * len(self)
+        for here in self._order:
+            step = self.steps[here]
+            accesses = sum(p.operation.access is not None for p in step.prepared.parts)
+            own = 1 + accesses * (1 + slowest) + each
+            far[here] = own + max((far[f] for f in self.successors[here] if f not in self.heads), default=0)
+        last = max((f.beats for step in self.steps for f in (*step.staying, *(f for _, f in step.new))), default=0)
+        return max(far) + last + 1
