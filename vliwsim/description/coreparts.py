@@ -310,9 +310,16 @@ def structure(
 
 
 @cache
+def _converter() -> Any:
+    """One for all classes: making one takes longer than all that is done with it."""
+    import cattrs
+
+    return cattrs.Converter(detailed_validation=True)
+
+
+@cache
 def _structurer(kind: type) -> Callable[[object, type], object]:
     """cattrs' function for one class, made when first wanted."""
-    import cattrs
     from cattrs.gen import make_dict_structure_fn, override
 
     def hook(check: Check) -> Any:
@@ -320,9 +327,7 @@ def _structurer(kind: type) -> Callable[[object, type], object]:
 
     fields: dict[str, Any] = {field.name: hook(lambda value: value) for field in attrs.fields(kind)}
     fields |= {key: hook(check) for key, check in RULES[kind].items()}
-    made: Any = make_dict_structure_fn(
-        kind, cattrs.Converter(detailed_validation=True), _cattrs_forbid_extra_keys=True, **fields
-    )
+    made: Any = make_dict_structure_fn(kind, _converter(), _cattrs_forbid_extra_keys=True, **fields)
     return cast(Callable[[object, type], object], made)
 
 
