@@ -42,5 +42,7 @@ def cases(generated):
     noise[96:128] = -0.0
     yield "silence", {"x": noise}
     yield "knocks", {"x": np.eye(32, dtype=np.float32).ravel() * np.float32(-3)}
+    for where in range(32):
+        yield f"knock-at-{where}", {"x": -np.eye(1, 32, where, dtype=np.float32)[0]}
     yield "tiny", {"x": (random.normal(0, 1, 128) * 2.0**-80).astype(np.float32)}
     yield from generated

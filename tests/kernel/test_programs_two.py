@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import shutil
 from collections.abc import Mapping
 from functools import cache
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -171,6 +173,23 @@ def test_sections_saturate() -> None:
     worst = np.where(response[::-1] < 0, -(2**31), 2**31 - 1).astype(np.int32)
     y = shipped("sections").run(x=worst, state=np.zeros(8, np.int32)).outputs["y"]
     assert y.max() == 2**31 - 1
+
+
+def test_sections_with_any_other_table(tmp_path: Path) -> None:
+    """The shipped table has a 0 where any number may stand, and smaller sums than the comment allows."""
+    folder = tmp_path / "sections"
+    shutil.copytree(programs_folder() / "sections", folder)
+    random = np.random.default_rng(8)
+    for _ in range(4):
+        rows = random.uniform(-1, 1, (3, 5)) * [1, 1, 1, 1.2, 0.5]
+        rows[0] *= 7.99 / np.abs(rows[0]).sum()
+        np.save(folder / "coefficients.npy", np.rint(rows * 2**29).astype(np.int32).ravel())
+        kernel = load_kernel(str(folder / "sections.vliw"))
+        x = random.integers(-(2**31), 2**31, 25).astype(np.int32)
+        state = random.integers(-(2**31), 2**31, 8).astype(np.int32)
+        run = kernel.run(x=x, state=state)
+        assert run.ok, run.verdict
+        assert len(set(run.outputs["y"])) > 10
 
 
 def test_crest_of_signals_whose_crest_is_known() -> None:
