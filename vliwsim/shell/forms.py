@@ -44,9 +44,22 @@ def raw_text(bits: int, form: str) -> str:
 def element_text(element: Element, bits: int) -> str:
     """One element of a kernel's data."""
     if element.floating:
-        return f"{struct.unpack('<f', struct.pack('<I', bits & 0xFFFFFFFF))[0]:.9g}"
+        return _shortest(bits & 0xFFFFFFFF)
     value = element.from_raw(bits)
     return str(value) if element.fraction is None else f"{int(value) / (1 << element.fraction):.9g}"
+
+
+def _shortest(bits: int) -> str:
+    """The shortest decimal number that rounds to these binary32 bits."""
+    value = struct.unpack("<f", struct.pack("<I", bits))[0]
+    for digits in range(1, 10):
+        text = f"{value:.{digits}g}"
+        try:
+            if struct.pack("<f", float(text)) == struct.pack("<f", value):
+                return text
+        except OverflowError:  # rounded up beyond the largest
+            continue
+    return text
 
 
 def value_text(value: Value, form: str | None = None) -> str:

@@ -15,7 +15,7 @@ from vliwsim.machine.state import State
 from vliwsim.machine.stepper import Machine
 
 
-@attrs.frozen
+@attrs.frozen(eq=False)
 class Flight:
     """One result on its way: ``value`` for ``register`` by ``site``, sent in beat ``sent``, lands in beat ``lands``."""
 

@@ -159,6 +159,7 @@ class View(Mapping[str, Any]):
 
 
 _HALF = re.compile(r"\b([A-Za-z_]\w*)\.(lo|hi)\b")
+_REFERENCE = re.compile(r"\b(?:addr|len)\(\s*\w+\s*\)")
 _PASS = re.compile(r"\bpass\b")
 
 
@@ -231,6 +232,8 @@ def term(names: Names, text: str, made: Mapping[str, str] = {}) -> Term:
             words = (*names.all(), *FUNCTIONS, *CONSTANTS)
             allowed = "registers, " + ", ".join(filter(None, ("arrays " + listed(names.arrays), "sizes, cycle, pass")))
             raise unclear(f"{name} means nothing here", allowed, nearest(name, words), name="unknown-name")
+        if name in names.arrays and re.search(rf"\b{name}\b(?!\s*\[)", _REFERENCE.sub("", written)):
+            raise unclear(f"{name} is an array", "one element", f"{name}[0]", name="needs-index")
     for reference in sorted(parsed.references):
         if reference not in names.fixed:
             raise unclear(f"{reference} has no value here", listed(f"{r}(x)" for r in REFERENCES), name="unknown-name")

@@ -59,9 +59,7 @@ COMMANDS: dict[str, Command] = {
         Command("judge", "judge [OUTPUT]", "judge y", "outputs against the reference, so far", ("outputs",)),
         Command("suppose", "suppose WHAT = EXPR", "suppose g14 = 7", "change it, on a branch of time", ("elements",)),
         Command("forget", "forget", "forget", "return to the recorded run, where the branch began"),
-        Command(
-            "draw", "draw WHAT [as FORM] [with WHAT]", "draw y[0:64] as q15 with reference", "plot it", ("values",)
-        ),
+        Command("draw", "draw WHAT [as FORM] [with WHAT]", "draw y[0:64] with reference", "plot it", ("values",)),
         Command("play", "play FILE", "play steps.txt", "run the commands in a file"),
         Command("leave", "leave", "leave", "end the shell"),
         Command("help", "help [COMMAND|OPERATION]", "help seek", "this list, or more of one", ("commands",)),
@@ -254,7 +252,7 @@ class Shell:
 
     def _here(self, rest: str) -> None:
         self._nothing(rest, "here")
-        self.write(view.here(self.session))
+        self.write(view.here(self.session, self.width()))
 
     def _flight(self, rest: str) -> None:
         register = self.session.names.register(rest) if rest else None
@@ -376,7 +374,7 @@ class Shell:
             return
         width = max(len(command.example) for command in COMMANDS.values())
         rows: list[Line] = [[("", f"  {c.example:<{width}}"), ("faint", f"  {c.says}")] for c in COMMANDS.values()]
-        rows.append([("faint", "  Any beginning that fits one command only will do. Alt-→ and Alt-← go a cycle.")])
+        rows.append([("faint", "  Any beginning that fits one command will do. Alt-→ and Alt-← go a cycle.")])
         self.write(rows)
 
 

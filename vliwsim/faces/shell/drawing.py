@@ -36,8 +36,7 @@ def plot(
         low, high = (low - 1, high + 1) if low == 0 else (low - abs(low) / 2, high + abs(high) / 2)
     labels = [label(high), label((low + high) / 2), label(low)]
     margin = max(map(len, labels)) + 2
-    columns = max(10, width - margin - 3)
-    columns = min(columns, max(10, -(-len(series) // 2)))
+    columns = min(max(10, width - margin - 3), max(32, -(-len(series) // 2)))
     one = _canvas(series, columns, height, low, high)
     two = _canvas(other, columns, height, low, high) if other is not None else None
     zero = _row(0.0, height * 4, low, high) // 4 if low < 0 < high else None

@@ -47,8 +47,9 @@ def joined(items: Sequence[Line], separator: str, room: int) -> Line:
         needed = (len(separator) if out else 0) + length(item)
         if length(out) + needed + spare > room and out:
             return [*out, ("faint", f"{separator}… {len(items) - k} more")]
-        if length(out) + needed > room:
-            return clipped(item, room)
+        if not out and needed + spare > room:
+            more = f"{separator}… {left} more" if left else ""
+            return [*clipped(item, max(1, room - len(more))), ("faint", more)]
         out += [("faint", separator), *item] if out else item
     return out
 

@@ -60,7 +60,8 @@ class _Telling:
                 self.cut = True
                 return
             if isinstance(node, Leaf):
-                self._say(depth, self._leaf(source, node))
+                if node.kind != "constant":  # the operation's own text has it
+                    self._say(depth, self._leaf(source, node))
             else:
                 self._step(source, node, depth)
 
@@ -69,11 +70,11 @@ class _Telling:
             array = self.session.names.arrays[leaf.array]
             assert isinstance(leaf.value, int)
             return [("", f"{leaf.what} = {element_text(array.element, leaf.value)}, as given")]
-        if leaf.kind == "constant":
-            return [("", f"{value_text(leaf.value or 0)}, in the code")]
+        if leaf.kind == "undefined":
+            return [("wrong", f"undefined: {leaf.what}")]
         value = "" if source.value is None else f"{source.name} = {value_text(source.value)}, "
-        says = {"undefined": f"undefined: {leaf.what}", "supposed": f"supposed: {leaf.what}"}
-        return [("wrong" if leaf.kind == "undefined" else "", value + says.get(leaf.kind, leaf.what))]
+        says = {"supposed": f"supposed: {leaf.what}"}
+        return [("", value + says.get(leaf.kind, leaf.what))]
 
     def _step(self, source: Source, step: Step, depth: int) -> None:
         head = self._head(source, step)
@@ -89,9 +90,7 @@ class _Telling:
         self._operands(step, depth + 1, chain[0] if chain else None)
         if len(chain) > 1:
             last = chain[-1]
-            text = (
-                f"… {len(chain) - 1} more {self._name(step)} to {source.name}, cycles {last.cycle} to {chain[0].cycle}"
-            )
+            text = f"… {len(chain)} more {self._name(step)} to {source.name}, cycles {last.cycle} to {chain[0].cycle}"
             self._say(depth + 1, [("", text), ("faint", self._passes(last, chain[0]))])
             self.told |= {id(one) for one in chain}
             self._operands(last, depth + 2, None)
@@ -312,7 +311,11 @@ def stall(session: Session, found: Stall, width: int) -> list[Line]:
         name = layout.register(flight.register)
         text = layout.text(site.bundle, site.instruction)
         line = layout.line(site.bundle, site.instruction)
-        says = f"    {name}, " + (f"a {role}, " if found.cause == "hold" else "") + f"is sent by {text}"
+        says = (
+            f"    {name}, "
+            + (f"{'an' if role == 'operand' else 'a'} {role}, " if found.cause == "hold" else "")
+            + f"is sent by {text}"
+        )
         more = f", lands in beat {flight.lands}{f' (line {line})' if line else ''}"
         lines.append(clipped([("", says), ("faint", more)], width))
     for slot, beat in found.units:

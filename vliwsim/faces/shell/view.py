@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from collections.abc import Iterable
 
 from vliwsim.description.operations import Role
@@ -137,12 +138,14 @@ def _out(session: Session, moment: Moment) -> list[Line]:
 # ----------------------------------------------------------------------------------------------------------- in full
 
 
-def here(session: Session) -> list[Line]:
+def here(session: Session, width: int = 80) -> list[Line]:
     """The bundle with its operand values, what it sends, what it stores."""
     moment = session.moment()
     lines: list[Line] = [[("", f"  {place_text(session)} · beat {moment.beat}")]]
     if moment.hazard:
-        lines += [[("wrong" if k == 0 else "", f"  {row}")] for k, row in enumerate(_hazard_rows(session, moment))]
+        lines += [
+            [("wrong" if k == 0 else "", f"  {row}")] for k, row in enumerate(_hazard_rows(session, moment, width))
+        ]
     elif moment.cause or not moment.parts:
         lines.append([("", "  "), *_issues(session, moment)[0]])
     if moment.cause not in (None, "hold", "fresh", "interrupt") or not moment.parts:
@@ -152,9 +155,12 @@ def here(session: Session) -> list[Line]:
     return lines
 
 
-def _hazard_rows(session: Session, moment: Moment) -> list[str]:
+def _hazard_rows(session: Session, moment: Moment, width: int) -> list[str]:
     assert moment.hazard is not None
-    return str(session.hazard_problem(moment.hazard)).splitlines()
+    rows: list[str] = []
+    for row in str(session.hazard_problem(moment.hazard)).splitlines():
+        rows += textwrap.wrap(row, max(30, width - 2), subsequent_indent=" " * 11) if row.startswith("  ") else [row]
+    return rows
 
 
 def _operation_in_full(session: Session, moment: Moment, k: int, part: Part) -> list[Line]:
@@ -204,6 +210,7 @@ def _named_values(session: Session, moment: Moment, part: Part) -> list[Line]:
         for operand, place in zip(part.operation.operands, part.instruction.places, strict=True)
         if isinstance(place, Register) and place.half is not None and operand.role is not Role.RESULT
     }
+    newer = {f.register: f.lands - moment.beat for f in reversed(moment.out)}
     bases = {p.base for p in part.instruction.places if isinstance(p, Address)}
     for read in part.effects.reads:
         value = moment.registers[read.register]
@@ -214,6 +221,8 @@ def _named_values(session: Session, moment: Moment, part: Part) -> list[Line]:
             text += f", {'hi' if half else 'lo'} {short - 0x10000 if short >> 15 else short}"
         if read.register in bases:
             text += location(session, value)
+        if read.register in newer:
+            text += f" (a newer one lands in {newer[read.register]})"
         found.setdefault(read.register, [(tint(read.register, value), text)])
     return list(found.values())
 
@@ -277,8 +286,8 @@ def flight(session: Session, register: int | None = None, width: int = 80) -> li
         row: Line = [
             ("faint", f"  {'' if head == before else head:<12}"),
             (tint(f.register, f.value), f"{name} = {value_text(f.value)}"),
-            ("", f"  {text}"),
             ("faint", f"  {sent}{f', line {line}' if line else ''}"),
+            ("", f"  {text}"),
         ]
         lines.append(clipped(row, width))
         before = head
