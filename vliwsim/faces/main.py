@@ -24,6 +24,7 @@ COMMANDS = {
     "compare": ("vliwsim.faces.compare_command", "Set kernels of one interface side by side."),
     "regress": ("vliwsim.faces.regress_command", "Judge all kernels below some paths."),
     "golden": ("vliwsim.faces.golden_command", "Record what a kernel gives, to hold it against that later."),
+    "debug": ("vliwsim.faces.debug_command", "Go to any cycle of a run, forwards and backwards, and see why."),
     "assemble": ("vliwsim.faces.images", "Assemble a kernel into an image."),
     "disassemble": ("vliwsim.faces.images", "Turn an image back into a source."),
     "layout": ("vliwsim.faces.catalogue", "Draw the bit fields of a core's operation words."),
