@@ -57,6 +57,7 @@ NOT_SIMULATED = (
 @click.option("--anyway", is_flag=True, help="Simulate a kernel even if `vliwsim check` shows it illegal.")
 @click.option("--trace", is_flag=True, help="Print a line a beat: what issued, what landed.")
 @click.option("--notes", is_flag=True, help="Show every note, not only the first of each kind.")
+@click.option("--debug", is_flag=True, help="Open the shell where the run failed, if it fails; implies --anyway.")
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object instead of the report.")
 def run(kernel: str, as_json: bool, **options: Any) -> int:
     """Run KERNEL, compare its outputs with reference.py beside it, and account for every cycle.
@@ -100,6 +101,8 @@ class _Job:
             raise OptionError(
                 problem("bad-option", "--case all with --save or --trace", "one case with --save or --trace")
             )
+        if options["debug"] and (self.as_json or options["cases"] or options["case"] == "all"):
+            raise OptionError(problem("bad-option", "--debug with --json, --cases or --case all", "one run to debug"))
         given = given_values(options["give"])
         kernel = load(self.path, options["core"], options["changes"])
         from vliwsim.kernel.interface import interface_of
@@ -112,7 +115,7 @@ class _Job:
         reference = None if options["no_reference"] else load_reference(kernel)
         if options["cases"]:
             return self._list(kernel, reference)
-        if not options["anyway"]:
+        if not options["anyway"] and not options["debug"]:
             refused = self._refused(kernel)
             if refused is not None:
                 return refused
@@ -126,6 +129,10 @@ class _Job:
             save_outputs(targets, dict(run.outputs), options["replace"])
         elif targets:
             self._say(lambda: "  nothing saved: the run did not finish")
+        if options["debug"] and not run.ok:
+            from vliwsim.faces.debug_command import open_at_failure
+
+            open_at_failure(run, options["interrupt_at"])
         return run.as_json()
 
     def _refused(self, kernel: Kernel) -> object | None:
