@@ -275,7 +275,7 @@ def test_bad_groups() -> None:
 def test_complaints_are_capped_and_counted() -> None:
     found = complaints([1 | 900 << 4] * 30)
     assert len(found) == 21
-    assert found[-1] == "more: 10 more problems in this image"
+    assert found[-1] == "more-problems: 10 more problems in this image"
 
 
 def test_alien_images_are_refused() -> None:

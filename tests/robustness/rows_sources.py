@@ -139,7 +139,7 @@ RUNNING = [
     ran("off the end", "ran-off-the-end", source("start:\n@0 jump last\n@4 halt\nlast:\n@0 idle\n")),
     ran("halt with a branch on its way", "branch-past-halt", source("start:\n@0 jump start\n@1 halt\n")),
     ran("never halts", "cycle-limit", source("start:\n@0 jump start\n@4 halt\n"), "--limit 500", remedy="--limit"),
-    ran("returns what nobody wrote", "undefined-output", code("@0 idle\n", RETURNS)),
+    ran("returns what nobody wrote", "undefined-used", code("@0 idle\n", RETURNS)),
     ran("over its budget", "", head("budget 3\n"), says="88 cycles over budget"),
     ran("a budget that is no number", "budget-value", head("budget 3 > 2\n"), status=2),
     ran("an alignment of three", "align-value", head("given x : i32[4] at g10 align 3\n"), GIVE, 2),

@@ -15,8 +15,8 @@ from vliwsim.program.source.tree import Call, Idle, Label, Let, Name, Node, Repe
 
 MOST_BEATS = 1 << 24
 """The latest stamp of a section."""
-MOST_STEPS = 1 << 18
-"""Lines and passes of a source after unrolling."""
+MOST_STEPS = 1 << 16
+"""Lines and passes of a source after unrolling: some seconds of work."""
 
 _NAMES = re.compile(r"[A-Za-z_]\w*")
 
@@ -152,15 +152,17 @@ class _Maker:
             self.complaints.add("name-taken", node.variable.where, found, "a variable name that is free")
             name = None
         inside = variables | {name} if name else variables
-        for index in range(count):
+        # repeats inside are not counted here: they do it themselves
+        too_much = self.steps + count * (1 + len(node.body)) > MOST_STEPS
+        for index in range(1 if too_much else count):
             self.steps += 1
-            if self.steps > MOST_STEPS:
-                raise TooMuch(node.times.where)
             if name:
                 environment[name] = index
             self.walk(node.body, inside)
         if name:
             environment.pop(name, None)
+        if too_much:  # one pass has shown what else is wrong
+            raise TooMuch(node.times.where)
         if not count:
             self._look(node, inside, name)
 

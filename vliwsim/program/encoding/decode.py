@@ -89,7 +89,7 @@ class _Decoder:
                 self.problems.append(problem("label-nowhere", found, "the address of a bundle's first word"))
         if self.problems:
             more = len(self.problems) - MOST_PROBLEMS
-            rest = [problem("more", f"{more} more problems in this image")] if more > 0 else []
+            rest = [problem("more-problems", f"{more} more problems in this image")] if more > 0 else []
             raise ImageError([*self.problems[:MOST_PROBLEMS], *rest])
         return Program(self.core, bundles, self.image.code_bytes, dict(self.image.labels))
 
