@@ -19,6 +19,7 @@ from vliwsim.machine.hazards import HazardMet
 from vliwsim.machine.memory import DEFINED, UNDEFINED, Region
 from vliwsim.machine.state import State
 from vliwsim.machine.stepper import Machine
+from vliwsim.native.engine import Native
 from vliwsim.program.code import Address, Bundle, Guard, Immediate, Instruction, Mode, Program, Register
 
 from .plain import (
@@ -118,8 +119,12 @@ def run(
     log: bool = False,
     careful: bool = False,
     snapshots: bool = False,
+    native: bool = False,
 ) -> Outcome:
-    """As the model's ``run``. ``careful``: by definition only. ``snapshots``: save, spoil and restore every cycle."""
+    """As the model's ``run``. ``careful``: by definition only. ``snapshots``: save, spoil and restore every cycle.
+
+    ``native``: with the fast engine, which translates from the first cycle on and again wherever it is left alone.
+    """
     real = core_of(core)
     machine = Machine(program_of(real, program), careful=careful)
     regions = tuple(regions)
@@ -130,6 +135,8 @@ def run(
     try:
         if log or snapshots:
             by_cycles(machine, state, limit, passed, snapshots)
+        elif native:
+            Native(machine, patience=3, effort=0).advance(state, limit)
         else:
             machine.advance(state, limit)
         if state.halt_beat is not None:  # the model's limit does not cut a drain short

@@ -166,9 +166,13 @@ class Machine:
             if state.halt_beat is not None and state.in_flight == state.beat:
                 self._drain(state, FOREVER)  # what lands first behind halt costs no cycle
         except HazardMet as met:
-            self._thaw(state, FOREVER)
-            return self.outcome(state, "hazard", met.hazard)
+            return self.stopped_by(state, met.hazard)
         return self.outcome(state, "halt" if state.finished else "limit")
+
+    def stopped_by(self, state: State, hazard: Hazard) -> Outcome:
+        """The account of a run that met ``hazard``; freeze cycles due by then have passed."""
+        self._thaw(state, FOREVER)
+        return self.outcome(state, "hazard", hazard)
 
     def outcome(self, state: State, reason: str, hazard: Hazard | None = None) -> Outcome:
         """The account of ``state`` as it is."""
@@ -178,6 +182,7 @@ class Machine:
             dict(state.stalls),
             state.drain,
             tuple(state.counts),
+            tuple(state.begun),
             hazard,
             dict(state.notes),
             tuple(state.registers(self.core)),

@@ -170,6 +170,7 @@ class Beats(Text):
             self.put(f"br label %leave{self.k}")
             return
         self.land()
+        self.refuel()
         if self.core.interlocked and self.wait():
             return
         guards = self.guards()
@@ -191,6 +192,26 @@ class Beats(Text):
                 self.doubt(self.compare("ugt", "i32", total, str(parameters.write_ports)))
         for flight in sorted(due, key=lambda f: self.walker.sticky[f.number]):
             self.bring(flight)
+        self.settle()
+        self.keep_landed()
+
+    def keep_landed(self) -> None:
+        """What has landed becomes the registers' values; from here on the beat, given back, lands it again.
+
+        So that the old values need not be kept, what lands again is what the register holds now.
+        """
+        for flight in self.step.due:
+            register = self.walker.register(flight)
+            if register in self.zero:
+                continue
+            value = self.now[register]
+            kind, none = ("i8", "0") if self.following else ("i1", "false")
+            self.put(f"store i32 {value.bits}, ptr %r{register}")
+            self.put(f"store i32 {value.bits}, ptr {self.value_slot(flight.number, 0)}")
+            if self.masked(register):
+                self.put(f"store {kind} {value.mask or none}, ptr %u{register}")
+            if self.following:
+                self.put(f"store i8 {value.mask or '0'}, ptr {self.mask_slot(flight.number, 0)}")
 
     def total(self, tests: list[str]) -> str:
         """How many of the truths hold."""
@@ -318,7 +339,6 @@ class Beats(Text):
         """A beat passes without a bundle."""
         kept = dict(self.now), dict(self.slots)
         self.count_edge(kind)
-        self.keep_registers()
         self.age([])
         for turn in self.step.context.turns:
             if not turn.sure:
@@ -418,7 +438,6 @@ class Beats(Text):
             if self.certain_halt:
                 self.put("unreachable")
                 return
-        self.keep_registers()
         self.age([(flight, results[flight.number], bits[flight.number]) for _, flight in self.step.new])
         self.move_turns()
         self.redirect(ways)
@@ -540,7 +559,7 @@ class Beats(Text):
         mask, owned = "0", "false"
         for byte in range(size):
             one = self.let(f"and {kind} {self.let(f'lshr {kind} {status}, {8 * byte}')}, 3")
-            missing = self.compare("ne", kind, one, "3" if size > 1 else "3")
+            missing = self.compare("ne", kind, one, "3")
             bit = self.select(missing, "i8", number(1 << byte, 8), "0")
             mask = self.let(f"or i8 {mask}, {bit}")
             owned = self.let(f"or i1 {owned}, {self.compare('eq', kind, one, '2')}")
@@ -656,9 +675,7 @@ class Beats(Text):
                 apart = self.let(f"and i32 {self.let(f'xor i32 {a}, {b}')}, {banks - 1}")
                 same = self.compare("eq", "i32", apart, "0")
             else:
-                same = self.compare(
-                    "eq", "i32", self.let(f"urem i32 {a}, {banks}"), self.let(f"urem i32 {b}, {banks}")
-                )
+                same = self.compare("eq", "i32", self.let(f"urem i32 {a}, {banks}"), self.let(f"urem i32 {b}, {banks}"))
             loads = not one.store and not other.store
             differ = self.compare("ne", "i32", a, b) if memory.broadcast and loads else None
             conflict = self.both(same, differ, one.on, other.on)
@@ -768,17 +785,6 @@ class Beats(Text):
         total = self.let(f"load i64, ptr %stall.{cause}")
         self.put(f"store i64 {self.let(f'add i64 {total}, {cycles}')}, ptr %stall.{cause}")
 
-    def keep_registers(self) -> None:
-        """What has landed becomes the registers' values."""
-        for register in dict.fromkeys(self.walker.register(f) for f in self.step.due):
-            if register in self.zero:
-                continue
-            value = self.now[register]
-            self.put(f"store i32 {value.bits}, ptr %r{register}")
-            if self.masked(register):
-                kind, none = ("i8", "0") if self.following else ("i1", "false")
-                self.put(f"store {kind} {value.mask or none}, ptr %u{register}")
-
     def age(self, new: list[tuple[Flight, Held, str | None]]) -> None:
         """Results in flight come a beat nearer, and new ones take off."""
         flying = [(f, *self.flown(f)) for f in self.step.staying] + new
@@ -838,6 +844,9 @@ class Beats(Text):
         self.now, self.slots = kept
 
     # ------------------------------------------------------------------------------------- given by the whole function
+
+    def refuel(self) -> None:
+        raise NotImplementedError
 
     def count_edge(self, kind: str) -> None:
         raise NotImplementedError

@@ -9,7 +9,7 @@ from vliwsim.native.text import Text
 
 
 def charge_function(memory: Memory, accesses: Sequence[tuple[int, bool]], name: str) -> str:
-    """The text of ``@name(i32 address, i1 on, …) -> {i64 bank, i64 wait}``; ``accesses``: (size in bytes, is a store)."""
+    """The text of ``@name(i32 address, i1 on, …) -> {i64 bank, i64 wait}``; ``accesses``: (bytes, is it a store)."""
     return _Charge(memory, accesses).function(name)
 
 
@@ -29,7 +29,7 @@ class _Charge(Text):
         self.put("%b = phi i64 [0, %entry], [%b.next, %bank]")
         self.put("%most = phi i64 [1, %entry], [%most.next, %bank]")
         self.put("%slow = phi i64 [1, %entry], [%slow.next, %bank]")
-        touched, number, cycles = self.bank(words, waits)
+        number, cycles = self.bank(words, waits)
         self.put(f"%most.next = call i64 @llvm.smax.i64(i64 %most, i64 {number})")
         self.put(f"%slow.next = call i64 @llvm.smax.i64(i64 %slow, i64 {cycles})")
         self.put("%b.next = add i64 %b, 1")
@@ -66,8 +66,8 @@ class _Charge(Text):
         last = self.let(f"add i64 {address}, {self.accesses[k][0] - 1}")
         return self.let(f"udiv i64 {address}, {width}"), self.let(f"udiv i64 {last}, {width}")
 
-    def bank(self, words: Sequence[tuple[str, str]], waits: Sequence[str]) -> tuple[list[str], str, str]:
-        """Whether each access touches bank %b, and the accesses and cycles the bank is charged."""
+    def bank(self, words: Sequence[tuple[str, str]], waits: Sequence[str]) -> tuple[str, str]:
+        """The accesses and the cycles that bank %b is charged."""
         banks = self.memory.banks
         touched: list[str] = []
         own: list[tuple[str, str]] = []
@@ -103,4 +103,4 @@ class _Charge(Text):
             number = self.let(f"add i64 {number}, {self.let(f'zext i1 {alone} to i64')}")
             cost = self.select(alone, "i64", self.let(f"add i64 {wait}, 1"), "0")
             cycles = self.let(f"add i64 {cycles}, {cost}")
-        return touched, number, cycles
+        return number, cycles

@@ -19,7 +19,7 @@ from vliwsim.machine.prepared import Preparation, Prepared
 
 @attrs.frozen(order=True)
 class Flight:
-    """A result that lands in ``beats`` beats (0: in this one), write number ``number``; for sure, or if its bit is set."""
+    """A result, write number ``number``, that lands in ``beats`` beats (0: in this one): for sure, or if its bit is set."""
 
     beats: int
     number: int
@@ -60,7 +60,7 @@ class Step:
     ``holds``: flights that, on, make an interlocked bundle wait; ``held`` if something does for sure. ``crowds``: ports
     that may be too few: (ports, own (part, write number) pairs, flights beside). ``twice``: pairs of parts that may not
     both be on. ``new``: results that take off. ``halts``: parts that halt. ``landing``: branches that may redirect now.
-    ``waiting``, ``refreshed``: the contexts after a hold and after a wait for a fresh operand, None where there is none.
+    ``waiting``, ``refreshed``: the contexts after a hold and a wait for a fresh operand, None where there is none.
     ``turned``: after each of ``landing``, None if it goes nowhere. ``fallen``: without a redirect, None behind the last
     bundle or where there always is one.
     """
@@ -133,7 +133,9 @@ class Contexts:
         """Why an interlocked bundle may wait."""
         parts, context = step.prepared.parts, step.context
         guards = {p.instruction.guard.register for p in parts if p.instruction.guard}
-        named = {access.register for p in parts for access in (*p.effects.reads, *p.effects.writes)}
+        named = {r.register for p in parts for r in p.effects.reads} | {
+            w.register for p in parts for w in p.effects.writes
+        }
         busy = dict(context.busy)
         guard_holds = tuple(f for f in step.staying if self.register(f) in guards)
         holds = tuple(f for f in step.staying if self.register(f) in named)

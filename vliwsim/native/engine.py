@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 from vliwsim.description.values import Undefined
 from vliwsim.machine.hazards import HazardMet
 from vliwsim.machine.outcome import Outcome
 from vliwsim.machine.state import State
 from vliwsim.machine.stepper import FOREVER, Machine
-from vliwsim.native import exchange
 from vliwsim.native.compiler import Code, compile_text
 from vliwsim.native.contexts import Context, Contexts, Flight, Turn
 from vliwsim.native.loaded import Loaded
@@ -17,15 +18,23 @@ from vliwsim.native.translate import Translation
 MOST_REGIONS = 8
 """Translations of one program; beyond that the stepper goes on alone where none fits."""
 
+SLICE = 1 << 24
+"""Cycles between two looks at whether to go on: a fraction of a second."""
+
 PATIENCE = 4096
 """Cycles the stepper goes on, where no context fits, before a translation from there is made."""
 
 
 class Native:
-    """One program on its core, run fast. ``regions``: what has been translated."""
+    """One program on its core, run fast.
 
-    def __init__(self, machine: Machine) -> None:
+    ``regions``: what has been translated. ``patience``: cycles the stepper goes on, where no context fits, before a
+    translation from there is made. ``effort``: LLVM's optimisation level.
+    """
+
+    def __init__(self, machine: Machine, *, patience: int = PATIENCE, effort: int = 2) -> None:
         self.machine = machine
+        self.patience, self.effort = patience, effort
         self.walker = Contexts(machine.ready)
         self.regions: list[Loaded] = []
 
@@ -41,12 +50,12 @@ class Native:
             if isinstance(state.operands[register], Undefined):
                 undefined |= 1 << register
         translation = Translation(Region(self.walker, seed, undefined))
-        made = Loaded(self.machine, translation, Code(compile_text(translation.text("run"))))
+        made = Loaded(self.machine, translation, Code(compile_text(translation.text("run"), self.effort)))
         self.regions.append(made)
         return made
 
     def context_of(self, state: State) -> Context | None:
-        """The context a state is in; None within a freeze, a service, behind ``halt`` or with undefined data in flight."""
+        """The context of a state; None in a freeze, a service, behind ``halt`` or with undefined data in flight."""
         if state.frozen or state.service or state.halt_beat is not None:
             return None
         flights = []
@@ -59,9 +68,7 @@ class Native:
         if turns is None:
             return None
         busy = tuple((slot, until - state.beat) for slot, until in enumerate(state.busy_until) if until > state.beat)
-        return Context(
-            state.at, state.within, state.waited_fresh, tuple(sorted(flights)), tuple(sorted(turns)), busy
-        )
+        return Context(state.at, state.within, state.waited_fresh, tuple(sorted(flights)), tuple(sorted(turns)), busy)
 
     def _turns_of(self, state: State) -> list[Turn] | None:
         """The branches in flight, each from some bundle that could have sent it; None where none is found."""
@@ -84,7 +91,7 @@ class Native:
                 continue
             machine.advance(state, min(until, state.cycle + 1))
             alone += 1
-            if alone > PATIENCE and self.translate(state) is None and len(self.regions) >= MOST_REGIONS:
+            if alone > self.patience and self.translate(state) is None and len(self.regions) >= MOST_REGIONS:
                 machine.advance(state, min(until, state.cycle + (1 << 16)))
 
     def leap(self, state: State, until: int) -> bool:
@@ -103,17 +110,24 @@ class Native:
             return state.cycle > before
         return False
 
-    def run(self, state: State, *, limit: int | None = None, interrupt_at: int | None = None) -> Outcome:
+    def run(
+        self,
+        state: State,
+        *,
+        limit: int | None = None,
+        interrupt_at: int | None = None,
+        progress: Callable[[int], None] | None = None,
+    ) -> Outcome:
         """As :meth:`vliwsim.machine.stepper.Machine.run`."""
         machine = self.machine
         if interrupt_at is not None:
             state.interrupt_at = interrupt_at
         end = FOREVER if limit is None else limit
         try:
-            self.advance(state, end)
-        except HazardMet:
-            pass
+            while not state.finished and state.cycle < end:
+                self.advance(state, min(end, state.cycle + SLICE))
+                if progress:
+                    progress(state.cycle)
+        except HazardMet as met:
+            return machine.stopped_by(state, met.hazard)
         return machine.run(state, limit=end)
-
-
-__all__ = ["Native", "exchange"]

@@ -39,4 +39,4 @@ def layout(registers: int, flights: int, turns: int, counts: int, notes: int) ->
     for size in (4 * registers, registers, 4 * flights, flights, flights, turns, 8 * counts, notes):
         starts.append(at)
         at += -(-size // 8) * 8
-    return Layout(*starts, at)
+    return Layout(*starts, at)  # type: ignore[call-arg]

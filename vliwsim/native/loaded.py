@@ -47,6 +47,7 @@ class Loaded:
         self.chain_of = np.array([translation.chain_counter[c] for c in translation.chain], np.int64)
         self.place = np.array(region.place, np.int64)
         self.bundle_of = np.array([step.context.at for step in region.steps], np.int64)
+        self.beginning = np.array([step.context.within == 0 for step in region.steps], np.int64)
         self.holding = np.array([step.held for step in region.steps], bool)
         self.edges = [(k, kind, number) for (k, kind), number in translation.edge_counter.items()]
 
@@ -179,7 +180,7 @@ class Loaded:
         """Counts, stalls and the three counters."""
         header, counts = self.header, self.counts
         times = counts[self.chain_of]
-        if reason == exchange.GIVEN_BACK:
+        if reason in (exchange.GIVEN_BACK, exchange.OUT_OF_FUEL):
             times[(self.chain_of == self.chain_of[k]) & (self.place >= self.place[k])] -= 1
         beats = int(times.sum())
         held = int(times[self.holding].sum())
@@ -192,10 +193,11 @@ class Loaded:
                 held += waited
             else:
                 fresh += waited
-        issued = np.bincount(self.bundle_of, weights=None, minlength=len(state.counts)) * 0
-        np.add.at(issued, self.bundle_of, times)
-        for bundle in np.flatnonzero(issued).tolist():
-            state.counts[bundle] += int(issued[bundle])
+        for totals, some in ((state.counts, times), (state.begun, times * self.beginning)):
+            issued = np.zeros(len(totals), np.int64)
+            np.add.at(issued, self.bundle_of, some)
+            for bundle in np.flatnonzero(issued).tolist():
+                totals[bundle] += int(issued[bundle])
         bank, wait, penalty, straddle, frozen = (int(header[n]) for n in range(exchange.BANK, exchange.FRESH + 1))
         stalls = state.stalls
         stalls["bank"] += bank

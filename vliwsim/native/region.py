@@ -1,4 +1,4 @@
-"""A region: the contexts of one translation, found breadth first from a seed, with what the translation needs of them."""
+"""A region: the contexts of one translation, breadth first from a seed, and what the translation needs of them."""
 
 from __future__ import annotations
 
@@ -33,9 +33,7 @@ class Region:
                 if context not in self.index and len(self.index) < cap:
                     self.index[context] = len(self.index)
                     ahead.append(context)
-        self.successors = [
-            [self.index[c] for c in step.successors if c in self.index] for step in self.steps
-        ]
+        self.successors = [[self.index[c] for c in step.successors if c in self.index] for step in self.steps]
         self.heads, self._order = self._search()
         self.entries = [0, *sorted(self.heads - {0})][:MOST_ENTRIES]
         self.may = self._may_be_undefined(undefined)

@@ -91,9 +91,7 @@ class Translation(Beats):
         calls = "\n".join(
             function(operation, halves, own, self.following) for (operation, halves), own in self.functions.items()
         )
-        charges = "\n".join(
-            charge_function(self.core.memory, accesses, own) for accesses, own in self.charges.items()
-        )
+        charges = "\n".join(charge_function(self.core.memory, accesses, own) for accesses, own in self.charges.items())
         head = f"define void @{name}({PARAMETERS}) nounwind {{\nstart:\n"
         return f"{calls}\n{charges}\n{head}" + "\n".join(lines) + "\n}\n"
 
@@ -151,14 +149,6 @@ class Translation(Beats):
     def context(self, k: int) -> None:
         """The blocks of context ``k``."""
         self.begin(k)
-        if k in self.region.heads:
-            fuel = self.let("load i64, ptr %fuel")
-            self.put(f"br i1 {self.compare('eq', 'i64', fuel, '0')}, label %dry{k}, label %fed{k}{self.unlikely}")
-            self.block(f"dry{k}")
-            self.put(f"store i64 {OUT_OF_FUEL}, ptr {self.header(REASON)}")
-            self.put(f"br label %give{k}")
-            self.block(f"fed{k}")
-            self.put(f"store i64 {self.let(f'sub i64 {fuel}, 1')}, ptr %fuel")
         if self.chain[k] == k:
             self.tally(self.chain_counter[k])
         self.beat()
@@ -167,8 +157,21 @@ class Translation(Beats):
             self.block(f"leave{k}")
             self.put(f"store i64 {GIVEN_BACK}, ptr {self.header(REASON)}")
             self.put(f"br label %give{k}")
-        if left or k in self.region.heads:
+        if left or (k in self.region.heads and not self.step.leave):
             self.give_back(k, self.step.context)
+
+    def refuel(self) -> None:
+        """The head of a loop costs fuel; without any it gives back."""
+        k = self.k
+        if k not in self.region.heads:
+            return
+        fuel = self.let("load i64, ptr %fuel")
+        self.put(f"br i1 {self.compare('eq', 'i64', fuel, '0')}, label %dry{k}, label %fed{k}{self.unlikely}")
+        self.block(f"dry{k}")
+        self.put(f"store i64 {OUT_OF_FUEL}, ptr {self.header(REASON)}")
+        self.put(f"br label %give{k}")
+        self.block(f"fed{k}")
+        self.put(f"store i64 {self.let(f'sub i64 {fuel}, 1')}, ptr %fuel")
 
     def give_back(self, k: int, context: Context) -> None:
         """The block that hands a context's flights and turns over."""
