@@ -8,14 +8,17 @@ from typing import Any
 
 import attrs
 
+KINDS = ("legal", "reference", "cases", "case", "golden", "budget", "interrupts")
+
 
 @attrs.frozen
 class Claim:
     """One claim about a kernel on a core.
 
-    ``kind``: legal, reference, cases, case, golden, budget, interrupts. ``name``: of the case, else the kind again.
+    ``kind``: one of :data:`KINDS`. ``name``: of the case, else the kind again.
     ``held``: None where it could not be judged. ``says``: one line. ``detail``: what is wrong, as several lines.
-    ``lines``: the source lines it leads to, nearest first. ``debug``: a command that goes to the place.
+    ``lines``: the source lines it leads to, nearest first. ``debug``: a command that goes to the place. ``cycles``: of
+    the run it is about, if it is about one.
     """
 
     kind: str
@@ -25,6 +28,7 @@ class Claim:
     detail: str = ""
     lines: tuple[int, ...] = ()
     debug: str = ""
+    cycles: int | None = None
 
     @property
     def title(self) -> str:
@@ -33,7 +37,9 @@ class Claim:
 
     def as_json(self) -> dict[str, object]:
         whole = attrs.asdict(self)
-        return {key: value for key, value in whole.items() if value not in ("", ())}
+        return {
+            key: value for key, value in whole.items() if value not in ("", ()) and (key, value) != ("cycles", None)
+        }
 
 
 @attrs.frozen
@@ -79,6 +85,12 @@ class Verdict:
             return self.source
         stem = PurePath(self.source).stem
         return f"{self.kernel}{'' if stem == self.kernel else f'/{stem}'} on {self.core}"
+
+    @property
+    def broken(self) -> list[Claim]:
+        """The claims that do not hold, by kind; of cases the shortest run first, which is easiest to follow."""
+        bad = [claim for claim in self.claims if claim.held is False]
+        return sorted(bad, key=lambda claim: (KINDS.index(claim.kind), claim.cycles or 0))
 
     def count(self, kind: str) -> int:
         return sum(claim.kind == kind for claim in self.claims)

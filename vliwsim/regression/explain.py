@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import re
+from collections.abc import Iterable, Mapping
 
 import attrs
 
 from vliwsim.kernel.compare import Difference
 from vliwsim.kernel.runner import KernelRun
+from vliwsim.problems import Problem
+from vliwsim.program.kernel import Kernel
 from vliwsim.regression.origin import (
     LONGEST,
     History,
@@ -15,6 +18,7 @@ from vliwsim.regression.origin import (
     debug_line,
     lost_cycles,
     origin_of_output,
+    unread,
 )
 
 
@@ -37,14 +41,35 @@ def text_of_difference(name: str, difference: Difference, whose: str = "expected
     return text
 
 
-def explained(run: KernelRun, whose: str = "expected") -> Explanation:
-    """Why a run is not right or not legal: problems, differences, and where the first wrong element came from."""
+def named_lines(problems: Iterable[Problem]) -> list[int]:
+    """Every source line that some problems stand at or speak of."""
+    lines: list[int] = []
+    for each in problems:
+        lines += [each.place.line] if each.place else []
+        lines += [int(number) for number in re.findall(r"\bline (\d+)\b", f"{each.found} {each.remedy}")]
+    return list(dict.fromkeys(lines))
+
+
+def unread_text(kernel: Kernel) -> tuple[str, list[int]]:
+    """What is written and never read, as a line of text, and the source lines; nothing where there is none."""
+    found = unread(kernel)
+    if not found:
+        return "", []
+    text = ", ".join(f"line {line.number} writes {line.does}" for line in found[:4])
+    return f"  perhaps  {text}, which nothing reads", [line.number for line in found[:4]]
+
+
+def explained(run: KernelRun, whose: str = "expected", traced: bool = True) -> Explanation:
+    """Why a run is not right or not legal: problems, differences, and where the first wrong element came from.
+
+    ``traced``: run it again in the open to find that; it takes as long as some ten runs.
+    """
     parts, lines = [], list[int]()
     wrong = [(name, d) for name, d in run.differences.items() if d]
     if wrong:
         parts.append("\n".join(f"  {text_of_difference(name, d, whose)}" for name, d in wrong))
     debug = debug_line(run.kernel, run.case)
-    history = History(run) if run.cycles <= LONGEST and (wrong or run.problems) else None
+    history = History(run) if traced and run.cycles <= LONGEST and (wrong or run.problems) else None
     if wrong and history:
         name, difference = wrong[0]
         origin = origin_of_output(history, name, difference.index)
@@ -55,13 +80,15 @@ def explained(run: KernelRun, whose: str = "expected") -> Explanation:
         debug_hint = "then: at end"
     for problem in run.problems:
         parts.append(str(problem))
-        if problem.place:
-            lines.append(problem.place.line)
+    lines += named_lines(run.problems)
     if history and run.reason == "hazard":
         behind = _behind_hazard(history, run)
         if behind:
             parts.append(f"  behind   {_chain(behind)}")
             lines += [line.number for line in behind]
+    unused, more = unread_text(run.kernel)
+    parts += [unused] if unused else []
+    lines += more
     parts.append(f"  look     {debug}   ({debug_hint})")
     return Explanation("\n".join(parts), tuple(dict.fromkeys(lines)), debug)
 
@@ -85,14 +112,17 @@ def _behind_hazard(history: History, run: KernelRun) -> tuple[Line, ...]:
 def over_budget(run: KernelRun, recorded: Mapping[str, int] | None = None) -> Explanation:
     """Where a run's cycles went, most expensive first; ``recorded``: cycles by section of a golden."""
     kernel, account = run.kernel, run.account
-    text = [f"  {account}" + (f"      (budget {account.budget:.10g})" if account.budget is not None else "")]
-    lines = list[int]()
+    text, lines = [f"  {account}"], list[int]()
+    if account.budget is not None and kernel.budget is not None and recorded is None:
+        text[0] += f"      (budget {account.budget:.10g}, line {kernel.budget.place.line})"
+        lines.append(kernel.budget.place.line)
     history = History(run) if run.cycles <= LONGEST else None
     for place in lost_cycles(history)[:4] if history else ():
         text.append(f"  stalls   {place}")
     if history:
         for bundle in sorted(history.frozen, key=lambda b: -sum(history.frozen[b].values()))[:4]:
             lines += [p.line for p in kernel.map.instruction_places[bundle]]
+            lines += [history.item_line(name).number for name in history.touched.get(bundle, ())]
     labels = {section.label: section.place.line for section in kernel.map.sections}
     for section in sorted(account.sections, key=lambda s: -s.cycles)[:4]:
         before = (recorded or {}).get(section.label)

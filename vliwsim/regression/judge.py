@@ -22,11 +22,13 @@ from vliwsim.kernel.sizes import formula_value
 from vliwsim.problems import InterfaceError, VliwsimError
 from vliwsim.program.kernel import Kernel
 from vliwsim.regression.claims import Change, Claim, Options, Verdict
-from vliwsim.regression.explain import explained, over_budget, text_of_difference
+from vliwsim.regression.explain import explained, named_lines, over_budget, text_of_difference
 from vliwsim.regression.legality import legality
 from vliwsim.regression.watched import time_limit, watched
 
 About = Callable[[str], None]
+TRACED = 3
+"""Cases that do not hold whose first wrong element is traced back."""
 
 
 def _silent(text: str) -> None:
@@ -79,6 +81,7 @@ class Judge:
         """Everything, judged."""
         began = time.perf_counter()
         claims = list(self.claims())
+        self._trace(claims)
         kernel = self.kernel if "kernel" in vars(self) else None
         golden = self._golden_or_none()
         return Verdict(
@@ -94,6 +97,14 @@ class Judge:
             self._measures(),
             round(time.perf_counter() - began, 3),
         )
+
+    def _trace(self, claims: list[Claim]) -> None:
+        """Find what made the first wrong element, in the shortest of the cases that do not hold."""
+        bad = [claim for claim in claims if claim.kind == "case" and claim.held is False and claim.cycles is not None]
+        for claim in sorted(bad, key=lambda claim: claim.cycles or 0)[:TRACED]:
+            self.about(f"tracing case {claim.name}")
+            case = next(case for case in self.cases if case.name == claim.name)
+            claims[claims.index(claim)] = self.case(case)
 
     def claims(self) -> Iterator[Claim]:
         """Every claim, judged one after the other."""
@@ -113,7 +124,7 @@ class Judge:
             found = "no inputs were found for which the kernel can run"
             yield Claim("cases", "cases", False, found, f"{found}\ntry cases() in reference.py")
         for case in cases:
-            yield self.case(case)
+            yield self.case(case, traced=False)
         yield from self.goldens()
         if self.kernel.budget is not None:
             yield self.budget()
@@ -150,16 +161,19 @@ class Judge:
             self._runs[case.name] = run
         return self._runs[case.name]
 
-    def case(self, case: Case) -> Claim:
-        """Right and legal on this case; how many cycles it takes is the budget's business."""
+    def case(self, case: Case, traced: bool = True) -> Claim:
+        """Right and legal on this case; how many cycles it takes is the budget's business.
+
+        ``traced``: where it does not hold, find what made the first wrong element.
+        """
         try:
             run = self.run(case)
         except VliwsimError as error:
             return Claim("case", case.name, False, *_said(error))
         if run.reason == "halt" and run.legal and run.matches is not False:
-            return Claim("case", case.name, True, f"{run.cycles} cycles")
-        found = explained(run)
-        return Claim("case", case.name, False, run.verdict[:-1], found.text, found.lines, found.debug)
+            return Claim("case", case.name, True, f"{run.cycles} cycles", cycles=run.cycles)
+        found = explained(run, traced=traced)
+        return Claim("case", case.name, False, run.verdict[:-1], found.text, found.lines, found.debug, run.cycles)
 
     def budget(self) -> Claim:
         """No case takes more cycles than the budget gives."""
@@ -223,7 +237,8 @@ class Judge:
             return Claim("golden", recorded.name, False, says, f"recorded with another interface or core:\n{text}")
         if run.reason != "halt" or not run.legal:
             found = explained(run)
-            return Claim("golden", recorded.name, False, run.verdict[:-1], found.text, found.lines, found.debug)
+            says, cycles = run.verdict[:-1], run.cycles
+            return Claim("golden", recorded.name, False, says, found.text, found.lines, found.debug, cycles)
         differences = self._golden_differences(run, recorded)
         if any(differences.values()):
             import attrs
@@ -232,7 +247,8 @@ class Judge:
             found = explained(attrs.evolve(run, differences=differences, expected=expected), "recorded")
             name, difference = next((n, d) for n, d in differences.items() if d)
             says = f"not as recorded: {text_of_difference(name, difference, 'recorded')}"
-            return Claim("golden", recorded.name, False, says, found.text, found.lines, found.debug)
+            cycles = run.cycles
+            return Claim("golden", recorded.name, False, says, found.text, found.lines, found.debug, cycles)
         return self._golden_cycles(run, recorded)
 
     def _golden_run(self, recorded: GoldenCase) -> KernelRun:
@@ -271,7 +287,7 @@ class Judge:
         found = over_budget(run, recorded.sections)
         since = f"{says} since {golden.date or 'it was recorded'}"
         text = f"{since}\n{found.text}\n  try      vliwsim golden … --replace, if that is meant"
-        return Claim("golden", recorded.name, False, says, text, found.lines, found.debug)
+        return Claim("golden", recorded.name, False, says, text, found.lines, found.debug, run.cycles)
 
     # ------------------------------------------------------------------------------------------------------ measures
 
@@ -312,7 +328,7 @@ def _said(error: VliwsimError) -> tuple[str, str, tuple[int, ...]]:
     """One line, the whole text, and the lines that an error names."""
     first = error.problems[0]
     more = f" (and {len(error.problems) - 1} more)" if len(error.problems) > 1 else ""
-    lines = tuple(dict.fromkeys(p.place.line for p in error.problems if p.place))
+    lines = tuple(named_lines(error.problems))
     return f"{first.name}: {first.found}{more}", str(error), lines
 
 

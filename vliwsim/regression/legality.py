@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from vliwsim.program.kernel import Kernel
 from vliwsim.regression.claims import Claim
+from vliwsim.regression.explain import named_lines, unread_text
 
 
 def legality(kernel: Kernel) -> Claim:
@@ -20,8 +21,9 @@ def legality(kernel: Kernel) -> Claim:
     if problems:
         first = problems[0]
         more = f" (and {len(problems) - 1} more)" if len(problems) > 1 else ""
-        lines = tuple(dict.fromkeys(p.place.line for p in problems if p.place))
-        text = "\n".join(str(p) for p in problems[:8])
+        unused, unread = unread_text(kernel)
+        text = "\n".join([*(str(p) for p in problems[:8]), *([unused] if unused else [])])
+        lines = tuple(dict.fromkeys([*named_lines(problems), *unread]))
         return Claim("legal", "legal", False, f"{first.name}: {first.found}{more}", text, lines)
     outcomes = [judgement.outcome for judgement in verdict.judgements.values()]
     counts = [(outcomes.count(outcome), outcome) for outcome in (PROVED, NEEDS_INPUT, UNDECIDED)]

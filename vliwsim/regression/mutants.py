@@ -33,7 +33,7 @@ class Mutant:
 
 
 def mutants(kernel: Kernel) -> Iterator[Mutant]:
-    """Every mutant of a kernel's source: stamps a beat earlier and later, other registers, then sections a beat longer."""
+    """Every mutant of a source: stamps a beat earlier and later, other registers, then sections a beat longer."""
     lines = kernel.text.splitlines()
     tree = parse(lines, Complaints(kernel.path, lines))
     for piece, kind in _pieces(tree.body):

@@ -3,28 +3,32 @@
 from __future__ import annotations
 
 import heapq
+import re
 import shlex
 from bisect import bisect_right
 from collections.abc import Iterable, Iterator
 
 import attrs
 
-from vliwsim.description.operations import Kind
+from vliwsim.description.operations import Kind, Role
 from vliwsim.kernel.diagnose import line_of, where
 from vliwsim.kernel.elements import ELEMENTS
 from vliwsim.kernel.interface import interface_of
 from vliwsim.kernel.runner import KernelRun
+from vliwsim.program.code import Instruction, Register
 from vliwsim.program.effects import effects
 from vliwsim.program.kernel import Kernel
 from vliwsim.regression.observe import Seen, observe
 
 LONGEST = 200_000
 """Cycles of a run that is traced back, at most."""
-MOST_LINES = 12
+MOST_LINES = 20
 """Lines named behind one wrong value."""
 
-DATA, ADDRESS, GUARD, CONTROL = 1, 3, 3, 6
+DATA, ADDRESS, GUARD, CONTROL = 2, 5, 5, 10
 """How far an operand, an address, a guard and the way through the program count as being from what they decide."""
+FIRST, WORD = 1, 3
+"""How far the first time an instruction was carried out is from a later one, and a definition from where it is used."""
 
 
 @attrs.frozen(order=True)
@@ -70,6 +74,15 @@ class History:
         self.cycles: dict[int, int] = {}
         self.branches: list[Deed] = []
         self.frozen: dict[int, dict[str, int]] = {}
+        self.touched: dict[int, dict[str, None]] = {}
+        """For every bundle that froze for memory, the arrays it was at."""
+        self.first: dict[tuple[int, int], Deed] = {}
+        self.last: dict[tuple[int, int], Deed] = {}
+        self.skipped: dict[int, Deed] = {}
+        """For every register, the last instruction that would have written it had its guard been on."""
+        self.skipped_stores: dict[tuple[int, int], Deed] = {}
+        self.definitions = _definitions(run.kernel.text)
+        self.source = run.kernel.text.splitlines()
         observe(run.setup, self._see, limit=min(LONGEST, run.cycles + 1))
 
     def _see(self, seen: Seen) -> None:
@@ -82,6 +95,9 @@ class History:
             return
         for cause, cycles in seen.issued.freezes:
             self._lost(seen.bundle, cause, cycles)
+            if cause in ("bank", "wait"):
+                names = [self._area(touch.address) for touch in seen.issued.touches]
+                self.touched.setdefault(seen.bundle, {}).update((name, None) for name in names if name)
         parts = seen.ready[seen.bundle].parts
         stores = iter(seen.issued.stores)
         for k, (part, on) in enumerate(zip(parts, seen.issued.on, strict=True)):
@@ -89,7 +105,13 @@ class History:
             if part.branches:
                 self.branches.append(deed)
             if not on:
+                for write in part.effects.writes:
+                    self.skipped[write.register] = deed
+                if part.operation.kind is Kind.STORE:
+                    self.skipped_stores[seen.bundle, k] = deed
                 continue
+            self.first.setdefault((seen.bundle, k), deed)
+            self.last[seen.bundle, k] = deed
             if part.operation.kind is Kind.STORE:
                 address, size, _ = next(stores)
                 for byte in range(address, address + size):
@@ -171,12 +193,18 @@ class History:
                 lines.setdefault((here.number, here.does), here)
                 continue
             place = line_of(self.kernel, here.bundle, here.instruction)
+            behinds = list(self._behind(here))
             if place:
                 key = place.line, self.says(here)
                 if key in lines and far > CONTROL:
                     continue  # a line met long ago leads nowhere new
+                if key not in lines:
+                    behinds += self._words(place.line)
                 lines.setdefault(key, Line(*key))
-            for step, behind in self._behind(here):
+            first = self.first.get((here.bundle, here.instruction))
+            if first is not None and first not in known:
+                behinds.append((FIRST, first))  # which reads what a loop began with
+            for step, behind in behinds:
                 order += 1
                 heapq.heappush(ahead, (far + step, order, behind))
         return tuple(lines.values())
@@ -201,6 +229,12 @@ class History:
         if instruction.guard:
             yield from self._register(instruction.guard.register, deed.beat, GUARD)
 
+    def _words(self, number: int) -> Iterator[tuple[int, Line]]:
+        """Definitions (``let``, ``name``) of the words in a source line."""
+        for word in dict.fromkeys(_WORDS.findall(self.source[number - 1].split("#")[0])):
+            if word in self.definitions:
+                yield WORD, Line(self.definitions[word], word)
+
     def _register(self, register: int, beat: int, far: int) -> Iterator[tuple[int, Deed | Line]]:
         landing = self.last_landing(register, beat)
         if landing is not None:
@@ -210,11 +244,26 @@ class History:
             if item.register == register and item.place.file == self.kernel.path and item.kind != "returns":
                 yield far, Line(item.place.line, item.name)
 
-    def _array(self, address: int) -> Iterator[tuple[int, Line]]:
+    def _area(self, address: int) -> str:
+        """The name of the array at an address, empty where there is none."""
         for area in self.run.setup.areas:
             if area.start <= address < area.start + area.bytes + area.over:
-                item = interface_of(self.kernel).items[area.name]
-                yield DATA, Line(item.place.line, item.name)
+                return area.name
+        return ""
+
+    def _array(self, address: int) -> Iterator[tuple[int, Line]]:
+        name = self._area(address)
+        if name:
+            yield DATA, self.item_line(name)
+
+    def item_line(self, name: str) -> Line:
+        """The header line of an interface item."""
+        return Line(interface_of(self.kernel).items[name].place.line, name)
+
+    def last_stores(self) -> list[Deed]:
+        """The last time each store was carried out."""
+        stores = {(deed.bundle, deed.instruction): deed for deed, _, _ in self.stores}
+        return [*self.skipped_stores.values(), *stores.values()]
 
 
 def origin_of_output(history: History, name: str, index: int | None) -> Origin:
@@ -227,24 +276,72 @@ def origin_of_output(history: History, name: str, index: int | None) -> Origin:
         deed = history.last_landing(item.register, end)
         shown = f"{name} ({kernel.core.register_names[item.register]})"
         verb = "written by"
+        skipped = history.skipped.get(item.register)
+        behind = [skipped] if skipped and (deed is None or skipped > deed) else []
     else:
         area, size = history.run.setup.area(name), ELEMENTS[item.type].bytes
         deed = history.last_store(area.start + size * (index or 0), size)
         shown, verb = f"{name}[{index}]", "stored by"
+        behind = history.last_stores() if deed is None else []
     if deed is None:
-        lines = (Line(item.place.line, name), *history.lines(()))
+        lines = (Line(item.place.line, name), *history.lines(behind))
         return Origin(f"nothing was written to {shown}", None, lines)
-    return Origin(f"{verb} {history.place(deed)}", history.cycles.get(deed.beat), history.lines([deed]))
+    return Origin(f"{verb} {history.place(deed)}", history.cycles.get(deed.beat), history.lines([deed, *behind]))
+
+
+_WORDS = re.compile(r"[A-Za-z_]\w*")
+_DEFINITION = re.compile(r"\s*(?:let|name)\s+([A-Za-z_]\w*)\s*=")
+
+
+def _definitions(text: str) -> dict[str, int]:
+    """The lines of ``let`` and ``name``, by what they define."""
+    found: dict[str, int] = {}
+    for number, line in enumerate(text.splitlines(), 1):
+        if match := _DEFINITION.match(line):
+            found.setdefault(match[1], number)
+    return found
+
+
+def unread(kernel: Kernel) -> list[Line]:
+    """Instructions all of whose results go to registers that nothing reads and that are no outputs."""
+    read = {item.register for item in kernel.items if item.kind in ("returns", "changes") and item.size is None}
+    written: list[tuple[int, int, list[int]]] = []
+    for bundle, content in enumerate(kernel.program.bundles):
+        for k, instruction in enumerate(content.instructions):
+            found = effects(kernel.core, instruction)
+            read |= {each.register for each in found.reads}
+            read |= {instruction.guard.register} if instruction.guard else set()
+            read |= _targets(instruction)
+            if found.writes:
+                written.append((bundle, k, [write.register for write in found.writes]))
+    lines: dict[Line, None] = {}
+    for bundle, k, registers in written:
+        place = line_of(kernel, bundle, k)
+        if place and not read & set(registers):
+            names = ", ".join(kernel.core.register_names[register] for register in registers)
+            lines[Line(place.line, names)] = None
+    return list(lines)
+
+
+def _targets(instruction: Instruction) -> set[int]:
+    """The register that an indirect branch goes to."""
+    return {
+        place.number
+        for operand, place in zip(instruction.operation.operands, instruction.places, strict=True)
+        if operand.role is Role.TARGET and isinstance(place, Register)
+    }
 
 
 def lost_cycles(history: History) -> list[str]:
-    """Where the run stalled, most first: ``112 bank: loop@0, lines 24, 25``."""
+    """Where the run stalled, most first: ``112 bank: loop@0, lines 24, 25, at x (line 5)``."""
     rows = []
     for bundle, causes in history.frozen.items():
         places = history.kernel.map.instruction_places[bundle]
         numbers = sorted({place.line for place in places})
         for cause, cycles in causes.items():
             lines = f"line{'s' if len(numbers) > 1 else ''} {', '.join(map(str, numbers))}" if numbers else "no line"
+            arrays = [history.item_line(name) for name in history.touched.get(bundle, ())]
+            lines += "".join(f", at {array.does} (line {array.number})" for array in arrays)
             rows.append((-cycles, bundle, f"{cycles} {cause}: {where(history.kernel, bundle)}, {lines}"))
     return [text for _, _, text in sorted(rows)]
 
