@@ -19,7 +19,7 @@ from vliwsim.machine.prepared import Preparation, Prepared
 
 @attrs.frozen(order=True)
 class Flight:
-    """A result, write number ``number``, that lands in ``beats`` beats (0: in this one): for sure, or if its bit is set."""
+    """A result, write number ``number``, landing in ``beats`` beats (0: this one): for sure, or if its bit is set."""
 
     beats: int
     number: int

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 
 from vliwsim.description.values import Undefined
 from vliwsim.machine.hazards import HazardMet
@@ -40,15 +40,21 @@ class Native:
 
     # -------------------------------------------------------------------------------------------------- translations
 
+    def begin(self, given: Collection[int]) -> Loaded:
+        """The translation from the program's first beat, with the registers of these numbers defined."""
+        zero = {self.machine.core.register_numbers[name] for name in self.machine.core.zero_registers}
+        registers = range(len(self.machine.core.register_names))
+        return self._translate(Context(0), sum(1 << r for r in registers if r not in given and r not in zero))
+
     def translate(self, state: State) -> Loaded | None:
         """A translation that begins at ``state``; None where there is none to begin with."""
         seed = self.context_of(state)
         if seed is None or len(self.regions) >= MOST_REGIONS:
             return None
-        undefined = 0
-        for register in range(len(self.machine.core.register_names)):
-            if isinstance(state.operands[register], Undefined):
-                undefined |= 1 << register
+        registers = range(len(self.machine.core.register_names))
+        return self._translate(seed, sum(1 << r for r in registers if isinstance(state.operands[r], Undefined)))
+
+    def _translate(self, seed: Context, undefined: int) -> Loaded:
         translation = Translation(Region(self.walker, seed, undefined))
         made = Loaded(self.machine, translation, Code(compile_text(translation.text("run"), self.effort)))
         self.regions.append(made)
@@ -72,9 +78,24 @@ class Native:
 
     def _turns_of(self, state: State) -> list[Turn] | None:
         """The branches in flight, each from some bundle that could have sent it; None where none is found."""
-        if not state.redirects and state.issue - state.last_branch >= self.machine.core.branch.latency:
-            return []
-        return None
+        sites = [
+            (index, k, part.target)
+            for index in range(len(self.machine.program.bundles))
+            for k, part in enumerate(self.machine.ready[index].parts)
+            if part.branches and part.target is not None
+        ]
+        turns = []
+        for index, target in state.redirects.items():
+            found = next(((b, k) for b, k, t in sites if t == target), None)
+            if found is None:
+                return None
+            turns.append(Turn(index - state.issue, *found, sure=True))
+        left = self.machine.core.branch.latency - (state.issue - state.last_branch)
+        if left > 0 and all(turn.bundles != left for turn in turns):
+            if not sites:
+                return None
+            turns.append(Turn(left, *sites[0][:2], sure=False))
+        return turns
 
     # ------------------------------------------------------------------------------------------------------- running
 
