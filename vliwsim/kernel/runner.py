@@ -177,6 +177,17 @@ class KernelRun:
         difference = self.differences[name]
         return {"matches": difference is None, "first_difference": difference and difference.as_json()}
 
+    def __eq__(self, other: object) -> bool:
+        """Equal to its outputs: ``run == {"y": array}``, or with one output ``run == array``."""
+        if isinstance(other, KernelRun):
+            return self is other
+        from vliwsim.kernel.equality import mismatches
+
+        return not mismatches(self, other)
+
+    __hash__ = object.__hash__
+    __array_ufunc__ = None  # so that NumPy leaves ``array == run`` to the run
+
     def __repr__(self) -> str:
         return f"<{self.verdict[:-1]}; {self.cycles} cycles>"
 
