@@ -123,7 +123,8 @@ class Native:
             match = loaded.match(state)
             if match is None:
                 continue
-            fuel = min((until - state.cycle) // loaded.region.span - 1, 1 << 60)
+            # it may first come to a head, and at last leave all heads behind
+            fuel = min((until - state.cycle - loaded.region.reach) // loaded.region.span - 1, 1 << 60)
             if fuel < (match[0] in loaded.region.heads):
                 return False
             before = state.cycle

@@ -18,7 +18,8 @@ class Region:
 
     ``undefined``: registers that may be undefined at the seed, as bits. ``entries``: contexts that may be entered, the
     seed and the heads of loops. ``heads``: contexts that loops come back to. ``may``: for every context the registers
-    that may be undefined, as bits. ``span``: an upper bound of the cycles from one head to the next, or to the end.
+    that may be undefined, as bits. ``span``: an upper bound of the cycles from one head to the next;
+    ``reach``: of those before the first head and behind the last.
     """
 
     def __init__(self, walker: Contexts, seed: Context, undefined: int, cap: int = MOST_CONTEXTS) -> None:
@@ -38,7 +39,7 @@ class Region:
         self.entries = [0, *sorted(self.heads - {0})][:MOST_ENTRIES]
         self.may = self._may_be_undefined(undefined)
         self.chain, self.place = self._chains()
-        self.span = self._span()
+        self.span, self.reach = self._spans()
 
     def __len__(self) -> int:
         return len(self.steps)
@@ -108,16 +109,21 @@ class Region:
         assert -1 not in chain
         return chain, place
 
-    def _span(self) -> int:
-        """The longest way between heads, in cycles."""
+    def _spans(self) -> tuple[int, int]:
+        """The longest way between heads, and of what comes before the first and behind the last, in cycles."""
         core = self.walker.core
         slowest = max((w.cycles for w in core.memory.waits), default=0)
-        each = core.branch.taken_penalty + core.words.straddle_freeze + 1
-        far = [0] * len(self)
+        turning = core.branch.taken_penalty + core.words.straddle_freeze
+        none = -1
+        to_head, out = [none] * len(self), [0] * len(self)
         for here in self._order:
             step = self.steps[here]
             accesses = sum(p.operation.access is not None for p in step.prepared.parts)
-            own = 1 + accesses * (1 + slowest) + each
-            far[here] = own + max((far[f] for f in self.successors[here] if f not in self.heads), default=0)
+            own = 1 + max(0, accesses - 1) + accesses * slowest
+            own += turning * bool(step.landing) + bool(step.prepared.fresh)
+            ahead = [0 if f in self.heads else to_head[f] for f in self.successors[here]]
+            if max(ahead, default=none) != none:
+                to_head[here] = own + max(ahead)
+            out[here] = own + max((out[f] for f in self.successors[here] if f not in self.heads), default=0)
         last = max((f.beats for step in self.steps for f in (*step.staying, *(f for _, f in step.new))), default=0)
-        return max(far) + last + 1
+        return max([1, *(to_head[h] for h in self.heads)]), max(0, *to_head, 0) + max(out) + last + 1
