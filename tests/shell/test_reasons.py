@@ -176,7 +176,7 @@ def test_the_planted_early_read_is_found_and_explained() -> None:
     assert "y[1] is 15, the reference says -21; 5 of 6 elements differ" in said
     assert "stored by sw product, [g13 then +4] at loop@6 pass 1, cycle 14 (line 22)" in said
     assert one.cycle == 14
-    assert "product = 15 (0xf) (a newer one lands in 1)" in said
+    assert "product = 15 (0xf) (newer in 1)" in said
     assert "product = 15, at start@4, cycle 4 (line 15): mul product, sample, 3" in said
     assert "product = -21" in said
 

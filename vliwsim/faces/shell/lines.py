@@ -77,10 +77,10 @@ def wrapped(text: str, room: int, indent: int = 2) -> list[Line]:
 
 
 def tinted(text: str, styles: dict[str, str]) -> Line:
-    """The text with every word that has a style in it."""
+    """An operation with every word behind its name that has a style in it."""
     out: Line = []
     at = 0
-    for match in _WORD.finditer(text):
+    for match in _WORD.finditer(text, text.find(" ") + 1 or len(text)):
         style = styles.get(match[0].partition(".")[0])
         if style:
             out += [("", text[at : match.start()]), (style, match[0])]

@@ -82,8 +82,8 @@ class Interrupt:
 
 
 def no_colour() -> bool:
-    """Whether the user wants none: NO_COLOR is set and not empty."""
-    return bool(os.environ.get("NO_COLOR"))
+    """Whether the user wants none, NO_COLOR being set and not empty, or the terminal has none."""
+    return bool(os.environ.get("NO_COLOR")) or os.environ.get("TERM", "dumb") == "dumb" and os.name != "nt"
 
 
 def write_plain(lines: list[Line]) -> None:

@@ -7,7 +7,7 @@ from collections.abc import Iterable
 
 from vliwsim.description.operations import Role
 from vliwsim.description.values import Value
-from vliwsim.faces.shell.lines import Line, clipped, joined, tint, tinted
+from vliwsim.faces.shell.lines import Line, clipped, joined, length, tint, tinted
 from vliwsim.machine.parts import Part
 from vliwsim.program.code import Address, Register
 from vliwsim.shell.forms import value_text, with_pattern
@@ -47,13 +47,45 @@ def prompt_text(session: Session) -> str:
 
 
 def three_lines(session: Session, width: int) -> list[Line]:
-    """What landed and from where, what issues now, what is still out."""
-    moment = session.moment()
-    rows = [("landed", _landed(session, moment)), ("issues", _issues(session, moment)), ("out", _out(session, moment))]
+    """What landed and from where, what issues now, what is still out; in short where there is too much for a line."""
+    moment, room = session.moment(), width - 11
+    landed, issues = _landed(session, moment), _issues(session, moment)
+    if length(joined(landed, " · ", 1 << 20)) > room and len(landed) > 1:
+        landed = _landed_in_short(session, moment)
+    if length(joined(issues, " · ", 1 << 20)) > room and len(issues) > 1:
+        issues = [_short(session, moment, k) for k in range(len(moment.parts))]
+    rows = [("landed", landed), ("issues", issues), ("out", _out(session, moment))]
     return [
-        [("faint", f"  {word:<7} "), *(joined(items, " · ", width - 11) or [("faint", "nothing")])]
-        for word, items in rows
+        [("faint", f"  {word:<7} "), *(joined(items, " · ", room) or [("faint", "nothing")])] for word, items in rows
     ]
+
+
+def _landed_in_short(session: Session, moment: Moment) -> list[Line]:
+    """Registers by the line that sent them: ``g2 h2 from line 19``."""
+    groups: dict[str, list[Flight]] = {}
+    for flight in moment.landings:
+        line = session.layout.line(flight.site.bundle, flight.site.instruction)
+        where = f"line {line}" if line else session.layout.where(flight.site.bundle)
+        groups.setdefault(where, []).append(flight)
+    lines = []
+    for where, flights in groups.items():
+        names: Line = []
+        for flight in flights:
+            name = session.layout.register(flight.register)
+            names += [("", " " if names else ""), (tint(flight.register, flight.value), name)]
+        lines.append([*names, ("faint", f" from {where}")])
+    return lines
+
+
+def _short(session: Session, moment: Moment, instruction: int) -> Line:
+    """An operation by its name and its first operand."""
+    line = operation_line(session, moment, instruction)
+    text = "".join(piece for _, piece in line)
+    cut = text.find(",")
+    if cut < 0:
+        return line
+    out = clipped(line, cut + 1)[:-1]
+    return [*out, ("faint", ")")] if text.startswith("(") else out
 
 
 def _landed(session: Session, moment: Moment) -> list[Line]:
@@ -151,7 +183,7 @@ def here(session: Session, width: int = 80) -> list[Line]:
     if moment.cause not in (None, "hold", "fresh", "interrupt") or not moment.parts:
         return lines
     for k, part in enumerate(moment.parts):
-        lines += _operation_in_full(session, moment, k, part)
+        lines += [clipped(line, width) for line in _operation_in_full(session, moment, k, part)]
     return lines
 
 
@@ -222,7 +254,7 @@ def _named_values(session: Session, moment: Moment, part: Part) -> list[Line]:
         if read.register in bases:
             text += location(session, value)
         if read.register in newer:
-            text += f" (a newer one lands in {newer[read.register]})"
+            text += f" (newer in {newer[read.register]})"
         found.setdefault(read.register, [(tint(read.register, value), text)])
     return list(found.values())
 
