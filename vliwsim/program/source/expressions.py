@@ -153,7 +153,7 @@ class _Builder:
 
     def build(self, node: ast.AST, depth: int = 0) -> Evaluate:
         if depth > DEEPEST:
-            raise Refused("too-deep", f"more than {DEEPEST} levels of nesting", at=node)
+            raise Refused("too-deep", f"more than {DEEPEST} levels of nesting", f"at most {DEEPEST}", at=node)
         method = getattr(self, "_" + type(node).__name__.lower(), None)
         if method is None:
             raise Refused("bad-expression", "something this language does not have", _ALLOWED, at=node)

@@ -1,0 +1,421 @@
+"""A fuzzer over every kind of file and over command lines.
+
+Each mutant is made from its seed alone, so that any of them can be made and run again:
+
+    python -m tests.robustness.fuzz 50000             mutants 0 to 49999, counts by outcome
+    python -m tests.robustness.fuzz 25000 --from 25000
+    python -m tests.robustness.fuzz --only 1234       one mutant, its files and what is said of it
+"""
+
+from __future__ import annotations
+
+import argparse
+import contextlib
+import functools
+import json
+import os
+import resource
+import shlex
+import shutil
+import signal
+import sys
+import tempfile
+import time
+import traceback
+import warnings
+from collections import Counter
+from collections.abc import Callable, Iterator
+from itertools import pairwise
+from pathlib import Path
+from random import Random
+
+import attrs
+import numpy as np
+
+from tests.kernel.sources import DOUBLE, SUM
+from tests.robustness import mutate
+from tests.robustness.rows_cores import SMALL
+from tests.robustness.rows_operations import CORE, PEAK
+from tests.robustness.workshop import Result, call, contents, npy, write
+from vliwsim.description.places import isa_folder, programs_folder
+from vliwsim.kernel.loading import assemble_source
+from vliwsim.problems import ImageError
+from vliwsim.program.encoding.image import read_image
+
+SECONDS = 5
+"""CPU time after which a mutant hangs."""
+CYCLES = 2000
+"""Cycles that the programs run at most."""
+LARGEST = 2_000_000
+"""Characters that one command may say."""
+TOML = mutate.GENTLE_TOML
+SEED = "vibration"
+OUTPUT = {"assemble": "out.image", "disassemble": "out.vliw", "run": "out.npy"}
+SILENT = ("more-problems", "out-of-memory")
+"""Problems that allow nothing."""
+
+
+@attrs.frozen
+class Mutant:
+    """``files`` by name, and the command that is run beside them."""
+
+    kind: str
+    files: dict[str, bytes]
+    arguments: list[str]
+
+
+class Defect(Exception):
+    """What is wrong with the program, not with its input."""
+
+
+class Hang(BaseException):
+    """Raised by the timer; no BaseException of the program's is caught."""
+
+
+@functools.cache
+def sources() -> list[str]:
+    """Every shipped kernel, and two small ones."""
+    return [path.read_text(encoding="utf-8") for path in sorted(programs_folder().rglob("*.vliw"))] + [SUM, DOUBLE]
+
+
+@functools.cache
+def cores() -> list[str]:
+    shipped = sorted((isa_folder() / "cores").glob("*.toml"))
+    delta = (
+        'base = "pair7"\nremove = ["slot.h.sum", "link.g.h"]\n[latency]\nload = 5\n[latency.operations]\nmul.half = 2\n'
+    )
+    return [path.read_text(encoding="utf-8") for path in shipped] + [SMALL, delta]
+
+
+@functools.cache
+def operations() -> list[str]:
+    """Every shipped operation as a text of its own."""
+    tables = [PEAK]
+    for path in sorted((isa_folder() / "operations").glob("*.toml")):
+        family: list[str] = []
+        for line in path.read_text(encoding="utf-8").splitlines(keepends=True):
+            if line.startswith("["):
+                family.append("")
+            if family:
+                family[-1] += line
+        tables += family
+    return tables
+
+
+@functools.cache
+def images() -> list[bytes]:
+    """The shipped kernels, assembled."""
+    paths = sorted(programs_folder().rglob("*.vliw"))
+    return [assemble_source(str(path)).image for path in paths]
+
+
+@functools.cache
+def arrays() -> list[bytes]:
+    plain = [np.arange(8).astype(kind) for kind in ("i1", "<i2", ">i2", "<i4", "<u4", "<i8", "<f4", "<f8", "?", "c8")]
+    shaped = [
+        np.zeros((2, 3)),
+        np.int16(3),
+        np.zeros(0),
+        np.array(["ab"]),
+        np.zeros(2, "i2,f4"),
+        np.array([np.nan, np.inf]),
+    ]
+    return [npy(array) for array in (*plain, *shaped)] + [npy([{}], allow_pickle=True)]
+
+
+@functools.cache
+def everything() -> list[str]:
+    """Texts of all kinds, whose tokens get into one another."""
+    return [*sources(), *cores(), *operations()]
+
+
+def _encoded(text: str, random: Random) -> bytes:
+    """The text as a file, now and then not in UTF-8."""
+    if random.random() < 0.03:
+        text = text.replace("\n", "\r\n")
+    if random.random() < 0.02:
+        return mutate.data(text.encode("utf-8", "surrogatepass"), random, images())
+    return text.encode("utf-16" if random.random() < 0.005 else "utf-8", "surrogatepass")
+
+
+def a_source(random: Random) -> Mutant:
+    text = mutate.text(random.choice(sources()), random, everything())
+    limit = ["--no-reference", "--limit", str(CYCLES)]
+    commands = [
+        ["run", "x.vliw", *limit],
+        ["run", "x.vliw", *limit, "--json"],
+        ["run", "x.vliw", *limit, "--give", f"n={random.choice((0, 1, 2, 4, 7, 8, 64))}", "--save", "total=out.npy"],
+        ["run", "x.vliw", "--no-reference", "--limit", "100", "--trace", "--notes"],
+        ["run", "x.vliw", *limit, "--interrupt-at", str(random.randrange(60))],
+        ["run", "x.vliw", "--no-reference", "--cases"],
+        ["run", "x.vliw", *limit, "--core", random.choice(("lone2", "lone4", "pair7", "ring16", "float3"))],
+        ["assemble", "x.vliw", "-o", "out.image"],
+        ["assemble", "x.vliw", "-o", "out.image"],
+    ]
+    return Mutant("source", {"x.vliw": _encoded(text, random)}, random.choice(commands))
+
+
+def a_core(random: Random) -> Mutant:
+    files = {
+        "x.toml": _encoded(
+            mutate.text(random.choice(cores()), random, [*cores(), random.choice(everything())], TOML), random
+        )
+    }
+    if random.random() < 0.2:
+        files["small.toml"] = _encoded(mutate.text(SMALL, random, cores(), TOML), random)
+        files["x.toml"] = b'base = "small.toml"\n' + (files["x.toml"] if random.random() < 0.3 else b"")
+    files["x.vliw"] = random.choice(sources()).encode()
+    commands = [
+        ["cores", "x.toml"],
+        ["cores", "x.toml", "--set", random.choice(SETTINGS)],
+        ["layout", "--core", "x.toml"],
+        ["ops", "--core", "x.toml"],
+        ["run", "x.vliw", "--core", "x.toml", "--no-reference", "--limit", str(CYCLES)],
+        ["assemble", "x.vliw", "--core", "x.toml", "-o", "out.image"],
+    ]
+    return Mutant("core", files, random.choice(commands))
+
+
+def a_table(random: Random) -> Mutant:
+    """A few operations, in a file that a core names."""
+    text = 'class = "arithmetic"\n' + "\n".join(random.sample(operations(), random.randint(1, 4)))
+    text = mutate.text(text, random, [*operations(), random.choice(everything())], TOML)
+    core = CORE if random.random() < 0.2 else CORE.replace('"integer", "memory", ', "")  # few names are taken there
+    files = {"mine.toml": _encoded(text, random), "core.toml": core.encode(), "x.vliw": SUM.encode()}
+    commands = [
+        ["ops", "--core", "core.toml"],
+        ["ops", random.choice(("peak.fade", "add", "mul.q15.rnd")), "--core", "core.toml"],
+        ["layout", "--core", "core.toml"],
+        ["assemble", "x.vliw", "--core", "core.toml"],
+    ]
+    return Mutant("operations", files, random.choice(commands))
+
+
+def an_image(random: Random) -> Mutant:
+    image = mutate.image(random.choice(images()), random, images())
+    options = [[], [], ["-o", "out.vliw"], ["--core", random.choice(("lone4", "pair7", "ring16"))]]
+    return Mutant("image", {"x.image": image}, ["disassemble", "x.image", *random.choice(options)])
+
+
+TABLE = """\
+kernel probe
+core pair7
+table t : {}[8] from "x.npy" at g1
+returns y : i32 in g2
+start:
+@0 lw g2, [g1]
+@9 halt
+"""
+
+
+def an_array(random: Random) -> Mutant:
+    array = mutate.array(random.choice(arrays()), random, arrays())
+    files = {"x.npy": array, "x.vliw": SUM.encode()}
+    if random.random() < 0.4:
+        files["x.vliw"] = TABLE.format(random.choice(("i8", "i16", "i32", "q15", "f32"))).encode()
+        return Mutant("table", files, ["run", "x.vliw", "--limit", str(CYCLES)])
+    if random.random() < 0.5:
+        files["x.vliw"] = SUM.replace("i16[n]", random.choice(("q15[n]", "f32[n]", "u8[n]", "i32[2 * n]"))).encode()
+    return Mutant("array", files, ["run", "x.vliw", "--give", "x=x.npy", "--limit", str(CYCLES)])
+
+
+SETTINGS = (
+    "latency.load=5",
+    "issue.rule=interlocked",
+    "memory.size=64",
+    'remove=["slot.g.flow"]',
+    "words.bits=32",
+    "x=",
+)
+LINES = (
+    "run x.vliw --give n=5 --limit 500 --no-reference",
+    "run x.vliw --give x=1,2,-3 --save sum=out.npy --limit 500",
+    "run x.vliw --give x=x.npy --interrupt-at 7 --json --limit 500",
+    "run x.vliw --case smallest --trace --limit 50",
+    "run x.vliw --cases",
+    "run x.vliw --core lone4 --set latency.load=3 --set guards.registers=all --limit 500",
+    'run x.vliw --set issue={rule="interlocked"} --set memory.banks=3 --limit 500',
+    "assemble x.vliw -o out.image --set words.bits=128",
+    "cores pair7 --set cluster.g.registers=30 --set link.g.h.operands=2",
+    "layout add --core lone2 --set words.group=1",
+    "ops mul.half --core pair7 --set latency.multiply=9",
+)
+
+
+def a_line(random: Random) -> Mutant:
+    """A command line, mutated word by word."""
+    words = shlex.split(random.choice(LINES), posix=False)
+    for _ in range(random.choice((1, 1, 2, 3))):
+        at = random.randrange(1, len(words))
+        kind = random.randrange(4)
+        if kind == 0:
+            words[at] = mutate.text(words[at], random, [*LINES, *SETTINGS])
+        elif kind == 1:
+            words[at:at] = random.choice(LINES).split()[random.randrange(1, 4) :][:2]
+        elif kind == 2 and len(words) > 2:
+            del words[at]
+        else:
+            words[at] = words[at].split("=")[0] + "=" + mutate.text(words[at].split("=")[-1], random, list(SETTINGS))
+    files = {"x.vliw": SUM.encode(), "x.npy": npy(np.arange(4, dtype=np.int16))}
+    return Mutant("line", files, [word[:9000] for word in words])
+
+
+MAKERS: tuple[Callable[[Random], Mutant], ...] = (
+    *(a_source,) * 7, *(a_core,) * 4, *(a_table,) * 4, *(an_image,) * 3, *(an_array,) * 2, *(a_line,) * 2,
+)  # fmt: skip
+
+
+def mutant(number: int, seed: str = SEED) -> Mutant:
+    """The mutant of this number, always the same."""
+    random = Random(f"{seed} {number}")
+    return random.choice(MAKERS)(random)
+
+
+@contextlib.contextmanager
+def bounded() -> Iterator[None]:
+    """Raises Hang where the body takes more than SECONDS of CPU time."""
+
+    def out_of_time(*_: object) -> None:
+        raise Hang
+
+    before = signal.signal(signal.SIGPROF, out_of_time)
+    signal.setitimer(signal.ITIMER_PROF, SECONDS)
+    try:
+        yield
+    finally:
+        signal.setitimer(signal.ITIMER_PROF, 0)
+        signal.signal(signal.SIGPROF, before)
+
+
+def judge(one: Mutant, folder: Path) -> tuple[str, Result]:
+    """Run a mutant in an empty ``folder``, the working one; the outcome, or Defect."""
+    write(folder, dict(one.files))
+    before = contents(folder)
+    try:
+        with warnings.catch_warnings(), bounded():
+            warnings.simplefilter("error")
+            result = call(one.arguments)
+    except Hang:
+        raise Defect(f"more than {SECONDS} s") from None
+    except Exception as error:
+        raise Defect("".join(traceback.format_exception(error))[-3000:]) from None
+    _judge_words(one, result)
+    new = {name: what for name, what in contents(folder).items() if before.get(name) != what}
+    if [name for name in before if name not in contents(folder)] or set(new) - set(_may_write(one, result)):
+        raise Defect(f"files changed: {sorted(new)}")
+    for name in new:
+        _judge_output(folder / name, one.arguments)
+    kind = ("accepted", "wrong or illegal", "refused")[result.status]
+    return kind, result
+
+
+def _may_write(one: Mutant, result: Result) -> list[str]:
+    """Files that the command was asked to make."""
+    if result.status == 2:
+        return []
+    words = [word.removeprefix("-o") for word in one.arguments]
+    return [name for word in words for name in (word, word.partition("=")[2], word.rpartition("=")[2]) if name]
+
+
+def _judge_words(one: Mutant, result: Result) -> None:
+    spoken = result.out + result.err
+    if result.status not in (0, 1, 2):
+        raise Defect(f"status {result.status}")
+    if result.status == 2 and not result.said:
+        raise Defect("refused without a problem")
+    for said in result.said:
+        if not said.found or not (said.allowed or said.name in SILENT):
+            raise Defect(f"{said.name} says too little: {said}")
+    strange = {c for c in spoken if not c.isprintable() and c != "\n"}
+    if strange or len(spoken) > LARGEST:
+        raise Defect(f"says {len(spoken)} characters, with {strange}")
+    if "--json" in one.arguments and (result.status < 2 or result.out):
+        try:
+            json.loads(result.out)
+        except ValueError:
+            raise Defect("no JSON") from None
+
+
+def _judge_output(path: Path, arguments: list[str]) -> None:
+    """What was written must be whole; an image must come back from its source."""
+    if path.suffix == ".npy":
+        np.load(path, allow_pickle=False)
+    if path.suffix != ".image":
+        return
+    try:
+        image = read_image(path)
+    except ImageError as error:
+        raise Defect(f"half an image: {error}") from None
+    core = [word for pair in pairwise(arguments) if pair[0] in ("--core", "--set") for word in pair]
+    back, again = path.with_name("back.vliw"), path.with_name("again.image")
+    for words in (["disassemble", str(path), "-o", str(back)], ["assemble", str(back), "-o", str(again)]):
+        if (result := call([*words, *core])).status:
+            raise Defect(f"{words} of what was assembled: {result.err[:2000]}")
+    if read_image(again).words != image.words:
+        raise Defect("other words after disassembling and assembling")
+
+
+def campaign(numbers: range, report: Callable[[int, Mutant, str], None], seed: str = SEED) -> Counter[str]:
+    """Run these mutants; counts by outcome and by problem (``~name``). Defects are reported and counted."""
+    counts: Counter[str] = Counter()
+    here = os.getcwd()
+    with tempfile.TemporaryDirectory(prefix="fuzz") as name:
+        try:
+            for number in numbers:
+                folder = Path(name) / "x"
+                folder.mkdir()
+                os.chdir(folder)
+                one = mutant(number, seed)
+                try:
+                    outcome, result = judge(one, folder)
+                    counts.update(f"~{said.name}" for said in {s.name: s for s in result.said}.values())
+                except Defect as defect:
+                    outcome = "DEFECT"
+                    report(number, one, str(defect))
+                counts[f"{one.kind}: {outcome}"] += 1
+                os.chdir(name)
+                shutil.rmtree(folder)
+        finally:
+            os.chdir(here)
+    return counts
+
+
+def table(counts: Counter[str]) -> str:
+    """The counts as text."""
+    outcomes = sorted(name for name in counts if not name.startswith("~"))
+    names = [f"{name[1:]} {count}" for name, count in counts.most_common() if name.startswith("~")]
+    total = sum(counts[name] for name in outcomes)
+    return "\n".join(
+        [f"{counts[name]:8}  {name}" for name in outcomes]
+        + [f"{total:8}  in all; {len(names)} different problems: {', '.join(names)}"]
+    )
+
+
+def _shown(number: int, one: Mutant, why: str) -> None:
+    print(f"\n=== mutant {number} ({one.kind}): {shlex.join(one.arguments)[:500]}\n{why}", flush=True)
+
+
+def main() -> None:
+    options = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    options.add_argument("count", type=int, nargs="?", default=300)
+    options.add_argument("--from", dest="first", type=int, default=0)
+    options.add_argument("--only", type=int)
+    options.add_argument("--keep", type=Path, help="folder for the files of --only")
+    chosen = options.parse_args()
+    resource.setrlimit(resource.RLIMIT_AS, (6 << 30, 6 << 30))
+    if chosen.only is not None:
+        one = mutant(chosen.only)
+        if chosen.keep:
+            chosen.keep.mkdir(exist_ok=True)
+            write(chosen.keep, dict(one.files))
+        _shown(chosen.only, one, "")
+        campaign(range(chosen.only, chosen.only + 1), _shown)
+        return
+    began = time.process_time()
+    counts = campaign(range(chosen.first, chosen.first + chosen.count), _shown)
+    print(table(counts), f"\n{time.process_time() - began:.0f} s of CPU")
+    sys.exit(any("DEFECT" in name for name in counts))
+
+
+if __name__ == "__main__":
+    main()
