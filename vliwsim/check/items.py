@@ -156,7 +156,7 @@ def right_beats(spread: Spread[Tags], domain: Items, bundle: int, instruction: i
             continue
         at = graph.contexts[index].at
         fits = all(
-            any(c == (loop, others.get(r, tag.age)) for c in read[r])
+            (r in others or any(c == (loop, tag.age) for c in read[r]))  # what is carried may not be there in pass 1
             and all(c == (loop, others.get(r, tag.age)) or c[0] != loop for c in read[r])
             for r in carried
         )
