@@ -54,6 +54,11 @@ BAD = [
     (SIGNAL, {"x": [1, 40000], "gain": 1}, {"value-range"}),
     (SIGNAL, {"x": [1, -(2**80)], "gain": 1}, {"value-range"}),
     (SIGNAL, {"x": [1, 2**63], "gain": 1}, {"value-range"}),
+    (SIGNAL, {"x": [1, 2**20000], "gain": 1}, {"value-range"}),
+    (SIGNAL, {"x": np.array([1, 40000], object), "gain": 1}, {"value-range"}),
+    (SIGNAL, {"x": np.array([1, 2.5], object), "gain": 1}, {"array-type"}),
+    (EVERY, GOOD | {"e": [2**2000, 0]}, {"value-range"}),
+    (EVERY, GOOD | {"e": [2**128, 0]}, {"value-range"}),
     (SIGNAL, {"x": [1.0, 2.0], "gain": 1}, {"array-type"}),
     (SIGNAL, {"x": [1, 2j], "gain": 1}, {"array-type"}),
     (SIGNAL, {"x": ["1", "2"], "gain": 1}, {"array-type"}),
@@ -196,6 +201,11 @@ def test_float64_for_f32_is_rounded_and_said() -> None:
     assert [n.found for n in setup.notes] == ["e: 1 of 2 values rounded to binary32"]
 
 
+def test_integers_of_any_width_are_values_of_f32() -> None:
+    setup = bind(header(EVERY), GOOD | {"e": [2**70, -1]})
+    assert setup.arrays["e"].tolist() == [2.0**70, -1.0]
+
+
 def test_nan_and_infinity_are_values_of_f32() -> None:
     setup = bind(header(EVERY), GOOD | {"e": [np.nan, -np.inf]})
     assert np.isnan(setup.arrays["e"][0])
@@ -204,7 +214,14 @@ def test_nan_and_infinity_are_values_of_f32() -> None:
 
 
 @pytest.mark.parametrize(
-    "given", [np.arange(12, dtype=">i4")[::3], np.arange(4, dtype="u8") * 3, [0, 3, 6, 9], range(0, 12, 3)]
+    "given",
+    [
+        np.arange(12, dtype=">i4")[::3],
+        np.arange(4, dtype="u8") * 3,
+        [0, 3, 6, 9],
+        range(0, 12, 3),
+        np.array([0, 3, 6, 9], object),
+    ],
 )
 def test_any_layout_of_integers_binds_by_value(given: object) -> None:
     setup = bind(header("given x : i16[n] at g1"), {"x": given})

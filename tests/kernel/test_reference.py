@@ -138,7 +138,7 @@ def test_failures(code: str, name: str, says: str, line: int, tmp_path: Path) ->
 
 
 def test_q_outputs_must_be_finite(tmp_path: Path) -> None:
-    with pytest.raises(ReferenceFailure, match=r"the reference returns y\[1\] = inf"):
+    with pytest.raises(ReferenceFailure, match=r"the reference's y\[1\] = inf"):
         expect(tmp_path, "def frame(x):\n    return 0, [0.5, float('inf'), 0, 0]")
 
 

@@ -50,6 +50,31 @@ def test_a_right_run(tmp_path: Path) -> None:
     assert adds_up(one)
 
 
+CUT = """
+kernel total
+core pair7
+given n : i32 in g16
+returns sum : i32 in g1
+start:
+@0 li g1, 0
+loop:
+@0 count g16, loop ; add g1, g1, 1
+tail:
+@5 idle
+finish:
+@0 halt
+"""
+
+
+def test_passes_of_an_idle_section_that_a_branch_cuts_short(tmp_path: Path) -> None:
+    # By hand: 10 bundles of loop; behind 9 of them 3 beats of tail (pair7's branch latency 4), behind the last all 6.
+    one = run(tmp_path, CUT, n=9, reference=False)
+    costs = [(s.label, s.bundles, s.passes, s.whole) for s in one.account.sections]
+    assert costs == [("start", 1, 1, True), ("loop", 10, 10, True), ("tail", 33, 10, False), ("finish", 1, 1, True)]
+    assert one.outputs == {"sum": 10}
+    assert adds_up(one)
+
+
 def test_arrays_come_back_in_their_type(tmp_path: Path) -> None:
     one = run(tmp_path, DOUBLE, x=np.array([1, -2, 16384], ">i4"))
     y = one.outputs["y"]

@@ -92,6 +92,7 @@ class Account:
 def account_of(
     kernel: Kernel,
     counts: Sequence[int],
+    begun: Sequence[int],
     stalls: Mapping[str, int],
     drain: int,
     budget: int | float | None,
@@ -99,17 +100,19 @@ def account_of(
 ) -> Account:
     """The account of a run from its counters.
 
-    ``counts``: executions of each bundle of the program, an idle word's in beats. ``halted_in``: index of the bundle
-    with the halt that ended the run, None if none did.
+    ``counts``: executions of each bundle of the program, an idle word's in beats; ``begun``: how often its first beat
+    was issued. ``halted_in``: index of the bundle with the halt that ended the run, None if none did.
     """
+    lengths = [bundle.beats for bundle in kernel.program.bundles]
+    assert all(b <= c <= b * beats for b, c, beats in zip(begun, counts, lengths, strict=True))
     sections = []
     for first, last, section in _stretches(kernel):
         bundles = sum(counts[first:last])
         if not bundles:
             continue
-        passes = -(-counts[first] // kernel.program.bundles[first].beats)
+        passes = begun[first]
         here = halted_in is not None and first <= halted_in < last
-        whole = bundles == passes * section.beats
+        whole = all(counts[k] == passes * lengths[k] for k in range(first, last))
         sections.append(SectionCost(section.label, bundles, passes, section.beats, whole, drain if here else 0))
     hottest = max(sections, key=lambda s: s.bundles, default=None)
     slots = _slots(kernel, counts, hottest.label, hottest.bundles) if hottest else ()

@@ -109,7 +109,7 @@ def convert(element: Element, value: object, label: str) -> Converted:
     if kind == "f":
         return _from_floats(element, array, label)
     if kind == "O" and all(type(one) is int for one in array.flat):
-        return _out_of_range(element, list(array.flat), label)
+        return _from_python(element, array, label)
     found = {"b": "truth values", "c": "complex numbers", "O": "Python objects", "U": "text", "S": "bytes"}.get(
         kind, f"values of type {array.dtype}"
     )
@@ -123,10 +123,23 @@ def _too_wide(values: list[object] | tuple[object, ...]) -> bool:
     return bool(integers) and len(integers) == len(values) and not -(2**63) <= min(integers) <= max(integers) < 2**63
 
 
+def _from_python(element: Element, array: np.ndarray, label: str) -> Converted:
+    """``array``: Python integers of any width, as objects."""
+    if element.floating:
+        try:
+            return _from_floats(element, array.astype(np.float64), label)
+        except OverflowError:
+            return _refused("value-range", f"{label} holds integers beyond 2**1024", "magnitudes below 2**128 for f32")
+    if all(element.low <= one <= element.high for one in array.flat):
+        return _from_integers(element, array.astype(np.int64), label)
+    return _out_of_range(element, list(array.flat), label)
+
+
 def _out_of_range(element: Element, values: list[int], label: str) -> Converted:
     index, bad = next((k, v) for k, v in enumerate(values) if not element.low <= v <= element.high)
     where = label if len(values) == 1 else f"{label}[{index}]"
-    return _refused("value-range", f"{where} = {bad}", f"{element.low} to {element.high} for {element.name}")
+    found = f"{where} = {bad}" if bad.bit_length() <= 256 else f"{where} is a number of {bad.bit_length()} bits"
+    return _refused("value-range", found, f"{element.low} to {element.high} for {element.name}")
 
 
 def _from_integers(element: Element, array: np.ndarray, label: str) -> Converted:

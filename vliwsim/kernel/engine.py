@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from typing import TYPE_CHECKING
 
 import attrs
 
@@ -14,8 +15,19 @@ from vliwsim.machine.memory import Region
 from vliwsim.machine.recorder import Record, record
 from vliwsim.machine.stepper import Machine
 
+if TYPE_CHECKING:
+    from vliwsim.native.engine import Native
+
 SLICE = 1 << 14
-"""Cycles between two looks at whether to go on."""
+"""Cycles of the stepper between two looks at whether to go on."""
+
+FAST_SLICE = 1 << 22
+"""Cycles of machine code between two looks at whether to go on."""
+
+LONG = 1 << 17
+"""Cycles after which ``auto`` takes a run for a long one and goes on with machine code."""
+
+ENGINES = ("auto", "step", "native")
 
 Watch = Callable[[int], bool]
 """Called now and then with the cycle; true asks the run to stop there."""
@@ -25,12 +37,14 @@ Watch = Callable[[int], bool]
 class Simulation:
     """How a run ended.
 
-    ``reason``: ``halt``, ``hazard``, ``limit`` or ``stopped``. ``counts``: beats each bundle issued in. ``halted_in``:
-    index of the bundle with the halt that ended the run. ``notes``: (name, bundle, instruction, first beat).
+    ``reason``: ``halt``, ``hazard``, ``limit`` or ``stopped``. ``counts``: beats each bundle issued in; ``begun``: how
+    often its first beat did. ``halted_in``: index of the bundle with the halt that ended the run. ``notes``: (name,
+    bundle, instruction, first beat).
     """
 
     reason: str
     counts: Sequence[int]
+    begun: Sequence[int]
     stalls: Mapping[str, int]
     drain: int
     hazard: Hazard | None
@@ -47,9 +61,11 @@ def simulate(
     interrupt_at: int | None = None,
     watch: Watch | None = None,
     listen: Callable[[Record], None] | None = None,
+    engine: str = "auto",
 ) -> Simulation:
     """Run the program of ``setup`` to its halt, a hazard, ``limit`` cycles, or until ``watch`` asks to stop.
 
+    ``engine``: ``step``; ``native``, machine code wherever there is some; ``auto``, that only once a run is long.
     ``interrupt_at``: the cycle, from 0, at or after which one interrupt is taken. ``listen`` gets a record
     of every beat.
     """
@@ -58,8 +74,13 @@ def simulate(
     state = machine.start(dict(setup.registers), setup.memory, regions)
     if listen:
         record(machine, listen)
+        engine = "step"  # every beat by definition, so that each can be recorded
+    native = None
     while True:
-        outcome = machine.run(state, limit=min(limit, state.cycle + SLICE), interrupt_at=interrupt_at)
+        if native is None and (engine == "native" or (engine == "auto" and state.cycle >= LONG)):
+            native = fast(machine, setup)
+        ahead = FAST_SLICE if native else SLICE
+        outcome = (native or machine).run(state, limit=min(limit, state.cycle + ahead), interrupt_at=interrupt_at)
         interrupt_at = None
         reason = outcome.reason
         if reason != "limit" or state.cycle >= limit:
@@ -70,6 +91,7 @@ def simulate(
     return Simulation(
         reason,
         outcome.counts,
+        outcome.begun,
         outcome.stalls,
         outcome.drain,
         outcome.hazard,  # type: ignore[arg-type]
@@ -78,3 +100,12 @@ def simulate(
         outcome.memory.read,
         state.at if state.halt_beat is not None else None,
     )
+
+
+def fast(machine: Machine, setup: Setup) -> Native:
+    """The fast engine for ``machine``, with a translation from the first beat on."""
+    from vliwsim.native.engine import Native
+
+    native = Native(machine)
+    native.begin(setup.registers)
+    return native

@@ -194,7 +194,7 @@ def _output(setup: Setup, name: str, value: Any, element: Element, problems: lis
         return 0
     converted = convert(element, value, name)
     problems += [
-        attrs.evolve(p, name="reference-returned", found=f"the reference returns {p.found}", place=place)
+        attrs.evolve(p, name="reference-returned", found=f"the reference's {p.found}", place=place)
         for p in converted.problems
     ]
     array = converted.array

@@ -23,6 +23,9 @@ from vliwsim.machine.recorder import Record
 from vliwsim.problems import InterfaceError, Problem, problem
 from vliwsim.program.kernel import Formula, Kernel
 
+ENGINE = "step"
+"""The engine unless told otherwise."""
+
 LIMIT = 10_000_000
 """Cycles after which a run is given up, unless told otherwise."""
 
@@ -204,13 +207,14 @@ def run_kernel(
     listen: Callable[[Record], None] | None = None,
     trace: bool = False,
     quiet: bool = False,
+    engine: str = ENGINE,
 ) -> KernelRun:
     """Run ``kernel`` once on ``inputs`` (arrays, scalars and sizes by name) and judge what comes out.
 
     ``reference``: the loaded reference, True to load the one beside the source, False or None to compare nothing.
     ``limit`` in cycles. ``interrupt_at``: cycle, from 0. ``watch`` is called now and then with the cycle and may stop
     the run. ``trace`` keeps a record of every beat, ``listen`` is called
-    with each. ``quiet`` sends what the reference prints to standard error.
+    with each. ``engine``: ``auto``, ``step`` or ``native``. ``quiet`` sends what the reference prints to standard error.
 
     Raises :class:`~vliwsim.problems.InterfaceError` for inputs that do not fit, and
     :class:`~vliwsim.problems.ReferenceFailure`.
@@ -224,7 +228,7 @@ def run_kernel(
     records: list[Record] | None = [] if trace else None
     if records is not None:
         listen = records.append
-    simulation = simulate(setup, limit=limit, interrupt_at=interrupt_at, watch=watch, listen=listen)
+    simulation = simulate(setup, limit=limit, interrupt_at=interrupt_at, watch=watch, listen=listen, engine=engine)
     run = judged(setup, simulation, case=case, expected=expected, limit=limit)
     return attrs.evolve(run, trace=records)
 
@@ -260,7 +264,13 @@ def judged(
         diagnostics.append(_limit_problem(kernel, simulation, limit))
     diagnostics += [*kernel.notes, *setup.notes, *note_problems(kernel, simulation.notes)]
     account = account_of(
-        kernel, simulation.counts, simulation.stalls, simulation.drain, _budget(setup, outputs), simulation.halted_in
+        kernel,
+        simulation.counts,
+        simulation.begun,
+        simulation.stalls,
+        simulation.drain,
+        _budget(setup, outputs),
+        simulation.halted_in,
     )
     return KernelRun(
         kernel,

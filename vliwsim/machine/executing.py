@@ -141,6 +141,7 @@ def commit(ready: Preparation, state: State, prepared: Prepared, issued: Issued)
     for site in issued.notes:
         state.notes.setdefault(site, state.beat)
     state.counts[prepared.index] += 1
+    state.begun[prepared.index] += state.within == 0
     state.frozen.extend([cause, cycles] for cause, cycles in issued.freezes)
     state.waited_fresh = False
     assert len(core.slots) == len(state.busy_until)

@@ -49,7 +49,8 @@ class HotLoop:
         known to be ordinary, but for landings, which may be made twice.
         """
         core, sites = self.core, self.ready.sites
-        operands, flight, redirects, counts = state.operands, state.flight, state.redirects, state.counts
+        operands, flight, redirects = state.operands, state.flight, state.redirects
+        counts, begun = state.counts, state.begun
         views, status, memory = state.memory.views, state.memory.status_views, state.memory
         verdicts, entries, size_of_program = self.verdicts, self.entries, len(self.ready.program.bundles)
         branch_latency, overlapping = core.branch.latency, core.branch.overlap
@@ -140,6 +141,8 @@ class HotLoop:
                     views[size][place] = value
                     status[size][place] = ALL_DEFINED[SIZES[size]]
                 counts[at] += 1
+                if not within:
+                    begun[at] += 1
                 if charged is not None:
                     stalls["bank"] += conflict
                     stalls["wait"] += waited

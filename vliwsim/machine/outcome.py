@@ -17,8 +17,9 @@ class Outcome:
     """The account and final state of a run.
 
     ``reason``: ``halt``, ``hazard`` or ``limit`` (the cycle limit, or a stop asked for). ``stalls``: cycles by cause,
-    every cause named. ``counts``: for every bundle of the program, beats it issued in. ``notes``: sites with the beat
-    they were first met in. Always ``cycles == bundles + sum(stalls.values()) + drain``.
+    every cause named. ``counts``: for every bundle of the program, beats it issued in; ``begun``: how often its first
+    beat did. ``notes``: sites with the beat they were first met in. Always ``cycles == bundles + sum(stalls.values()) +
+    drain``.
     """
 
     reason: str
@@ -26,6 +27,7 @@ class Outcome:
     stalls: Mapping[str, int]
     drain: int
     counts: tuple[int, ...]
+    begun: tuple[int, ...]
     hazard: Hazard | None
     notes: Mapping[NoteSite, int]
     registers: tuple[Value, ...]

@@ -37,8 +37,9 @@ class State:
     ``at`` is the index of the next bundle and ``within`` the beats already spent in it if it is an idle word.
     ``operands`` are the registers, then the program's constants, then one place for results that go nowhere.
     ``flight`` maps a landing beat to its batches; ``redirects`` the issue index a taken branch lands at to the bundle
-    index it goes to (None where nothing is). ``ready`` is each register's latest landing beat, kept only for cores that
-    ask. ``frozen`` are freeze cycles not yet passed, as [cause, cycles] in order.
+    index it goes to (None where nothing is). ``counts``: of every bundle, the beats it issued in; ``begun``: how often
+    its first beat did, since a branch may cut an idle word short. ``ready`` is each register's latest landing beat,
+    kept only for cores that ask. ``frozen`` are freeze cycles not yet passed, as [cause, cycles] in order.
     """
 
     def __init__(self, core: Core, bundles: int, operands: list[Value], memory: Memory) -> None:
@@ -58,6 +59,7 @@ class State:
         self.frozen: list[list[str | int]] = []
         self.stalls = dict.fromkeys(CAUSES, 0)
         self.counts = [0] * bundles
+        self.begun = [0] * bundles
         self.notes: dict[NoteSite, int] = {}
         self.halt_beat: int | None = None
         self.drain = 0
