@@ -37,7 +37,7 @@ def report(result: Result, longest: int | None = 3) -> str:
 
 def failures(verdict: Verdict, longest: int | None = None) -> Iterator[str]:
     """What does not hold, a block a claim."""
-    bad = [claim for claim in verdict.claims if claim.held is False]
+    bad = verdict.broken
     for claim in bad[:longest]:
         yield f"{verdict.title}, {claim.title}: {claim.says}\n{claim.detail}".rstrip()
     if longest is not None and len(bad) > longest:

@@ -144,18 +144,29 @@ def _case(
 
 
 def cases_of(kernel: Kernel, reference: Reference | None) -> Iterator[Case]:
-    """All cases of ``kernel``, lazily: the reference's own if it has a ``cases`` function, else the generated ones."""
+    """All cases of ``kernel``, lazily: the reference's own if it has a ``cases`` function, else the generated ones.
+
+    Then those kept beside it (:mod:`vliwsim.kernel.saved_cases`).
+    """
+    from vliwsim.kernel.saved_cases import saved_cases
+
+    seen: set[str] = set()
+    for case in _cases(kernel, reference, seen):
+        seen.add(case.name)
+        yield case
+    yield from (Case(name, inputs) for name, inputs in saved_cases(kernel) if name not in seen)
+
+
+def _cases(kernel: Kernel, reference: Reference | None, seen: set[str]) -> Iterator[Case]:
     if reference is None or reference.cases is None:
         yield from generated_cases(kernel)
         return
-    seen: set[str] = set()
     for name, inputs in _own_cases(kernel, reference):
         if not isinstance(name, str) or not name or not isinstance(inputs, Mapping):
             found = f"cases() gives {type(name).__name__}, {type(inputs).__name__}"
             raise _wrong(reference, found, "a name (text) and a dict of inputs by name")
         if name in seen:
             raise _wrong(reference, f"cases() gives {name!r} twice", "a name of its own for every case")
-        seen.add(name)
         yield Case(name, dict(inputs))
 
 

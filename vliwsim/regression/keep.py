@@ -159,10 +159,12 @@ def _digest(kept: Any) -> str:
 
 
 def _file_hash(name: str) -> str:
-    """sha256 of a file's bytes; what is not there or no regular file has a mark of its own."""
+    """sha256 of a file's bytes, or of a folder's names; what is not there or no regular file has a mark of its own."""
     from vliwsim.description.files import open_regular
 
     try:
+        if name.endswith(os.sep):  # a folder: what is in it
+            return hashlib.sha256("\n".join(sorted(os.listdir(name))).encode(errors="replace")).hexdigest()
         with open_regular(name) as stream:
             there = os.fstat(stream.fileno())
             if there.st_size > LARGEST:

@@ -141,7 +141,7 @@ def _work(connection: Connection, target: Target, options: Options) -> None:
     nowhere = os.open(os.devnull, os.O_RDWR)
     for descriptor in (0, 1, 2):
         os.dup2(nowhere, descriptor)
-    opened = _opened_files()
+    opened = _opened_files(os.path.dirname(os.path.abspath(target.source)) + os.sep)
     with contextlib.suppress(BrokenPipeError, ConnectionError):
         verdict = _judged(target, options, lambda text: _tell(connection, options, text))
         if not verdict.kept:
@@ -167,14 +167,23 @@ def _judged(target: Target, options: Options, about: Callable[[str], None]) -> V
         return _no_verdict(target, "reference", "not enough memory on this machine")
 
 
-def _opened_files() -> set[str]:
-    """The files that this process opens from now on, but for Python's and the program's own; a growing set."""
+def _opened_files(folder: str) -> set[str]:
+    """The files that this process opens from now on, but for Python's and the program's own; a growing set.
+
+    Folders below ``folder`` that it lists stand in it with a separator at their end.
+    """
+    beside = folder
     here = os.path.dirname(os.path.dirname(os.path.abspath(__file__))) + os.sep
     data = os.path.join(here, "_data") + os.sep
     own = tuple({os.path.realpath(p) + os.sep for p in (sys.prefix, sys.base_prefix)} | {"/proc/", "/dev/", "/sys/"})
     opened: set[str] = set()
 
     def hook(event: str, arguments: tuple[Any, ...]) -> None:
+        if event in ("os.listdir", "os.scandir") and isinstance(arguments[0], str):
+            listed = os.path.join(os.path.abspath(arguments[0]), "")
+            if listed.startswith(beside) and listed != beside:
+                opened.add(_near(listed))
+            return
         if event != "open" or not isinstance(arguments[0], (str, bytes)):
             return
         flags = arguments[2] if isinstance(arguments[2], int) else 0
