@@ -1,7 +1,7 @@
 """The benchmark: ratios of one run, never a verdict. Machines are noisy: quote the medians.
 
 tools/bench            everything
-tools/bench stepper    one part: stepper, start, assemble, growth
+tools/bench stepper    one part: stepper, start, assemble, growth, shell
 """
 
 from __future__ import annotations
@@ -216,7 +216,56 @@ def growth() -> None:
         line(f"{int(cycles):>9,} cycles", f"{rate:.2f} us", f"a cycle; peak memory {int(peak) / 1024:.0f} MiB")
 
 
-PARTS = {"stepper": stepper, "start": start, "assemble": assembling, "growth": growth}
+# --------------------------------------------------------------------------------------------------------- the shell
+
+SHELL = """
+import random, resource, sys, time
+from vliwsim.kernel.binding import bind
+from vliwsim.kernel.loading import assemble_source
+from vliwsim.shell.session import Session
+cycles, moves = int(sys.argv[2]), int(sys.argv[3])
+kernel = assemble_source(sys.argv[1] + "/bench_shell.vliw")
+session = Session(bind(kernel, {"trips": cycles}))
+started = time.perf_counter()
+session.to_end()
+ran = time.perf_counter() - started
+def timed(cycles):
+    started = time.perf_counter()
+    session.move(cycles)
+    session.moment()
+    return time.perf_counter() - started
+choose = random.Random(1)
+near, back = [0.0], [0.0]
+for _ in range(moves):
+    session.go(choose.randrange(1000, cycles))
+    for _ in range(10):
+        near.append(timed(choose.randrange(-1000, 1001)))
+        back.append(timed(-1))
+print(session.history.last, ran, sorted(near)[len(near) // 2], max(near), sorted(back)[len(back) // 2], max(back),
+      session.recorded.kept_bytes(), resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+"""
+
+
+def shell() -> None:
+    def measured(cycles: int, moves: int) -> list[float]:
+        command = [sys.executable, "-c", SHELL, str(HERE), str(cycles), str(moves)]
+        return [float(f) for f in subprocess.run(command, check=True, capture_output=True, text=True).stdout.split()]
+
+    cycles, ran, near, worst_near, back, worst_back, kept, peak = measured(10**6, 30)
+    assert cycles == 10**6 + 8, "the benchmark's own cycles changed"
+    line(f"shell, to the end of {cycles:,.0f} cycles", f"{ran:.1f} s", f"{ran / cycles * 1e6:.1f} us a cycle")
+    asked = "median {:.1f} ms; asked: at most {} ms"
+    line(
+        "  a move within 1,000 cycles, slowest of 300", f"{worst_near * 1e3:.0f} ms", asked.format(near * 1e3, 100)
+    )
+    line("  one cycle back, slowest of 300", f"{worst_back * 1e3:.0f} ms", asked.format(back * 1e3, 20))
+    line("  peak memory", f"{peak / 1024:.0f} MiB", f"{kept / 2**20:.1f} MiB of snapshots")
+    cycles, ran, *_, kept, peak = measured(10**7, 1)
+    figure = f"{peak / 1024:.0f} MiB"
+    line(f"  peak memory after {cycles:,.0f} cycles", figure, f"{kept / 2**20:.1f} MiB of snapshots; asked: 200 MB")
+
+
+PARTS = {"stepper": stepper, "start": start, "assemble": assembling, "growth": growth, "shell": shell}
 
 
 def main() -> int:

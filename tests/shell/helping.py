@@ -68,8 +68,8 @@ def answers(one: Session, *lines: str) -> str:
 def complete(machine: Machine, state: State) -> dict[str, object]:
     """Everything of a state that its future depends on, and every count of its past, as plain data.
 
-    Left out is what the hot loop does not keep: which registers landed in the beat before, landing beats that no rule
-    of the core asks for, and until when a unit was taken that is free again.
+    Left out is what a fast engine need not keep: which registers landed in the beat before, landing beats that no rule
+    of the core asks for, until when a unit was taken that is free again, when a branch left that has long landed.
     """
     saved = dict(state.save())
     del saved["landed"]
@@ -78,6 +78,7 @@ def complete(machine: Machine, state: State) -> dict[str, object]:
     else:
         saved["ready"] = [max(r, state.beat) for r in state.ready]
     saved["busy_until"] = [max(b, state.beat) for b in state.busy_until]
+    saved["last_branch"] = max(state.last_branch, state.issue - machine.core.branch.latency)
     saved["operands"] = [parts(v) for v in state.operands]
     saved["flight"] = {
         beat: sorted((n, parts(v)) for numbers, values in batches for n, v in zip(numbers, values, strict=True))

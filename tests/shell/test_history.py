@@ -9,6 +9,7 @@ import pytest
 from tests.shell.helping import complete, fresh_states, from_text, session
 from vliwsim.shell import history
 from vliwsim.shell.conditions import condition
+from vliwsim.shell.engine import Swift
 from vliwsim.shell.history import BUDGET, FINE, History
 from vliwsim.shell.places import place
 from vliwsim.shell.session import Session
@@ -129,11 +130,27 @@ def test_another_engine_can_be_plugged_in() -> None:
             asked.append((state.cycle, until))
             one.machine.advance(state, until)
 
-    other = Session(one.setup, engine=Counted())
+    other = Session(one.setup, engine=lambda machine: Counted())
     other.go(20)
     one.go(20)
     assert asked == [(0, 20)]
     assert complete(other.machine, other.state) == complete(one.machine, one.state)
+
+
+def test_machine_code_takes_over_on_long_ways_and_time_stays_exact(monkeypatch: pytest.MonkeyPatch) -> None:
+    pytest.importorskip("llvmlite")
+    monkeypatch.setattr(Swift, "WARM", 1 << 15)
+    slow = session("tests/shell/long_loop.vliw", {"trips": 400_000})
+    fast = Session(slow.setup, engine=Swift)
+    fast.to_end()
+    assert isinstance(fast.recorded.engine, Swift)
+    assert fast.recorded.engine.reach > 0
+    slow.to_end()
+    assert complete(fast.machine, fast.state) == complete(slow.machine, slow.state)
+    for cycle in (123_456, 399_000, 20, 250_001):
+        fast.go(cycle)
+        slow.go(cycle)
+        assert complete(fast.machine, fast.state) == complete(slow.machine, slow.state), cycle
 
 
 def test_what_is_written_down_of_a_stretch_is_what_a_recorder_hears() -> None:

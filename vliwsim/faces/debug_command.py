@@ -43,6 +43,7 @@ def debug(kernel: str, **options: Any) -> int:
     from vliwsim.kernel.cases import case_with
     from vliwsim.kernel.interface import interface_of
     from vliwsim.kernel.reference import call_reference, load_reference
+    from vliwsim.shell.engine import Swift
     from vliwsim.shell.session import Session
 
     given = given_values(options["give"])
@@ -53,7 +54,7 @@ def debug(kernel: str, **options: Any) -> int:
     case = case_with(loaded, reference, options["case"], given)
     setup = bind(loaded, case.inputs)
     expected = call_reference(reference, setup) if reference else None
-    session = Session(setup, expected, interrupt_at=options["interrupt_at"])
+    session = Session(setup, expected, interrupt_at=options["interrupt_at"], engine=Swift)
     sizes = "".join(f", {name} = {value}" for name, value in setup.sizes.items())
     title = f"{loaded.name} on {loaded.core.name}{sizes}, case {case.name}"
     open_shell(session, title=title, play=options["play"])
@@ -63,9 +64,10 @@ def debug(kernel: str, **options: Any) -> int:
 def open_at_failure(run: KernelRun, interrupt_at: int | None = None) -> None:
     """Open the shell on a run that failed, where it did: at the hazard, at the first wrong element, else at the end."""
     from vliwsim.faces.shell.prompt import open_shell
+    from vliwsim.shell.engine import Swift
     from vliwsim.shell.session import Session
 
-    session = Session(run.setup, run.expected, interrupt_at=interrupt_at)
+    session = Session(run.setup, run.expected, interrupt_at=interrupt_at, engine=Swift)
     wrong = next((name for name, difference in run.differences.items() if difference), None)
 
     def there(shell: Shell) -> None:

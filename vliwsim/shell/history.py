@@ -2,7 +2,7 @@
 
 Snapshots stand on two grids. A coarse one covers all that has been run; its spacing doubles whenever it would hold more
 than :data:`COARSE` of them. A fine one thins out exponentially with the distance from where the run stands:
-:data:`NEAR` multiples of 512 cycles before it, as many multiples of 4096, of 32768 and so on. Going anywhere is putting
+:data:`NEAR` multiples of 256 cycles before it, as many multiples of 2048, of 16384 and so on. Going anywhere is putting
 back the nearest snapshot before it and running on, so a step back costs at most :data:`FINE` cycles of replay, and a
 jump at most 8 fine steps or one coarse one. An array that did not change is kept once for all snapshots that have it.
 """
@@ -18,7 +18,7 @@ from vliwsim.machine.state import State
 from vliwsim.machine.stepper import FOREVER, Machine
 from vliwsim.shell.engine import Engine
 
-FINE = 512
+FINE = 256
 """Cycles between the finest snapshots."""
 STEP = 8
 """How much coarser each further fine grid is."""
@@ -83,7 +83,8 @@ class History:
     def _run(self, state: State, target: int, watch: Watch | None) -> bool:
         """Run on to ``target`` with a snapshot wherever one belongs."""
         while state.cycle < target and not state.finished:
-            stop = min(target, self._next_stop(state.cycle, target), state.cycle + SLICE)
+            pace = max(SLICE, getattr(self.engine, "reach", 0))
+            stop = min(target, self._next_stop(state.cycle, target), state.cycle + pace)
             try:
                 self.advance(state, stop)
             except HazardMet as met:
@@ -115,7 +116,8 @@ class History:
 
     def _next_stop(self, cycle: int, target: int) -> int:
         """The next cycle after ``cycle`` that wants a snapshot on the way to ``target``."""
-        stop = (cycle // self._spacing + 1) * self._spacing
+        spacing = max(self._spacing, getattr(self.engine, "reach", 0))
+        stop = (cycle // spacing + 1) * spacing
         grid = FINE
         while grid < self._spacing:
             first = max(cycle + 1, target - NEAR * grid)

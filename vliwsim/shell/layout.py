@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping
-from typing import Any
 
 from vliwsim.description.operations import Role
 from vliwsim.kernel.diagnose import line_of, where
@@ -76,16 +75,11 @@ class Layout:
         """The section a bundle stands in."""
         return self.sections[self.kernel.map.bundle_at[bundle][0]]
 
-    def entered(self, section: Section, counts: Any) -> int:
-        """How often the first beat of a section has been issued. Exact but where a branch cuts a leading idle word."""
-        return int(-(-counts[section.first] // self.kernel.program.bundles[section.first].beats))
-
     def pass_of(self, state: State) -> int:
         """The pass of its section in which ``state`` stands, from 1."""
         section = self.section_at(state.at)
-        passes = self.entered(section, state.counts)
         at_first = state.at == section.first and state.within == 0 and state.halt_beat is None
-        return max(1, passes + at_first)
+        return max(1, state.begun[section.first] + at_first)
 
     def repeats(self, section: Section) -> bool:
         """Whether passes of the section are worth counting: a branch comes back to it."""

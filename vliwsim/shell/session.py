@@ -44,7 +44,7 @@ class Arrival:
 class Session:
     """``state`` stands at :attr:`cycle`. ``expected``: the reference's outputs, None where there are none.
 
-    ``interrupt_at``: the cycle at or after which the run takes one interrupt.
+    ``interrupt_at``: the cycle at or after which the run takes one interrupt. ``engine`` makes what goes through time.
     """
 
     def __init__(
@@ -53,7 +53,7 @@ class Session:
         expected: Mapping[str, Output] | None = None,
         *,
         interrupt_at: int | None = None,
-        engine: Engine | None = None,
+        engine: Callable[[Machine], Engine] = lambda machine: machine,
     ) -> None:
         self.setup = setup
         self.kernel = setup.kernel
@@ -65,7 +65,7 @@ class Session:
         self.state = self.machine.start(dict(setup.registers), setup.memory, regions)
         self.state.interrupt_at = interrupt_at
         self.looker = Looker(self.machine, self.state)
-        self.recorded = History(self.machine, self.state.save(), engine=engine)
+        self.recorded = History(self.machine, self.state.save(), engine=engine(self.machine))
         self.history = self.recorded
         self.alarms: dict[int, Condition] = {}
         self._numbered = 0
@@ -315,9 +315,8 @@ class Session:
 
     def _to_pass(self, place: Place, watch: Watch | None) -> Arrival:
         section, here = self.layout.sections[place.name], self._visits(place)
-        beats = self.kernel.program.bundles[section.first].beats
-        enough = (int(place.pass_ or 1) - 1) * beats + 1
-        start, through = self.first_cycle(lambda state: state.counts[section.first] >= enough, 0, watch)
+        wanted = int(place.pass_ or 1)
+        start, through = self.first_cycle(lambda state: state.begun[section.first] >= wanted, 0, watch)
         if not through:
             return Arrival("stopped")
         stood = self.cycle
