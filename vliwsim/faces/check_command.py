@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, BinaryIO
 
 import click
 
+from vliwsim.faces.json_text import json_text
 from vliwsim.faces.options import core_options
 from vliwsim.problems import OptionError, Problem, VliwsimError, problem
 
@@ -66,7 +67,7 @@ def check(
             if not as_json:
                 complain(error.problems)
     if as_json:
-        click.echo(json.dumps({"kernels": objects}, indent=2, ensure_ascii=False, allow_nan=False))
+        click.echo(json_text({"kernels": objects}))
         if failed:
             complain(failed)
     if target:

@@ -48,9 +48,9 @@ def compare(kernels: Sequence[str], core: str | None, as_json: bool, **options: 
         chosen = [*(chosen or []), _given(loaded[0], reference, given_values(options["give"]))]
     result = compare_kernels(loaded, reference, cases=chosen, sizes=_sizes(options["sizes"]), about=_silent)
     if as_json:
-        import json
+        from vliwsim.faces.json_text import json_text
 
-        click.echo(json.dumps(_plain(result), indent=2, ensure_ascii=False))
+        click.echo(json_text(_plain(result)))
     else:
         click.echo("\n".join(screen(result)))
     return 0 if result.equal else 1

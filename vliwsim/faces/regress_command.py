@@ -102,9 +102,9 @@ def _judged(targets: Sequence[Target], wanted: Options, keep: Keep, options: dic
     with _Line() as show:
         result = judge(targets, wanted, keep, options["jobs"], show)
     if options["as_json"]:
-        import json
+        from vliwsim.faces.json_text import json_text
 
-        click.echo(json.dumps(result.as_json(), indent=2, ensure_ascii=False))
+        click.echo(json_text(result.as_json()))
     else:
         click.echo(report(result, None if options["show_all"] else 3))
     if options["junit"]:

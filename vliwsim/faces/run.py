@@ -80,9 +80,9 @@ def run(kernel: str, as_json: bool, **options: Any) -> int:
 
 
 def _print_json(data: object) -> None:
-    import json
+    from vliwsim.faces.json_text import json_text
 
-    click.echo(json.dumps(data, indent=2, ensure_ascii=False, allow_nan=False))
+    click.echo(json_text(data))
 
 
 class _Job:
