@@ -35,18 +35,21 @@ class Harm:
     """An interrupt that changed what a run gives.
 
     ``cycle``, ``place`` (``start@2``): where it came. ``found``: what became of the outputs. ``flight``: what was in
-    flight and landed too early: register, line that sent it. ``lines`` of those, and of the bundle interrupted.
+    flight and landed too early: register, line that sent it. ``here``: lines of the bundle it came before. ``lines``:
+    all of these.
     """
 
     cycle: int
     place: str
     found: str
     flight: tuple[tuple[str, int], ...]
+    here: tuple[int, ...]
     lines: tuple[int, ...]
 
     def __str__(self) -> str:
         sent = ", ".join(f"{register} (line {line})" for register, line in self.flight)
-        return f"{self.place}, cycle {self.cycle}: {self.found}" + (f"; landed early: {sent}" if sent else "")
+        before = f" ({', '.join(f'line {line}' for line in self.here)})" if self.here else ""
+        return f"{self.place}{before}, cycle {self.cycle}: {self.found}" + (f"; landed early: {sent}" if sent else "")
 
 
 @attrs.frozen
@@ -145,8 +148,10 @@ class _Injection:
                 return text
         return ""
 
-    def _flight(self, flight: Sequence[tuple[int, int]]) -> tuple[tuple[tuple[str, int], ...], tuple[int, ...]]:
-        """What was in flight and would have landed later: registers with lines, and all lines."""
+    def _flight(
+        self, flight: Sequence[tuple[int, int]]
+    ) -> tuple[tuple[tuple[str, int], ...], tuple[int, ...], tuple[int, ...]]:
+        """What was in flight and would have landed later: registers with lines; lines of the bundle; all lines."""
         sent, lines = [], []
         names = self.kernel.core.register_names
         for number, beats in flight:
@@ -156,7 +161,7 @@ class _Injection:
                 sent.append((names[site.write.register], place.line))
                 lines.append(place.line)
         here = [p.line for p in self.kernel.map.instruction_places[self.state.at]]
-        return tuple(dict.fromkeys(sent)), tuple(dict.fromkeys([*lines, *here]))
+        return tuple(dict.fromkeys(sent)), tuple(dict.fromkeys(here)), tuple(dict.fromkeys([*lines, *here]))
 
 
 def _changed(name: str, before: Output, after: Output, unknown: np.ndarray, unknown_now: np.ndarray) -> str:
