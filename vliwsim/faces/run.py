@@ -52,6 +52,12 @@ NOT_SIMULATED = (
     metavar="CYCLE",
     help="Take one interrupt at or after this cycle, from 0.",
 )
+@click.option(
+    "--engine",
+    type=click.Choice(["auto", "step", "native"]),
+    default=None,
+    help="What runs it: the stepper, machine code, or machine code once a run is long (auto).",
+)
 @click.option("--save", multiple=True, metavar="NAME=FILE.npy", help="Write an output to a new file.")
 @click.option("--replace", is_flag=True, help="Let --save replace files.")
 @click.option("--anyway", is_flag=True, help="Simulate a kernel even if `vliwsim check` shows it illegal.")
@@ -170,7 +176,7 @@ class _Job:
 
     def _run(self, kernel: Kernel, reference: Reference | None, case: Case) -> KernelRun:
         from vliwsim.faces.progress import Watcher
-        from vliwsim.kernel.runner import LIMIT, run_kernel
+        from vliwsim.kernel.runner import ENGINE, LIMIT, run_kernel
 
         with Watcher(f"{kernel.name} on {kernel.core.name}") as watcher:
             run = run_kernel(
@@ -182,6 +188,7 @@ class _Job:
                 interrupt_at=self.options["interrupt_at"],
                 watch=watcher,
                 listen=self._listener(kernel) if self.options["trace"] else None,
+                engine=self.options["engine"] or ENGINE,
             )
         if run.reason == "stopped":
             self.status = STOPPED

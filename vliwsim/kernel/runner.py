@@ -214,7 +214,8 @@ def run_kernel(
     ``reference``: the loaded reference, True to load the one beside the source, False or None to compare nothing.
     ``limit`` in cycles. ``interrupt_at``: cycle, from 0. ``watch`` is called now and then with the cycle and may stop
     the run. ``trace`` keeps a record of every beat, ``listen`` is called
-    with each. ``engine``: ``auto``, ``step`` or ``native``. ``quiet`` sends what the reference prints to standard error.
+    with each. ``engine``: one of ``auto``, ``step``, ``native``. ``quiet`` sends what the reference prints to standard
+    error.
 
     Raises :class:`~vliwsim.problems.InterfaceError` for inputs that do not fit, and
     :class:`~vliwsim.problems.ReferenceFailure`.
