@@ -61,25 +61,27 @@ def _link(source: str, reader: str, operands: int, shared: bool, fresh: str) -> 
 def _branch(core: Core) -> str:
     branch = core.branch
     text = f"latency {branch.latency}, {'may' if branch.overlap else 'may not'} overlap in flight"
-    return f"{text}, {branch.taken_penalty} cycles more when taken" if branch.taken_penalty else text
+    return f"{text}, {_cycles(branch.taken_penalty)} more when taken" if branch.taken_penalty else text
 
 
 def _memory(core: Core) -> Iterator[str]:
     memory = core.memory
-    yield f"{memory.size} bytes, {memory.endianness}-endian, {memory.banks} banks of {memory.bank_width} bytes"
+    banks = "1 bank" if memory.banks == 1 else f"{memory.banks} banks"
+    yield f"{memory.size} bytes, {memory.endianness}-endian, {banks} of {memory.bank_width} bytes"
     conflict = "freezes the core" if memory.conflict == "stall" else "is a hazard"
     broadcast = ", loads of the same words count once" if memory.broadcast else ""
     yield f"two accesses to a bank in a beat: {conflict}{broadcast}"
     yield f"a misaligned access {'is a hazard' if memory.misaligned == 'reject' else 'is split'}"
     for wait in memory.waits:
-        yield f"{wait.name}: {wait.bytes} bytes from {wait.start:#x} cost {wait.cycles} cycles more an access"
+        yield f"{wait.name}: {wait.bytes} bytes from {wait.start:#x} cost {_cycles(wait.cycles)} more an access"
 
 
 def _words(core: Core) -> str:
     words = core.words
     may = "may" if words.straddle else "may not"
     text = f"{words.bits} bits, fetched in groups of {words.group}; a bundle {may} straddle groups"
-    return f"{text}; a branch to one that does costs {words.straddle_freeze} cycles" if words.straddle_freeze else text
+    freeze = _cycles(words.straddle_freeze) if words.straddle_freeze else ""
+    return f"{text}; a branch to one that does costs {freeze}" if freeze else text
 
 
 def ranges(names: Iterable[str]) -> str:
@@ -97,3 +99,7 @@ def ranges(names: Iterable[str]) -> str:
 def _run(run: Sequence[tuple[str, int]]) -> str:
     first, last = (f"{cluster}{number}" for cluster, number in (run[0], run[-1]))
     return first if len(run) == 1 else f"{first}..{last}"
+
+
+def _cycles(count: int) -> str:
+    return "1 cycle" if count == 1 else f"{count} cycles"
