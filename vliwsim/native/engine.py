@@ -9,6 +9,7 @@ from vliwsim.machine.hazards import HazardMet
 from vliwsim.machine.outcome import Outcome
 from vliwsim.machine.state import State
 from vliwsim.machine.stepper import FOREVER, Machine
+from vliwsim.native import cache
 from vliwsim.native.compiler import Code, compile_text
 from vliwsim.native.contexts import Context, Contexts, Flight, Turn
 from vliwsim.native.loaded import Loaded
@@ -56,9 +57,13 @@ class Native:
 
     def _translate(self, seed: Context, undefined: int) -> Loaded:
         translation = Translation(Region(self.walker, seed, undefined))
-        made = Loaded(self.machine, translation, Code(compile_text(translation.text("run"), self.effort)))
+        made = Loaded(self.machine, translation, self.code(translation.text("run")))
         self.regions.append(made)
         return made
+
+    def code(self, text: str) -> Code:
+        """The loaded code of a text; what took effort to compile is kept between runs."""
+        return cache.code_of(text, self.effort) if self.effort else Code(compile_text(text, 0))
 
     def context_of(self, state: State) -> Context | None:
         """The context of a state; None in a freeze, a service, behind ``halt`` or with undefined data in flight."""

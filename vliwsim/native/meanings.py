@@ -39,6 +39,9 @@ from vliwsim.description.operations import Operation
 from vliwsim.native import floating
 from vliwsim.native.text import Text, number
 
+LONG = 120
+"""Lines from which on a function is called rather than put in place."""
+
 Halves = tuple[int | None, ...]
 
 
@@ -115,7 +118,11 @@ class _Meaning(Text):
             parameters += [f"i8 %{n}.u" for n in self.widths]
         head = f"define {'' if external else 'internal '}{kind} @{name}({', '.join(parameters)})"
         body = "\n".join([*self.lines, f"  ret {kind} {made}" if fields else "  ret {} undef"])
-        return f"{head}{'' if external else ' alwaysinline'} nounwind {{\n{body}\n}}\n"
+        return f"{head}{self.inlined(external)} nounwind {{\n{body}\n}}\n"
+
+    def inlined(self, external: bool) -> str:
+        """Long ones are called: the code of a program would grow, and take long to make, out of all proportion."""
+        return "" if external else " noinline" if len(self.lines) > LONG else " alwaysinline"
 
     # ---------------------------------------------------------------------------------------------------- outputs
 
