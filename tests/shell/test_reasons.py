@@ -22,7 +22,7 @@ from vliwsim.shell.stalls import stall_here
 
 def changed(inputs: dict[str, Any], name: str, index: int) -> Iterator[dict[str, Any]]:
     """The inputs with one element changed, in ways that no rounding or saturation hides all of."""
-    for by in (1, -1, 1000, -1000, 8192):
+    for by in (1, -1000, 8192):
         array = inputs[name].copy()
         new = int(array[index]) + by
         if np.iinfo(array.dtype).min <= new <= np.iinfo(array.dtype).max:

@@ -24,6 +24,13 @@ class Unclear(VliwsimError):
         return " · ".join(" ".join(part.split()) for part in parts)
 
 
+def at_line(where: str, fault: Unclear) -> Unclear:
+    """The first problem of ``fault``, met at a line of a script."""
+    first = fault.problems[0]
+    allowed = first.allowed or "a line that the shell can follow"
+    return unclear(f"{where}: {' '.join(first.found.split())}", allowed, first.remedy, "script-line")
+
+
 def unclear(found: str, allowed: str = "", remedy: str = "", name: str = "bad-request") -> Unclear:
     """The exception for one request."""
     return Unclear(problem(name, found, allowed, remedy))

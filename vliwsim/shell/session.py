@@ -326,21 +326,19 @@ class Session:
             before = max(0, self.cycle - 1)
         self.go(before)
         if here(self.state):
-            return self._back_to_arrival(here)
-        came = self._first(here, before + CHUNK + 64 * section.beats, watch)
-        if came is None:
+            self._back_to_arrival(here)
+        elif self._first(here, before + CHUNK + 64 * section.beats, watch) is None:
             self.go(stood)
             return Arrival("nowhere")
-        return Arrival("there")
+        return self._stop_at_alarm(stood, watch)
 
-    def _back_to_arrival(self, here: Callable[[State], bool]) -> Arrival:
+    def _back_to_arrival(self, here: Callable[[State], bool]) -> None:
         """From where a bundle issues back to where it first stood at the point of issue."""
         while self.cycle > 0:
             self.history.put(self._scratch, self.cycle - 1)
             if not here(self._scratch):
                 break
             self.go(self.cycle - 1)
-        return Arrival("there")
 
     def _to_bundle(self, place: Place, watch: Watch | None) -> Arrival:
         """The next visit ahead; where there is none the latest one before."""
@@ -355,7 +353,7 @@ class Session:
             if scratch.counts[index[0]] != count or was_here or scratch.at == index[0]:
                 self.go(low)
                 if self._first(here, low + CHUNK, None) is not None:
-                    return self._stop_at_alarm(stood)
+                    return self._stop_at_alarm(stood, watch)
             if scratch.cycle < low + CHUNK:
                 break
             low = scratch.cycle
@@ -365,13 +363,13 @@ class Session:
         self.go(stood)
         return self.search_back(here, watch)
 
-    def _stop_at_alarm(self, stood: int) -> Arrival:
+    def _stop_at_alarm(self, stood: int, watch: Watch | None) -> Arrival:
         """Standing alarms between where the run stood and where it is now go first."""
-        if not self.alarms:
-            return Arrival("there")
         there = self.cycle
+        if not self.alarms or there <= stood:
+            return Arrival("there")
         self.go(stood)
-        return self._ahead(there, None)
+        return self._ahead(there, watch)
 
     # ---------------------------------------------------------------------------------------------------------- alarms
 

@@ -15,7 +15,7 @@ from vliwsim.faces.shell.lines import Line, wrapped
 from vliwsim.faces.shell.scripts import read_script
 from vliwsim.shell.conditions import condition
 from vliwsim.shell.edits import suppose
-from vliwsim.shell.faults import Unclear, listed, nearest, unclear
+from vliwsim.shell.faults import Unclear, at_line, listed, nearest, unclear
 from vliwsim.shell.forms import form_named
 from vliwsim.shell.history import Watch
 from vliwsim.shell.origins import Step, maker, origin_of
@@ -353,7 +353,7 @@ class Shell:
                 try:
                     self.follow(text)
                 except Unclear as fault:
-                    raise unclear(f"{path}:{number}: {fault.line}", name="script-line") from None
+                    raise at_line(f"{path}:{number}", fault) from None
         finally:
             self._playing.pop()
 

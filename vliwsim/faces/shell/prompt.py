@@ -20,7 +20,7 @@ from vliwsim.faces.shell.completion import offers
 from vliwsim.faces.shell.lines import TINTS, Line, plain, tint
 from vliwsim.faces.shell.view import prompt_text
 from vliwsim.problems import OptionError
-from vliwsim.shell.faults import Unclear, unclear
+from vliwsim.shell.faults import Unclear, at_line
 from vliwsim.shell.session import Session
 
 if TYPE_CHECKING:
@@ -133,7 +133,7 @@ def _piped(shell: Shell) -> None:
         try:
             shell.follow(text)
         except Unclear as fault:
-            raise unclear(f"line {number} of the input: {fault.line}", name="script-line") from None
+            raise at_line(f"line {number} of the input", fault) from None
 
 
 def _begin(shell: Shell, title: str, first: Callable[[Shell], None] | None) -> None:

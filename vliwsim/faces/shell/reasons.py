@@ -305,7 +305,7 @@ def stall(session: Session, found: Stall, width: int) -> list[Line]:
     bundle = layout.where(found.bundle, found.within)
     left = f", {found.left} cycles to go" if found.left > 1 else ""
     who = f"{bundle} waits" if waiting else f"behind {bundle}"
-    lines: list[Line] = [[("", f"  cycle {found.cycle} issues nothing: {CAUSES[found.cause]}, {who}{left}")]]
+    lines = wrapped(f"cycle {found.cycle} issues nothing: {CAUSES[found.cause]}, {who}{left}", width)
     for role, flight in found.flights:
         site = flight.site
         name = layout.register(flight.register)
