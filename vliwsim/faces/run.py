@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from vliwsim.faces.interrupt_report import Moment
 from vliwsim.faces.options import core_options, given_values, load, save_outputs, save_targets
 from vliwsim.problems import OptionError, VliwsimError, problem
 
@@ -48,9 +49,9 @@ NOT_SIMULATED = (
 @click.option("--limit", type=click.IntRange(min=1), metavar="CYCLES", help="Give a run up after so many cycles.")
 @click.option(
     "--interrupt-at",
-    type=click.IntRange(min=0),
-    metavar="CYCLE",
-    help="Take one interrupt at or after this cycle, from 0.",
+    type=Moment(),
+    metavar="CYCLE|every",
+    help="Take one interrupt at or after this cycle, from 0; or run it once for `every` cycle that allows one.",
 )
 @click.option(
     "--engine",
@@ -107,6 +108,9 @@ class _Job:
             raise OptionError(
                 problem("bad-option", "--case all with --save or --trace", "one case with --save or --trace")
             )
+        if options["interrupt_at"] == "every" and (options["case"] == "all" or options["save"] or options["debug"]):
+            found = "--interrupt-at every with --case all, --save or --debug"
+            raise OptionError(problem("bad-option", found, "one case", "vliwsim regress --interrupts for all cases"))
         if options["debug"] and (self.as_json or options["cases"] or options["case"] == "all"):
             raise OptionError(problem("bad-option", "--debug with --json, --cases or --case all", "one run to debug"))
         given = given_values(options["give"])
@@ -131,6 +135,8 @@ class _Job:
 
         run = self._run(kernel, reference, case_with(kernel, reference, options["case"], given))
         self._say(lambda: self._report(run))
+        if options["interrupt_at"] == "every" and run.reason == "halt":
+            return self._every(run)
         if run.reason == "halt" and targets:
             save_outputs(targets, dict(run.outputs), options["replace"])
         elif targets:
@@ -140,6 +146,17 @@ class _Job:
 
             open_at_failure(run, options["interrupt_at"])
         return run.as_json()
+
+    def _every(self, run: KernelRun) -> object:
+        """The run interrupted at every cycle that allows it; the data for ``--json``."""
+        from vliwsim.faces import interrupt_report
+        from vliwsim.kernel.runner import LIMIT
+
+        found = interrupt_report.injected(run, self.options["limit"] or LIMIT)
+        self._say(lambda: f"\n{interrupt_report.text(found)}")
+        if found.harms:
+            self.status = max(self.status, 1)
+        return {**run.as_json(), "interrupts": interrupt_report.data(found)}
 
     def _refused(self, kernel: Kernel) -> object | None:
         """What to print instead of running a kernel that is illegal on some path; None for one that may run."""
@@ -185,7 +202,7 @@ class _Job:
                 case=case.name,
                 reference=reference,
                 limit=self.options["limit"] or LIMIT,
-                interrupt_at=self.options["interrupt_at"],
+                interrupt_at=None if self.options["interrupt_at"] == "every" else self.options["interrupt_at"],
                 watch=watcher,
                 listen=self._listener(kernel) if self.options["trace"] else None,
                 engine=self.options["engine"] or ENGINE,
