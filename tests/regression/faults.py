@@ -86,7 +86,7 @@ FAULTS = [
     Fault("wrong shift", WINDOW, "@3 * k + 4  sll.h2.sat  g6, g2, g12", "@3 * k + 4  sra.h2      g6, g2, g12"),
     Fault("stored over the neighbour", WINDOW, "addr(y) + 8", "addr(y) + 4", "legal"),
     Fault("last store out of place", WINDOW, "@1          sd  g8, [g13]", "@1          sd  g8, [g13 - 16]"),
-    Fault("smaller for larger", PEAK, "            maxu.h2   h7, h6, g6\n", "            minu.h2   h7, h6, g6\n"),
+    Fault("smaller for larger", PEAK, "            maxu.h2   h7, h6, g6", "            minu.h2   h7, h6, g6"),
     Fault(
         "smallest for largest so far", PEAK, "            maxu.h2   top, top, h7", "            minu.h2   top, top, h7"
     ),
