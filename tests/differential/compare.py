@@ -14,6 +14,7 @@ ENGINES = {
     "cycle by cycle": dict(log=True),
     "snapshots": dict(log=True, snapshots=True),
     "native": dict(native=True),
+    "native, undefined bytes too": dict(native=True, following=True),
 }
 """Ways to run the package's machine: keyword arguments of :func:`.real.run`."""
 

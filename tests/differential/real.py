@@ -120,10 +120,12 @@ def run(
     careful: bool = False,
     snapshots: bool = False,
     native: bool = False,
+    following: bool = False,
 ) -> Outcome:
     """As the model's ``run``. ``careful``: by definition only. ``snapshots``: save, spoil and restore every cycle.
 
-    ``native``: with the fast engine, which translates from the first cycle on and again wherever it is left alone.
+    ``native``: with the fast engine, which translates from the first cycle on and again wherever it is left alone;
+    ``following``: undefined bytes too.
     """
     real = core_of(core)
     machine = Machine(program_of(real, program), careful=careful)
@@ -136,7 +138,7 @@ def run(
         if log or snapshots:
             by_cycles(machine, state, limit, passed, snapshots)
         elif native:
-            Native(machine, patience=3, effort=0).advance(state, limit)
+            Native(machine, patience=3, effort=0, following=following).advance(state, limit)
         else:
             machine.advance(state, limit)
         if state.halt_beat is not None:  # the model's limit does not cut a drain short

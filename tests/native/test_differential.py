@@ -14,7 +14,8 @@ from vliwsim.machine.state import State
 from vliwsim.machine.stepper import FOREVER
 from vliwsim.native.engine import Native
 
-PROGRAMS = 60
+FORMS = ("native", "native, undefined bytes too")
+PROGRAMS = 40
 LONG_PROGRAMS = 100_000
 CHUNK = 500
 
@@ -23,7 +24,7 @@ def chunk(first: int, count: int = CHUNK) -> list[tuple[int, str]]:
     return [
         (seed, difference)
         for seed in range(first, first + count)
-        for difference in differences(trial(Random(seed)), "native")
+        for difference in differences(trial(Random(seed)), *FORMS)
     ]
 
 

@@ -31,11 +31,12 @@ class Native:
 
     ``regions``: what has been translated. ``patience``: cycles the stepper goes on, where no context fits, before a
     translation from there is made. ``effort``: LLVM's optimisation level.
+    ``following``: carry undefined bytes along, which is slower, instead of leaving them to the stepper.
     """
 
-    def __init__(self, machine: Machine, *, patience: int = PATIENCE, effort: int = 2) -> None:
+    def __init__(self, machine: Machine, *, patience: int = PATIENCE, effort: int = 2, following: bool = False) -> None:
         self.machine = machine
-        self.patience, self.effort = patience, effort
+        self.patience, self.effort, self.following = patience, effort, following
         self.walker = Contexts(machine.ready)
         self.regions: list[Loaded] = []
 
@@ -56,7 +57,7 @@ class Native:
         return self._translate(seed, sum(1 << r for r in registers if isinstance(state.operands[r], Undefined)))
 
     def _translate(self, seed: Context, undefined: int) -> Loaded:
-        translation = Translation(Region(self.walker, seed, undefined))
+        translation = Translation(Region(self.walker, seed, undefined), self.following)
         made = Loaded(self.machine, translation, self.code(translation.text("run")))
         self.regions.append(made)
         return made
@@ -72,7 +73,7 @@ class Native:
         flights = []
         for beat, batches in state.flight.items():
             for numbers, values in batches:
-                if any(isinstance(value, Undefined) for value in values):
+                if not self.following and any(isinstance(value, Undefined) for value in values):
                     return None
                 flights += [Flight(beat - state.beat, n, True) for n in numbers]
         turns = self._turns_of(state)

@@ -6,7 +6,7 @@ import ctypes
 
 import numpy as np
 
-from vliwsim.description.values import Undefined
+from vliwsim.description.values import Undefined, Value, parts, value_of
 from vliwsim.machine.state import NEVER, State
 from vliwsim.machine.stepper import Machine
 from vliwsim.native import exchange
@@ -14,7 +14,7 @@ from vliwsim.native.compiler import Code
 from vliwsim.native.contexts import Context
 from vliwsim.native.translate import Translation
 
-Match = tuple[int, list[int], list[int], list[int]]
+Match = tuple[int, list[Value], list[int], list[int]]
 """A context index, and for its flights their values and bits, and the bits of its turns."""
 
 _FUNCTION = ctypes.CFUNCTYPE(None, ctypes.c_void_p, ctypes.c_void_p, ctypes.c_void_p)
@@ -25,6 +25,7 @@ class Loaded:
 
     def __init__(self, machine: Machine, translation: Translation, code: Code) -> None:
         self.machine, self.translation, self.code = machine, translation, code
+        self.following = translation.following
         self.region, self.layout = translation.region, translation.layout
         self.function = _FUNCTION(code.address("run"))
         self.block = np.zeros(self.layout.bytes, np.uint8)
@@ -35,6 +36,7 @@ class Loaded:
         self.masks = self.view(at.masks, np.uint8, len(machine.core.register_names))
         flights = at.value_masks - at.values >> 2
         self.values = self.view(at.values, np.uint32, flights)
+        self.value_masks = self.view(at.value_masks, np.uint8, at.value_on - at.value_masks)
         self.value_on = self.view(at.value_on, np.uint8, at.turn_on - at.value_on)
         self.turn_on = self.view(at.turn_on, np.uint8, at.counts - at.turn_on)
         self.counts = self.view(at.counts, np.int64, at.noted - at.counts >> 3)
@@ -45,7 +47,7 @@ class Loaded:
             context = region.steps[k].context
             self.entries.setdefault((context.at, context.within, context.waited), []).append(k)
         self.chain_of = np.array([translation.chain_counter[c] for c in translation.chain], np.int64)
-        self.place = np.array(region.place, np.int64)
+        self.place = np.array([0] * len(region) if self.following else region.place, np.int64)
         self.bundle_of = np.array([step.context.at for step in region.steps], np.int64)
         self.beginning = np.array([step.context.within == 0 for step in region.steps], np.int64)
         self.holding = np.array([step.held for step in region.steps], bool)
@@ -65,11 +67,11 @@ class Loaded:
         for beat, batches in state.flight.items():
             for numbers, values in batches:
                 for n, value in zip(numbers, values, strict=True):
-                    if isinstance(value, Undefined):
+                    if isinstance(value, Undefined) and not self.following:
                         return None
                     flying[beat - state.beat, n] = value
         undefined = 0
-        for register in range(len(self.registers)):
+        for register in range(0 if self.following else len(self.registers)):
             if isinstance(state.operands[register], Undefined):
                 undefined |= 1 << register
         busy = tuple((slot, until - state.beat) for slot, until in enumerate(state.busy_until) if until > state.beat)
@@ -82,13 +84,14 @@ class Loaded:
                 return match
         return None
 
-    def _fits(self, k: int, context: Context, flying: dict[tuple[int, int], int], state: State) -> Match | None:
-        values, bits = [], []
+    def _fits(self, k: int, context: Context, flying: dict[tuple[int, int], Value], state: State) -> Match | None:
+        values: list[Value] = []
+        bits: list[int] = []
         for flight in context.flights:
             value = flying.get((flight.beats, flight.number))
             if value is None and flight.sure:
                 return None
-            values.append(value or 0)
+            values.append(0 if value is None else value)
             bits.append(int(value is not None))
         if sum(bits) != len(flying):
             return None
@@ -114,13 +117,10 @@ class Loaded:
         self.header[:] = 0
         self.header[exchange.CONTEXT], self.header[exchange.FUEL] = k, fuel
         self.counts[:] = 0
-        operands = state.operands
         for register in range(len(self.registers)):
-            value = operands[register]
-            unknown = isinstance(value, Undefined)
-            self.registers[register] = 0 if unknown else value
-            self.masks[register] = unknown
-        self.values[: len(values)] = values
+            self.registers[register], self.masks[register] = parts(state.operands[register])
+        for j, value in enumerate(values):
+            self.values[j], self.value_masks[j] = parts(value)
         self.value_on[: len(bits)] = bits
         self.turn_on[: len(turns)] = turns
         self._note(state)
@@ -147,8 +147,9 @@ class Loaded:
         """Make the state what the code left."""
         header, region = self.header, self.region
         k, reason = int(header[exchange.CONTEXT]), int(header[exchange.REASON])
-        for register in np.flatnonzero(self.masks == 0).tolist():
-            state.operands[register] = int(self.registers[register])
+        known = range(len(self.registers)) if self.following else np.flatnonzero(self.masks == 0).tolist()
+        for register in known:
+            state.operands[register] = value_of(int(self.registers[register]), int(self.masks[register]))
         self._account(state, k, reason)
         if reason == exchange.HALTED:
             self._halted(state, k)
@@ -161,7 +162,8 @@ class Loaded:
         for j, flight in enumerate(context.flights):
             if self.value_on[j]:
                 lands = state.beat + flight.beats
-                state.flight.setdefault(lands, []).append(((flight.number,), (int(self.values[j]),)))
+                value = value_of(int(self.values[j]), int(self.value_masks[j]))
+                state.flight.setdefault(lands, []).append(((flight.number,), (value,)))
                 register = sites[flight.number].write.register
                 state.ready[register] = max(state.ready[register], lands)
         state.redirects = {}

@@ -87,7 +87,8 @@ class Translation(Beats):
         body = self.lines
         self.lines = []
         self.enter()
-        lines = [*self.lines, *body]
+        made = [f"  {variable} = alloca {kind}" for variable, kind in sorted(self.variables.items())]
+        lines = [*made, *self.lines, *body]
         calls = "\n".join(
             function(operation, halves, own, self.following) for (operation, halves), own in self.functions.items()
         )
@@ -96,9 +97,7 @@ class Translation(Beats):
         return f"{calls}\n{charges}\n{head}" + "\n".join(lines) + "\n}\n"
 
     def enter(self) -> None:
-        """Variables made and filled, and the way to the context entered at."""
-        for variable, kind in sorted(self.variables.items()):
-            self.put(f"{variable} = alloca {kind}")
+        """Variables filled, and the way to the context entered at."""
         at = self.layout
         self.put(f"%fuel0 = load i64, ptr {self.header(FUEL)}")
         self.put("store i64 %fuel0, ptr %fuel")
@@ -184,6 +183,8 @@ class Translation(Beats):
             if self.following:
                 missing = self.let(f"load i8, ptr {self.mask_slot(flight.number, flight.beats)}")
                 self.put(f"store i8 {missing}, ptr {self.place(at.value_masks + j)}")
+            else:
+                self.put(f"store i8 0, ptr {self.place(at.value_masks + j)}")
             on = "1"
             if not flight.sure:
                 on = self.let(f"load i1, ptr {self.on_slot(flight.number, flight.beats)}")
@@ -209,7 +210,7 @@ class Translation(Beats):
             if self.masked(register):
                 missing = self.let(f"load {'i8' if self.following else 'i1'}, ptr %u{register}")
                 if not self.following:
-                    missing = self.let(f"zext i1 {missing} to i8")
+                    missing = self.select(missing, "i8", "15", "0")
                 self.put(f"store i8 {missing}, ptr {self.place(at.masks + register)}")
         self.put(f"store i64 {self.let('load i64, ptr %fuel')}, ptr {self.header(FUEL)}")
         for cause, number in STALLS.items():
