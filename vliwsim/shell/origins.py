@@ -23,7 +23,7 @@ from vliwsim.shell.trace import Beat, Landed, Store, Stretch, backwards
 
 Key = tuple[int, int, int, bool]
 """Beat, bundle, instruction, and whether its updated base is meant: that depends on less than its results do."""
-MOST = 60_000
+MOST = 30_000
 """Operations that one question follows, at most."""
 
 

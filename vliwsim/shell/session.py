@@ -233,6 +233,14 @@ class Session:
     def seek(self, wanted: Condition, back: bool = False, watch: Watch | None = None) -> Arrival:
         """Go to the nearest cycle after this one, or before it, where the condition holds. Alarms do not stop it."""
         stood = self.cycle
+        if wanted.text == "illegal" and not back:  # there is one such cycle at most, the last
+            self._moment = None
+            if not self.history.go_on(self.state, FOREVER, watch):
+                return Arrival("stopped")
+            if self.hazard_at(self.cycle) is not None and self.cycle > stood:
+                return Arrival("there")
+            self.go(stood)
+            return Arrival("nowhere")
         try:
             if back:
                 return self.search_back(lambda state: wanted.holds(self, state), watch)

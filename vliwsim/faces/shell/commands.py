@@ -307,7 +307,7 @@ class Shell:
     def _suppose(self, rest: str) -> None:
         text, _, form = rest.rpartition(" as ")
         changed = suppose(self.session, text or rest, form_named(form) if text else None)
-        self.write([[("faint", f"  from here on another course of time, with {changed} changed; forget returns")]])
+        self.write([[("faint", f"  another course of time from here, with {changed} changed; forget returns")]])
         self.show()
 
     def _forget(self, rest: str) -> None:

@@ -35,6 +35,7 @@ class _Telling:
         self.session, self.origin, self.width, self.rows = session, origin, width, rows
         self.out: list[Line] = []
         self.told: set[int] = set()
+        self.folded: set[int] = set()
         self.cut = False
 
     def lines(self) -> list[Line]:
@@ -81,12 +82,17 @@ class _Telling:
         if id(step) in self.told:
             self._say(depth, [*head[: len(step.values) * 2 - 1 or 1], ("faint", ", told above")])
             return
+        if id(step) in self.folded:
+            self._say(depth, [*head[: len(step.values) * 2 - 1 or 1], ("faint", ", one of the run below")])
+            return
         self.told.add(id(step))
         self._say(depth, head)
         if depth >= DEEPEST and step.sources:
             self._beyond(step, depth + 1)
             return
         chain = self._chain(step)
+        if len(chain) > 1:
+            self.folded |= {id(one) for one in chain}
         self._operands(step, depth + 1, chain[0] if chain else None)
         if len(chain) > 1:
             last = chain[-1]
@@ -141,7 +147,8 @@ class _Telling:
         here = step
         while True:
             following = self._same(here)
-            if following is None or id(following) in self.told or len(chain) > len(self.origin.steps):
+            met = id(following) in self.told or id(following) in self.folded
+            if following is None or following.cycle < 0 or met:
                 return chain
             chain.append(following)
             here = following
