@@ -83,7 +83,7 @@ def inputs(kernel: LoadedKernel | Kernel, **fixed: Any) -> SearchStrategy[dict[s
 def _sizes(interface: Interface, fixed: Mapping[str, Any]) -> list[dict[str, int]]:
     """Assignments of sizes, and of the scalars that ``needs`` speaks of, the smallest first."""
     search = Search(interface, fixed)
-    found = search.smallest(SMALL_SIZES)
+    found = search.smallest(SMALL_SIZES) if not search.scalars else search.smallest_sizes(SMALL_SIZES // 4)
     for base in list(found[:8]):
         for name in search.scalars & base.keys():
             element = interface.element(name)
