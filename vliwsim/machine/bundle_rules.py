@@ -24,7 +24,7 @@ def static_hazard(core: Core, parts: tuple[Part, ...]) -> tuple[int, int, str] |
         if part.operation.operation_class not in slot.classes:
             return (
                 k,
-                1,
+                ROUND_ONE.index("slot-class"),
                 f"{name} is of class {part.operation.operation_class}; {slot.name} executes {', '.join(slot.classes)}",
             )
         guard = instruction.guard
@@ -36,7 +36,7 @@ def static_hazard(core: Core, parts: tuple[Part, ...]) -> tuple[int, int, str] |
             if len(registers) > cluster.read_ports:
                 return (
                     k,
-                    4,
+                    ROUND_ONE.index("read-ports"),
                     f"{len(registers)} registers of cluster {cluster.name} read, {cluster.read_ports} read ports",
                 )
         complaint = _links(core, part, crossed)

@@ -127,7 +127,6 @@ def branch_target(ready: Preparation, state: State, part: Part) -> int | None:
 
 def commit(ready: Preparation, state: State, prepared: Prepared, issued: Issued) -> None:
     """Make the bundle count: stores change memory, results take off, units get busy, freezes are due."""
-    core = ready.core
     for address, size, value in issued.stores:
         state.memory.store(address, size, value)
     for latency, batch in issued.results:
@@ -144,4 +143,3 @@ def commit(ready: Preparation, state: State, prepared: Prepared, issued: Issued)
     state.begun[prepared.index] += state.within == 0
     state.frozen.extend([cause, cycles] for cause, cycles in issued.freezes)
     state.waited_fresh = False
-    assert len(core.slots) == len(state.busy_until)

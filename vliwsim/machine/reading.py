@@ -12,12 +12,10 @@ from vliwsim.machine.prepared import Preparation, Prepared
 from vliwsim.machine.state import NoteSite, State
 
 
-def read(ready: Preparation, state: State, prepared: Prepared) -> tuple[Issued, dict[int, list[tuple[int, int]]]]:
-    """Step 3: judge both rounds; the guards of the bundle, and what is pending."""
+def read(ready: Preparation, state: State, prepared: Prepared) -> Issued:
+    """Step 3: judge both rounds; the guards of the bundle."""
     judge_round_one(ready, state, prepared)
-    out = {} if ready.core.interlocked else pending(ready, state)
-    issued = judge_round_two(ready, state, prepared, out)
-    return issued, out
+    return judge_round_two(ready, state, prepared, {} if ready.core.interlocked else pending(ready, state))
 
 
 def judge_round_one(ready: Preparation, state: State, prepared: Prepared) -> None:

@@ -78,7 +78,7 @@ class Machine:
             state.waited_fresh |= cause == "fresh"
             self._idle_beat(state, cause)
             return cause
-        issued, _ = phases.read(ready, state, prepared)
+        issued = phases.read(ready, state, prepared)
         phases.execute(ready, state, prepared, issued)
         phases.commit(ready, state, prepared, issued)
         try:
