@@ -7,8 +7,10 @@ import random
 import pytest
 
 from tests.shell.helping import complete, fresh_states, from_text, session
+from vliwsim.machine.stepper import Machine
 from vliwsim.shell import history
 from vliwsim.shell.conditions import condition
+from vliwsim.shell.edits import suppose
 from vliwsim.shell.engine import Swift
 from vliwsim.shell.history import BUDGET, FINE, History
 from vliwsim.shell.places import place
@@ -83,6 +85,51 @@ finish:
 @0 mv g3, g3
    halt
 """
+
+
+def test_a_run_with_a_hazard_has_exact_time_up_to_it() -> None:
+    text = HOLDING.replace("lone4", "pair7").replace("@2 count g4, loop", "@2 count g4, nowhere")
+    text = text.replace("g4", "g16").replace("@0 mv g3, g3", "@0 lw g3, [g3]").replace("nowhere", "finish")
+    one = from_text(text, {"x": [1, 2, 3, 4]})
+    machine = Machine(one.kernel.program, careful=True)
+    assert one.to_end().why == "hazard"
+    last = one.cycle
+    assert one.hazard_at(last) is not None
+    choose = random.Random(1)
+    for _ in range(40):
+        cycle = choose.randrange(last + 3)
+        arrival = one.go(cycle)
+        assert (arrival.why == "hazard") == (cycle > last)
+        state = machine.start({}, (), one.state.memory.regions)
+        state.restore(one.recorded.first)
+        machine.advance(state, min(cycle, last))
+        assert complete(one.machine, one.state) == complete(machine, state)
+
+
+def test_time_on_a_branch_is_that_of_a_run_from_the_edited_state() -> None:
+    one = session("energy", {"n": 128})
+    recorded = fresh_states(one)
+    one.go(20)
+    suppose(one, "g20 = 3")
+    machine = Machine(one.kernel.program, careful=True)
+    choose = random.Random(2)
+    for _ in range(60):
+        cycle = choose.randrange(60)
+        one.go(cycle)
+        if one.cycle < 20:
+            assert complete(one.machine, one.state) == recorded[one.cycle]
+            continue
+        state = machine.start({}, (), one.state.memory.regions)
+        state.restore(one.history.first)
+        machine.advance(state, one.cycle)
+        if one.state.finished:
+            machine.advance(state)
+        assert complete(one.machine, one.state) == complete(machine, state)
+    assert one.history.last is not None
+    one.forget()
+    assert one.cycle == 20
+    one.to_end()
+    assert complete(one.machine, one.state) == recorded[-1]
 
 
 def test_it_stops_at_the_end_and_at_the_start() -> None:

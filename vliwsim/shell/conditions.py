@@ -44,13 +44,15 @@ class Condition:
     eventful: bool
     term: Term
     events: dict[str, Callable[[State], bool]]
+    _reads: bool = True
+    """Whether it asks for registers, which costs time."""
 
     def holds(self, session: Session, state: State) -> bool:
         """Whether it holds at the moment of ``state``; where something it asks for is undefined it does not.
 
         Raises :class:`~vliwsim.shell.faults.Unclear` where it has no value.
         """
-        registers = seen(session.machine, state)
+        registers = seen(session.machine, state) if self._reads else []
         events = {name: (lambda e=event: e(state)) for name, event in self.events.items()}
         try:
             return bool(self.term.value(session.names, state, registers, events))
@@ -75,7 +77,8 @@ def condition(session: Session, text: str) -> Condition:
     left = re.search(r"\b(landed|stored|stalled|illegal|differs)\b", written)
     if left and left[1] not in session.names.all():
         raise unclear(f"{left[1]} with nothing behind it", "landed g6, stored y[3]")
-    return Condition(text.strip(), bool(events), term(session.names, written, made), events)
+    parsed = term(session.names, written, made)
+    return Condition(text.strip(), bool(events), parsed, events, parsed.reads_registers(session.names))
 
 
 def _event(session: Session, match: re.Match[str]) -> Callable[[State], bool]:

@@ -176,6 +176,10 @@ class Term:
     def names(self) -> frozenset[str]:
         return frozenset(self.formula.names)
 
+    def reads_registers(self, names: Names) -> bool:
+        """Whether its value depends on registers."""
+        return bool(self.halves) or any(n in names.registers or n in names.scalars for n in self.formula.names)
+
     def value(self, names: Names, state: State, registers: list[Value], events: Mapping[str, Callable[[], Any]]) -> Any:
         """The value at a moment. Raises :class:`UndefinedHere`, or :class:`Unclear` where there is no value."""
         more: dict[str, Callable[[], Any]] = dict(events)
