@@ -56,9 +56,9 @@ class Problem:
         lines = ["  ".join(head)]
         if self.excerpt.strip() and self.place:
             text, caret = _window(self.excerpt.rstrip(), self.place.column - 1)
-            lines += [f"    {_plain(text)}", "    " + " " * caret + "^"]
+            lines += [f"    {printable(text)}", "    " + " " * caret + "^"]
         parts = (("found   ", self.found), ("allowed ", self.allowed), ("try     ", self.remedy))
-        lines += [f"  {word} {_short(_plain(text))}" for word, text in parts if text or word == "found   "]
+        lines += [f"  {word} {_short(printable(text))}" for word, text in parts if text or word == "found   "]
         return "\n".join(lines)
 
     def as_json(self) -> dict[str, object]:
@@ -74,7 +74,7 @@ class Problem:
         return out
 
 
-def _plain(text: str) -> str:
+def printable(text: str) -> str:
     """One line of printable characters: files of strangers neither steer a terminal nor break our form."""
     if text.isprintable():
         return text

@@ -12,6 +12,7 @@ from __future__ import annotations
 import argparse
 import contextlib
 import functools
+import io
 import json
 import os
 import resource
@@ -23,6 +24,7 @@ import tempfile
 import time
 import traceback
 import warnings
+import zipfile
 from collections import Counter
 from collections.abc import Callable, Iterator
 from itertools import pairwise
@@ -32,13 +34,16 @@ from random import Random
 import attrs
 import numpy as np
 
-from tests.kernel.sources import DOUBLE, SUM
+from tests.kernel.sources import DOUBLE, REFERENCES, SUM
 from tests.robustness import mutate
 from tests.robustness.rows_cores import SMALL
 from tests.robustness.rows_operations import CORE, PEAK
 from tests.robustness.workshop import Result, call, contents, npy, write
 from vliwsim.description.places import isa_folder, programs_folder
+from vliwsim.kernel.goldens import record, to_bytes
 from vliwsim.kernel.loading import assemble_source
+from vliwsim.kernel.reference import Reference
+from vliwsim.kernel.runner import run_kernel
 from vliwsim.problems import ImageError
 from vliwsim.program.encoding.image import read_image
 
@@ -139,7 +144,8 @@ def _encoded(text: str, random: Random) -> bytes:
 
 
 def a_source(random: Random) -> Mutant:
-    text = mutate.text(random.choice(sources()), random, everything())
+    original = random.choice(sources())
+    text = mutate.text(original, random, everything())
     limit = ["--no-reference", "--limit", str(CYCLES)]
     commands = [
         ["run", "x.vliw", *limit],
@@ -151,8 +157,11 @@ def a_source(random: Random) -> Mutant:
         ["run", "x.vliw", *limit, "--core", random.choice(("lone2", "lone4", "pair7", "ring16", "float3"))],
         ["assemble", "x.vliw", "-o", "out.image"],
         ["assemble", "x.vliw", "-o", "out.image"],
+        ["check", "x.vliw", "--cap", "400", "--sarif", "out.sarif"],
+        ["check", "x.vliw", "--cap", "400", "--json"],
+        ["compare", "y.vliw", "x.vliw", "--give", "n=8", "--no-reference", "--json"],
     ]
-    return Mutant("source", {"x.vliw": _encoded(text, random)}, random.choice(commands))
+    return Mutant("source", {"x.vliw": _encoded(text, random), "y.vliw": original.encode()}, random.choice(commands))
 
 
 def a_core(random: Random) -> Mutant:
@@ -219,6 +228,79 @@ def an_array(random: Random) -> Mutant:
     return Mutant("array", files, ["run", "x.vliw", "--give", "x=x.npy", "--limit", str(CYCLES)])
 
 
+SCRIPT = """\
+ahead 3
+here
+flight g4
+at loop@2 pass 2
+at cycle 9
+back 2
+seek landed g4
+seek back stalled
+alarm stalled
+alarms
+silence 1
+tell g4 + 1 as q15
+tell x[0:2], g10
+why g4
+uses g10
+judge
+suppose g4 = 7
+ahead
+forget
+draw x[0:3]
+at end
+at wrong sum
+leave
+"""
+
+
+def a_script(random: Random) -> Mutant:
+    """Commands of the shell, on a run that is short."""
+    lines = SCRIPT.splitlines(keepends=True)
+    script = mutate.text("".join(random.sample(lines, random.randint(1, 6))), random, [SCRIPT, SUM])
+    files = {"x.vliw": SUM.encode(), "play.txt": _encoded(script, random)}
+    return Mutant("script", files, ["debug", "x.vliw", "--give", "x=3,4,5", "--play", "play.txt"])
+
+
+@functools.cache
+def goldens() -> list[tuple[dict[str, bytes], int]]:
+    """Members of golden files of SUM, of both formats, and how they are packed."""
+    kernel = assemble_source(str(Path("x.vliw")))  # the working folder has it
+    reference = Reference(Path("reference.py"), lambda x: int(x.astype(int).sum()), None, "")
+    inputs = {f"n-{n}": {"x": np.arange(n, dtype=np.int16)} for n in (1, 5)}
+    runs = [run_kernel(kernel, given, case=name, reference=reference) for name, given in inputs.items()]
+    with zipfile.ZipFile(io.BytesIO(to_bytes(record(runs, "2026-01-02", "tool", "")))) as archive:
+        new = {name: archive.read(name) for name in archive.namelist()}
+    old = {"given.x.npy": npy(np.arange(3, dtype=np.int16)), "returns.sum.npy": npy(3), "cycles.npy": npy(17)}
+    return [(new, zipfile.ZIP_STORED), (new, zipfile.ZIP_DEFLATED), (old, zipfile.ZIP_DEFLATED)]
+
+
+def a_golden(random: Random) -> Mutant:
+    """A golden file beside its kernel, with members damaged or as a whole."""
+    Path("x.vliw").write_text(SUM)
+    members, packed = random.choice(goldens())
+    members = dict(members)
+    if random.random() < 0.6:
+        name = random.choice(sorted(members))
+        if name.endswith(".npy"):
+            members[name] = mutate.array(members[name], random, arrays())
+        else:
+            members[name] = mutate.text(members[name].decode(), random, ["{}", SUM]).encode("utf-8", "surrogatepass")
+        if random.random() < 0.2:
+            members[random.choice(("../x", "/x", "9/given/x.npy", "0/given/y.npy", name + "x"))] = members.pop(name)
+    stream = io.BytesIO()
+    with zipfile.ZipFile(stream, "w", packed) as archive:
+        for name, content in members.items():
+            archive.writestr(zipfile.ZipInfo(name), content, packed)
+    whole = stream.getvalue()
+    if random.random() < 0.5:
+        whole = mutate.data(whole, random, [whole])
+    files = {"x.vliw": SUM.encode(), "reference.py": REFERENCES["total"].encode(), "golden/x.pair7.npz": whole}
+    options = random.choice(([], ["--show"]))
+    return Mutant("golden", files, ["golden", "x.vliw", "--case", "smallest", "--date", "2026-01-02", *options])
+
+
 SETTINGS = (
     "latency.load=5",
     "issue.rule=interlocked",
@@ -262,6 +344,7 @@ def a_line(random: Random) -> Mutant:
 
 MAKERS: tuple[Callable[[Random], Mutant], ...] = (
     *(a_source,) * 7, *(a_core,) * 4, *(a_table,) * 4, *(an_image,) * 3, *(an_array,) * 2, *(a_line,) * 2,
+    a_script, a_golden,
 )  # fmt: skip
 
 

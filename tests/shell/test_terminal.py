@@ -257,7 +257,7 @@ def test_a_broken_line_stops_a_script_with_its_number(tmp_path: Path, vliwsim: V
     path.write_text("ahead\n\nahead 1 1\nback\n")
     done = vliwsim("debug", EARLY, "--give", "x=5,-7,11,2,30,-1", "--play", str(path))
     assert done.returncode == 2
-    assert f"{path}:3: 1 1 · allowed: a number of cycles" in done.stderr
+    assert f"  found    {path}:3: 1 1\n  allowed  a number of cycles\n" in done.stderr
     assert done.stdout.rstrip().endswith("ahead 1 1")
     done = vliwsim("debug", EARLY, "--give", "x=5,-7,11,2,30,-1", given="ahead\njump\n")
     assert done.returncode == 2

@@ -19,7 +19,7 @@ from vliwsim.faces.shell.commands import COMMANDS, Shell
 from vliwsim.faces.shell.completion import offers
 from vliwsim.faces.shell.lines import TINTS, Line, plain, tint
 from vliwsim.faces.shell.view import prompt_text
-from vliwsim.problems import OptionError
+from vliwsim.problems import OptionError, printable
 from vliwsim.shell.faults import Unclear, at_line
 from vliwsim.shell.session import Session
 
@@ -129,7 +129,7 @@ def _piped(shell: Shell) -> None:
             break
         if not text.partition("#")[0].strip():
             continue
-        click.echo(prompt_text(shell.session) + text.strip())
+        click.echo(prompt_text(shell.session) + printable(text.strip()))
         try:
             shell.follow(text)
         except Unclear as fault:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 from vliwsim.description.files import open_regular
+from vliwsim.problems import printable
 from vliwsim.shell.faults import unclear
 
 LARGEST = 1 << 20
@@ -18,7 +19,7 @@ def read_script(path: Path) -> list[str]:
             data = stream.read(LARGEST + 1)
         if len(data) > LARGEST:
             raise unclear(f"{path} has more than {LARGEST} bytes", "a script of commands", name="script-file")
-        return data.decode("utf-8-sig").splitlines()
+        return [printable(line) for line in data.decode("utf-8-sig").splitlines()]
     except (OSError, ValueError) as error:
         said = getattr(error, "strerror", None) or "is no text in UTF-8"
         raise unclear(f"{path}: {said}", "a text file of commands", name="script-file") from None
