@@ -186,7 +186,11 @@ class _Telling:
         layout = self.session.layout
         if step.stored is not None and source.role == "memory":
             value, address, size = step.stored
-            shown: Line = [("", store_words(self.session, address, size, value))]
+            words = store_words(self.session, address, size, value)
+            if source is self.origin.root and isinstance(source.value, int):
+                array = self.session.names.arrays[source.name.partition("[")[0]]
+                words = f"{source.name} = {element_text(array.element, source.value)}"
+            shown: Line = [("", words)]
         elif step.values:
             shown = []
             for register, held in sorted(step.values.items()):
