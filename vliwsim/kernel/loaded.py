@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from functools import cached_property
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from vliwsim.description.core import Core
 from vliwsim.kernel.binding import describe
@@ -14,6 +14,9 @@ from vliwsim.kernel.loading import Changes, assemble_source
 from vliwsim.kernel.reference import Reference, load_reference
 from vliwsim.kernel.runner import LIMIT, KernelRun, run_kernel
 from vliwsim.program.kernel import Kernel
+
+if TYPE_CHECKING:
+    from vliwsim.kernel.many import ManyRuns
 
 
 class LoadedKernel:
@@ -70,6 +73,14 @@ class LoadedKernel:
             interrupt_at=interrupt_at,
             trace=trace,
         )
+
+    def run_many(
+        self, arrays: Mapping[str, Any], *, limit: int = LIMIT, progress: Callable[[int], None] | None = None
+    ) -> ManyRuns:
+        """Run many cases at once: of every array input a matrix, a row a case; see :func:`.many.run_many`."""
+        from vliwsim.kernel.many import run_many
+
+        return run_many(self.kernel, arrays, limit=limit, progress=progress)
 
     def __repr__(self) -> str:
         interface = interface_of(self.kernel)

@@ -45,6 +45,7 @@ class Beats(Text):
     def __init__(self, region: Region, following: bool) -> None:
         super().__init__()
         self.region, self.following = region, following
+        self.prefix = "following." if following else ""
         self.walker = region.walker
         self.ready, self.core = self.walker.ready, self.walker.core
         self.zero = {self.core.register_numbers[name] for name in self.core.zero_registers}
@@ -609,7 +610,7 @@ class Beats(Text):
         if not operation.outputs:
             return []
         key = operation, part.halves
-        name = self.functions.setdefault(key, f"op{len(self.functions)}")
+        name = self.functions.setdefault(key, f"{self.prefix}op{len(self.functions)}")
         given, made = widths(operation)
         values = [self.input(k, wanted, part, width) for wanted, width in zip(part.inputs, given, strict=True)]
         arguments = [f"i{width} {value.bits}" for value, width in zip(values, given, strict=True)]
@@ -685,7 +686,7 @@ class Beats(Text):
                 return None
             return bank, "0"
         key = tuple((a.size, a.store) for a in accesses)
-        name = self.charges.setdefault(key, f"charge{len(self.charges)}")
+        name = self.charges.setdefault(key, f"{self.prefix}charge{len(self.charges)}")
         arguments = ", ".join(f"i32 {a.address}, i1 {a.on or 'true'}" for a in accesses)
         made = self.let(f"call {{i64, i64}} @{name}({arguments})")
         bank = self.let(f"extractvalue {{i64, i64}} {made}, 0")
