@@ -15,11 +15,21 @@ from click.testing import CliRunner, Result
 import vliwsim
 from tests.kernel.sources import DOUBLE, SUM, write
 from vliwsim.faces.main import cli
-from vliwsim.kernel.goldens import Golden, differences, golden_path, read_golden, record, to_bytes, write_golden
+from vliwsim.kernel.goldens import (
+    Golden,
+    differences,
+    golden_path,
+    read_golden,
+    record,
+    source_digest,
+    to_bytes,
+    write_golden,
+)
 from vliwsim.kernel.runner import KernelRun
 from vliwsim.problems import GoldenError, InterfaceError
 from vliwsim.regression.claims import Options
 from vliwsim.regression.judge import Judge
+from vliwsim.regression.sources import targets
 
 DAY = "2030-01-31"
 
@@ -237,3 +247,27 @@ class TestAgainstAGolden:
         assert verdict.held
         assert {change.why for change in verdict.changes} == {"core"}
         assert any("another core" in claim.says for claim in verdict.claims)
+
+
+SHIPPED = sorted((Path(__file__).resolve().parents[2] / "programs").glob("*/golden/*.npz"))
+
+
+@pytest.mark.parametrize("path", SHIPPED, ids=lambda path: path.stem)
+def test_shipped_kernels_still_give_what_was_recorded(path: Path) -> None:
+    stem, _, core = path.stem.partition(".")
+    source = path.parent.parent / f"{stem}.vliw"
+    judge = Judge(str(source), core, Options())
+    assert judge.kernel.core.name == core
+    claims = list(judge.goldens())
+    assert claims
+    assert [claim.detail for claim in claims if claim.held is not True] == []
+    golden = judge.golden
+    assert golden is not None
+    assert golden.date
+    assert golden.reference_digest == source_digest((source.parent / "reference.py").read_text())
+
+
+def test_every_shipped_kernel_has_one() -> None:
+    programs = Path(__file__).resolve().parents[2] / "programs"
+    wanted = {golden_path(t.source, str(t.core)) for t in targets([str(programs)])}
+    assert wanted == set(SHIPPED)

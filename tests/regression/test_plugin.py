@@ -164,6 +164,7 @@ def test_under_xdist(shelf: pytest.Pytester) -> None:
     result.stdout.fnmatch_lines(["*stored by line 13, sh at loop@5, cycle 6*"])
 
 
+@pytest.mark.long
 @pytest.mark.xdist_group("packaging")
 def test_from_a_project_that_only_installs_the_wheel(tmp_path: Path) -> None:
     """A wheel in an environment of its own; the project is a kernel, its reference, and nothing else."""

@@ -54,7 +54,7 @@ class TestWhole:
         assert result.return_value == 0
         assert result.output.splitlines() == [
             "  · double on pair7  holds, 12 cases, 64 bytes of code",
-            "  · total on pair7   holds, 12 cases, 72 bytes of code",
+            "  · total on pair7   holds, 12 cases, 48 bytes of code",
             "",
             "2 kernels, 27 claims: all hold.",
         ]
