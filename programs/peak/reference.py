@@ -31,6 +31,10 @@ def cases(generated):
         x = np.zeros(40, np.int16)
         x[16 + where :] = np.resize(np.array([-5000, 5000], np.int16), 24 - where)
         yield f"place-{where}", {"x": x, "first": 1000, "peak": 1, "position": 0}
+    for where in range(40):  # alone at each place of the first five blocks: what fills the pipeline is seen too
+        x = random.integers(-90, 90, 48).astype(np.int16)
+        x[where] = (100, -100)[where % 2]
+        yield f"alone-{where}", {"x": x, "first": 0, "peak": 20, "position": 0}
     for one, other in ((3, 12), (12, 3), (8, 1), (14, 31)):  # equal peaks in different halves of words
         x = np.zeros(32, np.int16)
         x[[one, other]] = -32768

@@ -96,7 +96,7 @@ def examine(seed: int, tally: Tally) -> None:
     tally.undecided += not verdict.complete
     tally.contexts = max(tally.contexts, verdict.contexts)
     for judgement in verdict.judgements.values():
-        if judgement.outcome == PROVED and not judgement.because:
+        if judgement.outcome == PROVED and (not judgement.because or judgement.because.startswith("no bundle")):
             tally.proved[judgement.rule] = tally.proved.get(judgement.rule, 0) + 1
     machine = Machine(program, careful=True)
     stretches = [piece for region in made.regions for piece in defined_pieces(region)]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 
 from vliwsim.check.inputs import Inputs, inputs_of
 from vliwsim.check.interrupts import Interrupts, interrupts_of
@@ -24,11 +24,26 @@ from vliwsim.check.verdict import (
     Verdict,
     Wait,
 )
+from vliwsim.description.operations import Kind
 from vliwsim.flow.graph import MOST_CONTEXTS, Graph
+from vliwsim.machine.parts import Part
 from vliwsim.program.code import Program
 from vliwsim.program.kernel import ItemTag, Kernel
 
 NOTHING_GIVEN = Inputs()
+MOST_PATHS = 20
+"""Violations of one rule that come with their paths; of long programs each is long."""
+
+COUNTED: Mapping[str, tuple[int, Callable[[Part], bool]]] = {
+    "two-redirects": (1, lambda part: part.branches),
+    "store-twice": (1, lambda part: part.operation.kind is Kind.STORE),
+    "bank-conflict": (1, lambda part: part.operation.access is not None),
+    "misaligned": (0, lambda part: part.operation.access is not None),
+    "out-of-array": (0, lambda part: part.operation.access is not None),
+    "link-nowhere": (0, lambda part: part.uses_link and part.link is None),
+    INDIRECT: (0, lambda part: part.target_register is not None),
+}
+"""Rules that no bundle breaks which has at most so many operations of a kind."""
 
 
 def check_kernel(kernel: Kernel, cap: int = MOST_CONTEXTS, *, interrupts: bool = True) -> Verdict:
@@ -91,11 +106,25 @@ class _Judge:
         because = cannot_break(self.core, rule)
         if because:
             return Judgement(rule, PROVED, (), because)
+        unknown = rule != INDIRECT and bool(self.found.get(INDIRECT))
+        if (unknown or not self.complete) and self._nothing_to_break(rule):
+            return Judgement(rule, PROVED, (), "no bundle of the program could")
         if not self.complete:
             return Judgement(rule, UNDECIDED, incidents, f"more than {len(self.graph.contexts) - 1} contexts")
-        if rule != INDIRECT and self.found.get(INDIRECT):
+        if unknown:
             return Judgement(rule, UNDECIDED, incidents, "a branch goes where its register says, which is not known")
         return Judgement(rule, NEEDS_INPUT if incidents else PROVED, incidents)
+
+    def _nothing_to_break(self, rule: str) -> bool:
+        """Whether no bundle, wherever it is reached from, has what it takes to break a rule."""
+        bundles = [self.graph.ready[index] for index in range(len(self.graph.ready.program.bundles))]
+        if rule in ALONE:
+            return not any(bundle.static for bundle in bundles)
+        counted = COUNTED.get(rule)
+        if counted is None:
+            return False
+        most, what = counted
+        return all(sum(map(what, bundle.parts)) <= most for bundle in bundles)
 
     def _add(self, rule: str, sure: bool, context: int, sites: Iterable[Site], **more: object) -> None:
         """An incident; of those with the same operations the first is kept, one for certain before others."""
@@ -104,7 +133,9 @@ class _Judge:
         key = bundle, sites, more.get("register")
         known = self.found.setdefault(rule, {}).get(key)
         if known is None or (sure and not known.sure):
-            path = self.moments(way or self.graph.path(context))  # type: ignore[arg-type]
+            path: tuple[Moment, ...] = ()
+            if sure and sum(i.sure for i in self.found[rule].values()) < MOST_PATHS:
+                path = self.moments(way or self.graph.path(context))  # type: ignore[arg-type]
             self.found[rule][key] = Incident(rule, sure, bundle, sites, path=path, **more)  # type: ignore[arg-type]
 
     def moments(self, way: Sequence[int]) -> tuple[Moment, ...]:

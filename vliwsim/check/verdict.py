@@ -34,7 +34,8 @@ class Incident:
     """Where a rule is broken for certain on a path (``sure``), or on some data.
 
     ``bundle``: the one at hand. ``sites``: the operations behind it. ``detail``: what the rule wants to add.
-    ``path``: the beats from the first to this one.
+    ``path``: the beats from the first to this one, of violations; empty for what data decide, and for all but the first
+    20 violations of a rule.
     """
 
     rule: str

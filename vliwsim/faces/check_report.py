@@ -120,7 +120,8 @@ def _interrupts(words: Words) -> Iterator[str]:
         where = sentence(list(dict.fromkeys(words.at(b).partition("@")[0] for b in found.stretch)))
         text += f"; none in {where}, however long it runs"
     else:
-        text += f"; at most {found.longest} beats without" if found.longest else "; at any time"
+        beats = "1 beat" if found.longest == 1 else f"{found.longest} beats"
+        text += f"; at most {beats} without" if found.longest else "; at any time"
     yield from _paragraph("  interrupts", text, 15)
 
 
