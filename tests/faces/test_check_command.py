@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import os
 from pathlib import Path
 from typing import Any
 
@@ -132,8 +131,10 @@ def test_a_file_that_vanishes_while_others_are_checked(
         (["a\0b"], ""),
     ],
 )
-def test_bad_requests(arguments: list[str], name: str, capsys: Captured, tmp_path: Path) -> None:
-    os.chdir(tmp_path)
+def test_bad_requests(
+    arguments: list[str], name: str, capsys: Captured, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.chdir(tmp_path)
     assert status_of(["check", *arguments]) in (1, 2)
     err = capsys.readouterr().err
     assert name in err
