@@ -16,6 +16,8 @@ def blocks(measures: Mapping[str, Any]) -> Iterator[str]:
 def _interrupts(data: Mapping[str, Any]) -> Iterator[str]:
     longest = data.get("longest")
     yield f"interrupts: {data['tried']} in {data['cases']} cases, unsafe at {', '.join(data['unsafe']) or 'no bundle'}"
+    if data["check"] is not None:
+        yield f"  vliwsim check calls unsafe: {', '.join(data['check']) or 'none'}"
     if longest:
         place = f"{longest['place']} (cycle {longest['first']}) to {longest['until']}, case {longest['case']}"
         yield f"  longest stretch without a safe point: {longest['cycles']} cycles, {place}"

@@ -15,6 +15,7 @@ from vliwsim.machine.beat import branch_in_flight
 from vliwsim.machine.outcome import Outcome
 from vliwsim.problems import VliwsimError
 from vliwsim.regression.claims import Claim
+from vliwsim.regression.legality import unsafe_bundles
 from vliwsim.regression.observe import started
 
 if TYPE_CHECKING:
@@ -210,6 +211,8 @@ def interrupt_claim(judge: Judge) -> tuple[Claim, dict[str, Any]]:
         data += [{"case": name, **attrs.asdict(harm)} for harm in found.harms[:20]]
     places = list(dict.fromkeys(harm.place for _, harm in harms))
     measured: dict[str, Any] = {"tried": tried, "cases": cases, "unsafe": places, "harms": data[:100]}
+    checked = unsafe_bundles(judge.kernel)
+    measured["check"] = None if checked is None else [where(judge.kernel, bundle) for bundle in sorted(checked)]
     if longest:
         measured["longest"] = {**attrs.asdict(longest[0]), "case": longest[1]}
     if not cases:

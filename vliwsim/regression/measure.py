@@ -203,7 +203,8 @@ def _row(name: str, kind: str, span: Span, bits: int, floating: bool) -> dict[st
         needed = max((v if v >= 0 else ~v).bit_length() for v in whole) + signed
         free = bits - needed
         says = f"{free} bit{'' if free == 1 else 's'} free" if free > 0 else "full"
-    return {"name": name, "type": kind, "low": span.low, "high": span.high, "says": says}
+    low, high = (v if isinstance(v, int) or np.isfinite(v) else str(v) for v in (span.low, span.high))
+    return {"name": name, "type": kind, "low": low, "high": high, "says": says}
 
 
 def measured(judge: Judge, cases: Sequence[Case]) -> dict[str, Any]:
