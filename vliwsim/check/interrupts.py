@@ -6,15 +6,14 @@ result in flight is read, or gets another result, before that result would land;
 
 from __future__ import annotations
 
-import attrs
+from typing import NamedTuple
 
 from vliwsim.flow.graph import Graph
 
 SAFE, SHIELDED, UNSAFE = "safe", "shielded", "unsafe"
 
 
-@attrs.frozen
-class Reason:
+class Reason(NamedTuple):
     """Why a bundle is unsafe: instruction ``instruction`` of ``bundle`` touches ``register`` ``beats`` beats on."""
 
     bundle: int
@@ -23,8 +22,7 @@ class Reason:
     beats: int
 
 
-@attrs.frozen
-class Interrupts:
+class Interrupts(NamedTuple):
     """For each bundle that is reached ``safe``, ``shielded`` (always a branch in flight) or ``unsafe``, with why.
 
     ``longest``: beats of the longest stretch in which none can be taken safely, None where a loop has no end to it;

@@ -8,8 +8,7 @@ flight and in registers, and every branch back to the loop's label makes all of 
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.check.spread import Spread
 from vliwsim.flow.graph import Graph
@@ -27,8 +26,7 @@ NONE: Tags = frozenset()
 LABELLED = "loop"
 
 
-@attrs.frozen
-class Wrong:
+class Wrong(NamedTuple):
     """An operand of another item than is said: ages, or None where it is of another loop's."""
 
     context: int

@@ -4,14 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping, Sequence
 from itertools import combinations
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.check.inputs import Inputs
 from vliwsim.check.residues import UNKNOWN, WHOLE, Residue, constant, lowest_bit
 from vliwsim.description.core import Memory
 from vliwsim.description.language.tree import Binary, Input
-from vliwsim.description.operations import Operation
+from vliwsim.description.operations import Kind, Operation
 from vliwsim.flow.follow import WHOLE as WHOLE_TYPES
 from vliwsim.flow.follow import bare, telling
 from vliwsim.flow.graph import Graph
@@ -19,8 +18,7 @@ from vliwsim.machine.parts import Part
 from vliwsim.program.code import Mode
 
 
-@attrs.frozen
-class Access:
+class Access(NamedTuple):
     """A guard-on access of a context's bundle, for certain (``sure``) or perhaps."""
 
     instruction: int
@@ -30,8 +28,7 @@ class Access:
     sure: bool
 
 
-@attrs.frozen
-class Doubt:
+class Doubt(NamedTuple):
     """A memory rule that a bundle breaks for certain (``sure``), or that its accesses do not decide."""
 
     rule: str
@@ -198,10 +195,12 @@ def sum_or_difference(operation: Operation) -> int:
     """1 for an operation that adds its two inputs, -1 for one that subtracts, 2 for a copy, 0 for any other."""
     if telling(operation) == "copy":
         return 2
-    statements = operation.meaning.statements
-    if len(operation.inputs) != 2 or len(statements) != 1 or statements[0].lane is not None:
+    if operation.kind is not Kind.COMPUTE or len(operation.inputs) != 2:
         return 0
     if any(operand.half or operand.pair or operand.type not in WHOLE_TYPES[:2] for operand in operation.operands):
+        return 0
+    statements = operation.meaning.statements  # read from its text when first asked for: the last thing to ask
+    if len(statements) != 1 or statements[0].lane is not None:
         return 0
     node = bare(statements[0].value)
     if not isinstance(node, Binary) or node.operator not in "+-":

@@ -8,8 +8,7 @@ from __future__ import annotations
 
 from collections import deque
 from collections.abc import Iterator, Mapping, Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.check.inputs import Inputs
 from vliwsim.check.spread import Spread
@@ -26,8 +25,7 @@ SAMPLES = ((3, 5, 9), (0x80000001, 0x7FFF0002, 0x00010003))
 """Values beside an undefined operand, to find out whether a result is wholly undefined with it."""
 
 
-@attrs.frozen
-class Use:
+class Use(NamedTuple):
     """An undefined register at a place that must not be: ``what`` of an instruction (None: a returned value)."""
 
     context: int

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-
-import attrs
+from types import MappingProxyType
+from typing import NamedTuple
 
 from vliwsim.check.interrupts import Interrupts
 
@@ -16,8 +16,7 @@ Site = tuple[int, int]
 """(bundle index, instruction index)."""
 
 
-@attrs.frozen
-class Moment:
+class Moment(NamedTuple):
     """A beat on a path: the bundle at hand and what it ``did`` (``issue``, ``hold``, ``fresh``).
 
     ``within``: beats of its idle word before. ``landed``: (who sent it, register) of results due in this beat.
@@ -29,8 +28,7 @@ class Moment:
     landed: tuple[tuple[Site, int], ...] = ()
 
 
-@attrs.frozen
-class Incident:
+class Incident(NamedTuple):
     """Where a rule is broken for certain on a path (``sure``), or on some data.
 
     ``bundle``: the one at hand. ``sites``: the operations behind it. ``detail``: what the rule wants to add.
@@ -44,11 +42,10 @@ class Incident:
     sites: tuple[Site, ...]
     register: int | None = None
     detail: str = ""
-    path: tuple[Moment, ...] = attrs.field(default=(), repr=lambda path: f"{len(path)} beats")
+    path: tuple[Moment, ...] = ()
 
 
-@attrs.frozen
-class Judgement:
+class Judgement(NamedTuple):
     """One rule's outcome. ``because``: why it is undecided, or proved without a look at the program."""
 
     rule: str
@@ -57,8 +54,7 @@ class Judgement:
     because: str = ""
 
 
-@attrs.frozen
-class EarlyRead:
+class EarlyRead(NamedTuple):
     """A register read with results in flight for it: by ``site``; ``flights``: (who sent it, beats to go, for certain).
 
     ``meant``: whether the item that the source says is the one read; None where it says nothing.
@@ -70,8 +66,7 @@ class EarlyRead:
     meant: bool | None
 
 
-@attrs.frozen
-class Wait:
+class Wait(NamedTuple):
     """A bundle that is held up ``least`` to ``most`` beats whenever it comes up."""
 
     bundle: int
@@ -79,8 +74,7 @@ class Wait:
     most: int
 
 
-@attrs.frozen
-class Verdict:
+class Verdict(NamedTuple):
     """All that a check found.
 
     ``contexts``: how many there are, and whether that is all of them (``complete``). ``blown_up``: the bundle with most
@@ -96,7 +90,7 @@ class Verdict:
     waits: tuple[Wait, ...]
     interrupts: Interrupts | None
     tagged: bool
-    right_beats: Mapping[Site, tuple[int, ...]] = attrs.field(factory=dict)
+    right_beats: Mapping[Site, tuple[int, ...]] = MappingProxyType({})
 
     def outcome(self, rule: str) -> str:
         return self.judgements[rule].outcome

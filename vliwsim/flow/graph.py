@@ -31,7 +31,7 @@ class Graph:
     """
 
     def __init__(self, program: Program, facts: Sequence[tuple[int, bool]] = ()) -> None:
-        self.ready = Preparation(program)
+        self.ready = Preparation(program, to_run=False)
         self.stepper = Stepper(self.ready)
         self.contexts: list[Context] = []
         self.beats: list[Beat | None] = []

@@ -34,9 +34,13 @@ class Prepared:
 
 
 class Preparation:
-    """Prepares the bundles of one program, each once, when first asked for."""
+    """Prepares the bundles of one program, each once, when first asked for.
 
-    def __init__(self, program: Program) -> None:
+    ``to_run``: with the rows that the hot loop takes; who only looks at bundles does not need them.
+    """
+
+    def __init__(self, program: Program, *, to_run: bool = True) -> None:
+        self.to_run = to_run
         self.program = program
         self.core = program.core
         self.sites: list[WriteSite] = []
@@ -119,7 +123,7 @@ class Preparation:
             for write in part.effects.writes:
                 most[write.latency] = most.get(write.latency, 0) + 1
         static = static_hazard(core, parts)
-        rows = None if static else lay_out(core, parts, self.constant(0))
+        rows = None if static or not self.to_run else lay_out(core, parts, self.constant(0))
         bundle = self.program.bundles[index]
         return Prepared(
             index, bundle, parts, static, fresh_operands(core, parts), self._watch(parts), tuple(most.items()), rows
