@@ -10,6 +10,8 @@ from vliwsim.faces.shell.completion import offers
 from vliwsim.faces.shell.lines import plain, tint
 from vliwsim.faces.shell.view import prompt_text, three_lines
 from vliwsim.kernel.loading import assemble_source
+from vliwsim.machine.recorder import Record, record
+from vliwsim.shell.conditions import condition
 from vliwsim.shell.faults import Unclear
 from vliwsim.shell.session import Session
 
@@ -470,3 +472,60 @@ def test_all_commands_at_every_cycle_of_a_run_answer_something(six: Session) -> 
             assert shell.answer(line), (cycle, line)
         assert six.cycle == cycle
     assert assemble_source("tests/shell/early_read").name == "early_read"
+
+
+# ------------------------------------------------------------------------------- events, against what a recorder hears
+
+LOCKED = """kernel locked
+core lone4
+given x : i32[n] at g10
+given left : i32 = n - 1 in g4
+returns y : i32[n] at g11
+
+loop:
+@0 lw g2, [g10 then +4]
+@1 add g3, g2, 1
+@2 sw g3, [g11 then +4] ; count g4, loop
+finish:
+@0 idle
+@1 halt
+"""
+
+
+@pytest.mark.parametrize("name", ["window_scale", "early_read", "locked"])
+def test_conditions_hold_exactly_where_a_recorder_hears_their_events(name: str) -> None:
+    if name == "locked":
+        one = from_text(LOCKED, {"x": list(range(9))}, core="lone4")
+    else:
+        one = session(name, {"n": 32, "gain": 1}) if name == "window_scale" else early([5, -7, 11, 2, 30, -1])
+    array, number = one.names.arrays["y"], one.names.register("g6" if name != "locked" else "g3")
+    heard: dict[str, set[int]] = {"stored": set(), "landed": set(), "stalled": set()}
+
+    def listen(record: Record) -> None:
+        end = array.start + array.length * array.element.bytes
+        if any(array.start <= address < end for address, _, _ in record.stores):
+            heard["stored"].add(record.cycle)
+        if any(landing.register == number for landing in record.landings):
+            heard["landed"].add(record.cycle)
+        if record.cause:
+            heard["stalled"].add(record.cycle)
+        frozen = sum(cycles for _, cycles in record.freezes)
+        heard["stalled"] |= set(range(record.cycle + 1, record.cycle + 1 + frozen))
+
+    undo = record(one.machine, listen)
+    state = one.machine.start({}, (), one.state.memory.regions)
+    state.restore(one.recorded.first)
+    one.machine.run(state)
+    undo()
+    texts = {"stored": "stored y", "landed": f"landed {one.kernel.core.register_names[number]}", "stalled": "stalled"}
+    for event, text in texts.items():
+        wanted, found = condition(one, text), set()
+        one.go(0)
+        while one.state.halt_beat is None:
+            if wanted.holds(one, one.state):
+                found.add(one.cycle)
+            one.go(one.cycle + 1)
+        assert found == heard[event], event
+    assert heard["stored"]
+    assert heard["landed"]
+    assert bool(heard["stalled"]) == (name == "locked")
