@@ -425,3 +425,14 @@ def test_another_core_than_those_named_is_noted() -> None:
 def test_a_bundle_may_be_too_long() -> None:
     with pytest.raises(SourceError, match="bundle-too-long"):
         kernel("@0 " + "halt ; " * 70, allow_illegal=True)
+
+
+def test_lines_are_counted_as_an_editor_counts_them(tmp_path: Path) -> None:
+    """A form feed or a Unicode line separator ends no line, neither in the code nor in a comment."""
+    path = tmp_path / "feed.vliw"
+    for odd in "\x0b\x0c\x1c\x85\u2028\u2029":
+        text = f"kernel feed\ncore pair7\n# one{odd}add\nstart:\n@0 add{odd}g1, g2, g3\n@1 plus\n"
+        path.write_text(text, encoding="utf-8")
+        with pytest.raises(SourceError) as caught:
+            assemble(path)
+        assert [(p.name, p.place.line) for p in caught.value.problems if p.place] == [("unknown-operation", 6)]

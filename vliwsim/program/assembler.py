@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import gc
 import os
+import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
@@ -33,6 +34,8 @@ MOST_LINES = 200_000
 MANY_LINES = 1000
 """From here on assembling is worth some care with memory."""
 
+_LINE_END = re.compile("\r\n?|[\x0b\x0c\x1c-\x1e\x85\u2028\u2029]")
+
 LoadCore = Callable[..., Core]
 Draft = list[tuple[Ready, int]] | int
 """A bundle's operations with their slots, in slot order, or the beats of an idle run."""
@@ -59,7 +62,7 @@ def assemble(
     :class:`CoreError` and :class:`OperationError` for a bad core or table.
     """
     name = os.fspath(path)
-    source = read_source(name) if text is None else text
+    source = read_source(name) if text is None else _lines_as_seen(text)
     lines = source.splitlines()
     with _collector_paused(len(lines) > MANY_LINES):
         return _assemble(name, source, lines, core, load_core, changes, operations, allow_illegal)
@@ -121,7 +124,7 @@ def read_source(path: str) -> str:
     if len(data) > MOST_BYTES:
         raise OptionError(problem("unreadable", f"{path} has more than {MOST_BYTES} bytes", f"at most {MOST_BYTES}"))
     try:
-        return data.decode("utf-8-sig")
+        return _lines_as_seen(data.decode("utf-8-sig"))
     except UnicodeDecodeError as error:
         line = data.count(b"\n", 0, error.start) + 1
         raise OptionError(
@@ -129,6 +132,11 @@ def read_source(path: str) -> str:
                 "not-text", f"byte {data[error.start]:#04x}, which is no UTF-8", "UTF-8 text", place=Place(path, line)
             )
         ) from None
+
+
+def _lines_as_seen(text: str) -> str:
+    """The text with lines as an editor counts them: what else Python takes for the end of one becomes a blank."""
+    return _LINE_END.sub(lambda found: "\n" if found[0][0] == "\r" else " ", text)
 
 
 def _check_header(tree: Tree, complaints: Complaints) -> None:
