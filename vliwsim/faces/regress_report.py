@@ -67,7 +67,9 @@ def changes(verdicts: Sequence[Verdict]) -> list[str]:
 def conclusion(result: Result) -> str:
     """``9 kernels, 217 claims: all hold (7 unchanged).``"""
     kernels = f"{len(result.verdicts)} kernel{'' if len(result.verdicts) == 1 else 's'}"
-    judged = f"{result.claims} claim{'' if result.claims == 1 else 's'}: " + (f"{result.failed} do not hold" if result.failed else "all hold")
+    judged = f"{result.claims} claim{'' if result.claims == 1 else 's'}: " + (
+        f"{result.failed} do not hold" if result.failed else "all hold"
+    )
     kept = f" ({result.kept} unchanged since they were last judged)" if result.kept else ""
     return f"{kernels}, {judged}{kept}."
 
