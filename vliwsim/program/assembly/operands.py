@@ -121,7 +121,7 @@ class OperandReader:
         value = self.integer(piece)
         if value is not None and not 0 <= value <= OLDEST_ITEM:
             found = f"item {piece.text}" + ("" if str(value) == piece.text else f", which is {value}")
-            self.complaints.add("bad-item", piece.where, found, f"0, the newest, to {OLDEST_ITEM}")
+            self.complaints.add("unclear-item", piece.where, found, f"0, the newest, to {OLDEST_ITEM}")
             return None
         return value
 

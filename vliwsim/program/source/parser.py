@@ -226,7 +226,7 @@ class _Parser:
         """``REGISTER of EXPRESSION`` behind ``with``."""
         match = _OF.search(value.text)
         if not match:
-            self.complaints.add("bad-item", value.where, f"with {value.text}", "with REGISTER of N", "with g2 of 1")
+            self.complaints.add("unclear-item", value.where, f"with {value.text}", "with REGISTER of N", "with g2 of 1")
             return []
         return [(value.part(0, match.start()), value.part(match.end()))]
 
