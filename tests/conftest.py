@@ -3,6 +3,10 @@
 from __future__ import annotations
 
 import pytest
+from hypothesis import settings
+
+settings.register_profile("suite", derandomize=True, deadline=None, database=None)
+settings.load_profile("suite")  # the same examples everywhere: a red run is a change's fault, never the draw's
 
 
 def pytest_addoption(parser: pytest.Parser) -> None:

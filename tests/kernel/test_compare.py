@@ -67,3 +67,14 @@ def test_json_has_no_nan() -> None:
     assert found is not None
     assert found.as_json() == {"index": None, "got": "nan", "expected": "inf"}
     assert found.distance is None
+
+
+def test_an_overflow_is_no_last_place() -> None:
+    """Infinity is one step beyond the largest number on the line of all binary32 values, and still no rounding of it."""
+    largest = np.array([np.finfo(np.float32).max], np.float32)
+    infinite = np.array([np.inf], np.float32)
+    element = ELEMENTS["f32"]
+    assert compare(element, infinite, largest, within=2) is not None
+    assert compare(element, largest, infinite, within=2) is not None
+    assert compare(element, infinite, infinite, within=2) is None
+    assert compare(element, -infinite, infinite, within=2) is not None

@@ -70,7 +70,8 @@ def _bits(array: np.ndarray) -> np.ndarray:
 def _distances(element: Element, one: np.ndarray, other: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Distance of each pair in units in the last place, and whether the pair can be compared at all.
 
-    Binary32 values are counted along the line of all of them, both zeros at 0.
+    Binary32 values are counted along the line of all of them, both zeros at 0. NaNs are at 0 from each other; an
+    infinity can be compared only with itself, since an overflow is no last place.
     """
     if not element.floating:
         return np.abs(one.astype(np.int64) - other.astype(np.int64)), np.ones(one.shape, bool)
@@ -79,4 +80,5 @@ def _distances(element: Element, one: np.ndarray, other: np.ndarray) -> tuple[np
         bits = array.view(np.int32).astype(np.int64)
         steps.append(np.where(bits < 0, -(bits & 0x7FFFFFFF), bits))
     both = _nan(one) & _nan(other)
-    return np.where(both, 0, np.abs(steps[0] - steps[1])), both | ~(_nan(one) | _nan(other))
+    apart = (_nan(one) | _nan(other) | np.isinf(one) | np.isinf(other)) & ~(both | (one == other))
+    return np.where(both, 0, np.abs(steps[0] - steps[1])), ~apart
