@@ -264,7 +264,7 @@ def test_without_its_reference_a_kernel_is_judged_by_the_rest(tmp_path: Path) ->
     assert regress(source, "--no-reference").return_value == 0
 
 
-def test_one_target_feels_nothing_of_another(tmp_path: Path) -> None:
+def test_one_target_feels_nothing_of_another(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Two references with helper modules of one name, and one that changes the working folder."""
     for name, text, factor in (("total", SUM, 1), ("double", DOUBLE, 2)):
         (tmp_path / name).mkdir()
@@ -274,10 +274,14 @@ def test_one_target_feels_nothing_of_another(tmp_path: Path) -> None:
         "import common\ndef total(x):\n    return int(x.astype(int).sum()) * common.factor\n"
     )
     (tmp_path / "double" / "reference.py").write_text("import common\ndef double(x):\n    return x * common.factor\n")
-    found = list(judge_all(targets([str(tmp_path)]), 1, Options(), lambda target, text: None))
+    monkeypatch.chdir(tmp_path)
+    found = list(judge_all(targets(["."]), 1, Options(), lambda target, text: None))
     assert [verdict.claims[0].held for _, verdict, _ in found] == [True, True]
     held = {verdict.kernel: [c for c in verdict.claims if c.held is False] for _, verdict, _ in found}
-    assert held["total"] == []
+    assert held == {"total": [], "double": []}
+    for _, _, files in found:
+        assert {os.path.basename(name) for name in files if name.endswith(".py")} == {"reference.py", "common.py"}
+        assert not any(os.path.isabs(name) for name in files if name.endswith(".py"))
 
 
 def test_watch_finds_what_a_saved_file_touches(shelf: Path) -> None:

@@ -24,7 +24,7 @@ from vliwsim.program.kernel import Kernel
 from vliwsim.regression.claims import Change, Claim, Options, Verdict
 from vliwsim.regression.explain import explained, named_lines, over_budget, text_of_difference
 from vliwsim.regression.legality import legality
-from vliwsim.regression.watched import time_limit, watched
+from vliwsim.regression.watched import same_folder, time_limit, watched
 
 About = Callable[[str], None]
 TRACED = 3
@@ -55,7 +55,7 @@ class Judge:
         if not self.options.reference:
             return None
         self.about("loading reference.py")
-        with time_limit(self.options.seconds):
+        with same_folder(), time_limit(self.options.seconds):
             found = load_reference(self.kernel)
         self.about("")
         if found is None:

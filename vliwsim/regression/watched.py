@@ -5,6 +5,7 @@ from __future__ import annotations
 import contextlib
 import inspect
 import io
+import os
 import signal
 import threading
 from collections.abc import Callable, Iterator
@@ -42,6 +43,16 @@ def time_limit(seconds: float | None) -> Iterator[None]:
         signal.signal(signal.SIGALRM, before)
 
 
+@contextlib.contextmanager
+def same_folder() -> Iterator[None]:
+    """Come back to the working folder, wherever code of others goes."""
+    before = os.getcwd()
+    try:
+        yield
+    finally:
+        os.chdir(before)
+
+
 class Watched:
     """Stands for a reference's function: same name, signature and place, but watched.
 
@@ -61,7 +72,12 @@ class Watched:
         self.about(f"calling {self.__name__}")
         heard = io.StringIO()
         try:
-            with time_limit(self.seconds), contextlib.redirect_stdout(heard), contextlib.redirect_stderr(heard):
+            with (
+                same_folder(),
+                time_limit(self.seconds),
+                contextlib.redirect_stdout(heard),
+                contextlib.redirect_stderr(heard),
+            ):
                 result = self.function(*arguments, **named)
                 if inspect.isgenerator(result):
                     result = tuple(result)

@@ -19,6 +19,7 @@ from typing import Any
 import attrs
 
 from vliwsim.regression.claims import Claim, Options, Verdict, verdict_from_json
+from vliwsim.regression.keep import cache_folder
 from vliwsim.regression.sources import Target
 
 GRACE = 3.0
@@ -172,7 +173,8 @@ def _opened_files(folder: str) -> set[str]:
 
     Folders below ``folder`` that it lists stand in it with a separator at their end.
     """
-    beside = folder
+    start, beside = os.path.join(os.getcwd(), ""), folder
+    kept = [os.path.join(path, "") for path in (str(cache_folder()), os.path.expanduser("~/.cache/vliwsim"))]
     here = os.path.dirname(os.path.dirname(os.path.abspath(__file__))) + os.sep
     data = os.path.join(here, "_data") + os.sep
     own = tuple({os.path.realpath(p) + os.sep for p in (sys.prefix, sys.base_prefix)} | {"/proc/", "/dev/", "/sys/"})
@@ -182,7 +184,7 @@ def _opened_files(folder: str) -> set[str]:
         if event in ("os.listdir", "os.scandir") and isinstance(arguments[0], str):
             listed = os.path.join(os.path.abspath(arguments[0]), "")
             if listed.startswith(beside) and listed != beside:
-                opened.add(_near(listed))
+                opened.add(listed.removeprefix(start))
             return
         if event != "open" or not isinstance(arguments[0], (str, bytes)):
             return
@@ -191,18 +193,12 @@ def _opened_files(folder: str) -> set[str]:
             return
         path = os.path.abspath(os.fsdecode(arguments[0]))
         shipped = path.startswith(data)
-        if (path.startswith((*own, here)) and not shipped) or len(opened) > 10_000:
+        if (path.startswith((*own, *kept, here)) and not shipped) or len(opened) > 10_000:
             return
         folder, name = os.path.split(path)
         if os.path.basename(folder) == "__pycache__":  # a compiled module: its source is what counts
             path = os.path.join(os.path.dirname(folder), f"{name.split('.')[0]}.py")
-        opened.add(_near(path))
+        opened.add(path.removeprefix(start))  # from the working folder where it is below, so that a checkout may move
 
     sys.addaudithook(hook)
     return opened
-
-
-def _near(path: str) -> str:
-    """Below the working folder a path from there, so that a checkout may move."""
-    here = os.getcwd() + os.sep
-    return path[len(here) :] if path.startswith(here) else path
