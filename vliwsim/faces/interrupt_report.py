@@ -16,13 +16,14 @@ class Moment(click.ParamType):
     """A cycle from 0, or ``every``."""
 
     name = "cycle"
+    allowed = "a cycle, 0 or more, or `every`"
 
     def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> Any:
         if value == "every" or isinstance(value, int):
             return value
         if isinstance(value, str) and value.isascii() and value.isdigit() and len(value) < 19:
             return int(value)
-        self.fail(f"{value} is no cycle, 0 or more, and not `every`", param, ctx)
+        self.fail(f"{value}", param, ctx)
 
 
 def injected(run: KernelRun, limit: int) -> Injected:

@@ -153,8 +153,7 @@ def usage_problem(error: click.ClickException, arguments: Sequence[str] | None =
     if isinstance(error, click.BadParameter):
         name = error.param.opts[0] if error.param else "an argument"
         kind = error.param.type if error.param else None
-        allowed = f"a whole number, {kind.min} or more" if isinstance(kind, click.IntRange) else ""
-        return problem("bad-option", f"{name}: {error.message.rstrip('.')}", allowed, remedy)
+        return problem("bad-option", f"{name}: {error.message.rstrip('.')}", _allowed(kind), remedy)
     if isinstance(error, click.UsageError) and error.message.startswith("No such command"):
         given = error.message.split("'")[1] if "'" in error.message else ""
         near = _near(given, list(COMMANDS), "--help")
@@ -162,6 +161,16 @@ def usage_problem(error: click.ClickException, arguments: Sequence[str] | None =
     usage = context.get_usage().removeprefix("Usage: ") if context else f"{path} and its arguments"
     message = error.format_message().rstrip(".").removeprefix("Got ")
     return problem("bad-usage", message[:1].lower() + message[1:], " ".join(usage.split()), remedy)
+
+
+def _allowed(kind: click.ParamType | None) -> str:
+    """What an option of this type takes."""
+    if isinstance(kind, click.Choice):
+        return ", ".join(map(str, kind.choices))
+    if isinstance(kind, (click.IntRange, click.FloatRange)):
+        number = "a whole number" if isinstance(kind, click.IntRange) else "a number"
+        return number if kind.min is None else f"{number}, {kind.min} or more"
+    return str(getattr(kind, "allowed", "")) or f"a {getattr(kind, 'name', 'value')}"
 
 
 def _near(text: str, known: Sequence[str], otherwise: str) -> str:
