@@ -13,7 +13,8 @@ from vliwsim.description.values import parts
 from vliwsim.kernel.loading import assemble_source
 from vliwsim.kernel.runner import run_kernel
 from vliwsim.program.kernel import Kernel
-from vliwsim.shell.origins import Leaf, Step, maker, origin_of, reached_elements
+from vliwsim.shell.nodes import Leaf, Step, reached_elements
+from vliwsim.shell.origins import maker, origin_of
 from vliwsim.shell.session import Session
 from vliwsim.shell.stalls import stall_here
 

@@ -18,6 +18,7 @@ from vliwsim.program.code import Mode
 from vliwsim.shell.faults import unclear
 from vliwsim.shell.history import History, Saved, Watch
 from vliwsim.shell.influence import influence
+from vliwsim.shell.nodes import Leaf, Origin, Source, Step, is_given
 from vliwsim.shell.session import Session
 from vliwsim.shell.trace import Beat, Landed, Store, Stretch, backwards
 
@@ -27,54 +28,6 @@ MOST = 30_000
 """Operations that one question follows, at most."""
 
 
-@attrs.frozen
-class Leaf:
-    """Where a walk ends.
-
-    ``kind``: ``element`` (of an array as it was given), ``input`` (a given scalar or address in a register),
-    ``constant`` (in the code), ``undefined``, ``supposed``, ``link`` or ``unfollowed``. ``what`` names it.
-    """
-
-    kind: str
-    what: str
-    value: Value | None = None
-    array: str = ""
-    index: int = 0
-
-
-@attrs.define(eq=False)
-class Source:
-    """One thing an operation used. ``role``: ``operand``, ``memory``, ``guard``, ``address`` or ``held`` (sticky)."""
-
-    name: str
-    role: str
-    value: Value | None
-    nodes: list[Step | Leaf] = attrs.field(factory=list)
-
-
-@attrs.define(eq=False)
-class Step:
-    """One executed operation, or part of what it did. ``asked``: masks of asked bytes by output name.
-
-    ``values`` by register number; ``stored``: value and address of a store. ``sources`` stay empty if not followed.
-    """
-
-    beat: int
-    bundle: int
-    instruction: int
-    asked: dict[str, int] = attrs.field(factory=dict)
-    values: dict[int, Value] = attrs.field(factory=dict)
-    sources: list[Source] = attrs.field(factory=list)
-    cycle: int = -1
-    counted: int = 0
-    within: int = 0
-    stored: tuple[Value, int, int] | None = None
-    updates: bool = False
-    """Whether this is the update of a base, not the results."""
-    given: bool = False
-    """Whether it depends on elements of given arrays, or on what is supposed or undefined."""
-
-
 @attrs.define(eq=False)
 class _Waiting:
     """A source that waits for the latest landing on its register, or store to its byte, up to a beat."""
@@ -82,19 +35,6 @@ class _Waiting:
     bound: int
     mask: int
     source: Source
-
-
-@attrs.define(eq=False)
-class Origin:
-    """The answer: ``root`` is what was asked for; ``elements`` are the given elements it depends on.
-
-    ``whole``: False where the walk ended at its limit or was stopped.
-    """
-
-    root: Source
-    steps: list[Step]
-    elements: set[tuple[str, int]]
-    whole: bool = True
 
 
 class Walk:
@@ -160,7 +100,7 @@ class Walk:
         self._end_at_start()
         steps = sorted(self.steps.values(), key=lambda s: (s.beat, s.bundle, s.instruction, s.updates))
         for step in steps:
-            step.given = any(_given(node) for source in step.sources for node in source.nodes)
+            step.given = any(is_given(node) for source in step.sources for node in source.nodes)
         return Origin(self.root, steps, self._elements, not self._stopped)
 
     def _look(self, cycle: int) -> bool:
@@ -417,30 +357,10 @@ class Walk:
         return Leaf("element", f"{array.name}[{index}]", raw, array.name, index)
 
 
-def _given(node: Step | Leaf) -> bool:
-    return node.given if isinstance(node, Step) else node.kind in ("element", "undefined", "supposed", "unfollowed")
-
-
 def _odd_of_pair(part: Part, operand: str, register: int) -> bool:
     """Whether a register is the odd one of a pair result."""
     registers = [w.register for w in part.effects.writes if w.operand == operand]
     return len(registers) == 2 and register == max(registers)
-
-
-def reached_elements(origin: Origin, node: Step) -> set[tuple[str, int]]:
-    """The given elements that one operation of an answer depends on, guards and addresses included."""
-    found: set[tuple[str, int]] = set()
-    todo, met = [node], {id(node)}
-    while todo:
-        for source in todo.pop().sources:
-            for one in source.nodes:
-                if isinstance(one, Leaf):
-                    if one.kind == "element":
-                        found.add((one.array, one.index))
-                elif id(one) not in met:
-                    met.add(id(one))
-                    todo.append(one)
-    return found
 
 
 def maker(session: Session, what: str, watch: Watch | None = None) -> Step | None:

@@ -18,7 +18,8 @@ from vliwsim.shell.edits import suppose
 from vliwsim.shell.faults import Unclear, at_line, listed, nearest, unclear
 from vliwsim.shell.forms import form_named
 from vliwsim.shell.history import Watch
-from vliwsim.shell.origins import Step, maker, origin_of
+from vliwsim.shell.nodes import Step
+from vliwsim.shell.origins import maker, origin_of
 from vliwsim.shell.places import place
 from vliwsim.shell.readers import uses_of_bytes, uses_of_register
 from vliwsim.shell.session import Arrival, Session
@@ -307,7 +308,8 @@ class Shell:
     def _suppose(self, rest: str) -> None:
         text, _, form = rest.rpartition(" as ")
         changed = suppose(self.session, text or rest, form_named(form) if text else None)
-        self.write([[("faint", f"  another course of time from here, with {changed} changed; forget returns")]])
+        text = f"another course of time from here, with {changed} changed; forget returns"
+        self.write(wrapped(text, self.width()))
         self.show()
 
     def _forget(self, rest: str) -> None:

@@ -9,7 +9,7 @@ from vliwsim.faces.shell.lines import Line, clipped, tint, wrapped
 from vliwsim.faces.shell.view import CAUSES, store_words
 from vliwsim.shell.forms import element_text, value_text
 from vliwsim.shell.judging import Verdict
-from vliwsim.shell.origins import Leaf, Origin, Source, Step, reached_elements
+from vliwsim.shell.nodes import Leaf, Origin, Source, Step, reached_elements
 from vliwsim.shell.readers import Use, Uses
 from vliwsim.shell.session import Session
 from vliwsim.shell.stalls import Stall
