@@ -1,7 +1,7 @@
 """The benchmark: ratios of one run, never a verdict. Machines are noisy: quote the medians.
 
 tools/bench            everything
-tools/bench stepper    one part: stepper, start, assemble, growth, shell
+tools/bench stepper    one part: stepper, start, assemble, growth, native, shell
 """
 
 from __future__ import annotations
@@ -264,7 +264,166 @@ def shell() -> None:
     line(f"  peak memory after {cycles:,.0f} cycles", figure, f"{kept / 2**20:.1f} MiB of snapshots; asked: 200 MB")
 
 
-PARTS = {"stepper": stepper, "start": start, "assemble": assembling, "growth": growth, "shell": shell}
+# ------------------------------------------------------------------------------------------------- the fast engine
+
+LOOPS = {
+    "one_bundle": (HERE / "bench_loop.vliw", str(HERE / "bench8.toml"), 20_000_000, 1),
+    "recurrence": (HERE / "native/recurrence.vliw", None, 4_000_000, 8),
+    "bytewise": (HERE / "native/bytewise.vliw", None, 2_000_000, 25),
+    "divider": (HERE / "native/divider.vliw", None, 3_000_000, 14),
+    "conflicts": (HERE / "native/conflicts.vliw", None, 10_000_000, 2),
+}
+"""Source, core, passes, and beats a pass; the functions of tools/native/loops.c have these names."""
+
+
+def by_hand(folder: str) -> object:
+    """The loops written in C, compiled by the system's compiler; None where there is none."""
+    import ctypes
+    import shutil
+
+    compiler = shutil.which("cc")
+    if compiler is None:
+        return None
+    library = Path(folder) / "loops.so"
+    source = HERE / "native/loops.c"
+    subprocess.run([compiler, "-O2", "-march=native", "-shared", "-fPIC", "-o", library, source], check=True)
+    return ctypes.CDLL(str(library))
+
+
+def native() -> None:
+    import tempfile
+
+    with tempfile.TemporaryDirectory() as folder:
+        library = by_hand(folder)
+        ratios = [native_loop(name, library) for name in LOOPS]
+    if library is not None:
+        line("native against C written by hand, median", f"{statistics.median(ratios):.2f} x", "asked: 0.8 x")
+    first_translation()
+    many_cases()
+
+
+def native_loop(name: str, library: object) -> float:
+    """One loop by the fast engine, by C and by the stepper; speed against C."""
+    import ctypes
+
+    from vliwsim.description.corefile import load_core
+    from vliwsim.machine.memory import Region
+    from vliwsim.machine.stepper import Machine
+    from vliwsim.native.engine import Native
+    from vliwsim.program.assembler import assemble
+
+    path, core, passes, beats = LOOPS[name]
+    kernel = assemble(path, load_core(core) if core else None)
+    machine, numbers = Machine(kernel.program), kernel.core.register_numbers
+    data = np.random.default_rng(1).integers(0, 2**30, 2048, dtype=np.uint32).astype("<u4").tobytes()
+    if name == "divider":
+        data = np.random.default_rng(1).uniform(1, 2, 2048).astype(">f4").tobytes()
+    places = {"g10": 0, "g20": passes, "g3": 0x3FC00000}
+    places |= {"h10": 4100 if name == "one_bundle" else 1028} if "h10" in numbers else {"g11": 1024 + 16}
+    given = {numbers[n]: v for n, v in places.items()}
+    fast = Native(machine)
+    fast.begin(given)
+    finals: dict[str, object] = {}
+    returned = [item.register for item in kernel.items if item.kind == "returns"]
+
+    def start(trips: int) -> object:
+        return machine.start({**given, numbers["g20"]: trips}, [(0, data)], [Region("x", 0, 8192)])
+
+    def ours() -> float:
+        state = start(passes)
+        started = time.perf_counter()
+        outcome = fast.run(state)
+        seconds = time.perf_counter() - started
+        assert outcome.reason == "halt", outcome.hazard
+        finals["native"] = [outcome.registers[r] for r in returned], outcome.stalls["bank"]
+        return seconds
+
+    def theirs() -> float:
+        registers = (ctypes.c_uint32 * 64)()
+        for number, value in given.items():
+            registers[number] = value
+        memory = ctypes.create_string_buffer(data, len(data))
+        function = getattr(library, name)
+        function.restype = ctypes.c_uint64
+        started = time.perf_counter()
+        stalls = function(memory, registers)
+        seconds = time.perf_counter() - started
+        finals["C"] = [registers[r] for r in returned], stalls
+        return seconds
+
+    def stepped() -> float:
+        some = passes // 500
+        state = start(some)
+        started = time.perf_counter()
+        machine.run(state)
+        return (time.perf_counter() - started) * passes / some
+
+    actions = [ours, stepped] if library is None else [ours, stepped, theirs]
+    taken = interleaved(*actions)
+    rate = passes * beats / statistics.median(taken[0]) / 1e6
+    slow = statistics.median(s / o for o, s in zip(taken[0], taken[1], strict=True))
+    if library is None:
+        line(f"native, {name}", f"{rate:.0f} M/s", f"beats; {slow:.0f} x the stepper")
+        return 0.0
+    assert finals["native"] == finals["C"], (name, finals)
+    ratio = statistics.median(c / o for o, c in zip(taken[0], taken[2], strict=True))
+    line(f"native, {name}, against C by hand", f"{ratio:.2f} x", f"{rate:.0f} M beats/s; {slow:.0f} x the stepper")
+    return ratio
+
+
+def first_translation() -> None:
+    """Processor seconds from a program to loaded code, and with the code kept from before."""
+    import os
+    import tempfile
+
+    from vliwsim.machine.stepper import Machine
+    from vliwsim.native import cache, compiler
+    from vliwsim.native.engine import Native
+    from vliwsim.program.assembler import assemble
+
+    compiler.binding()
+    for name in ("energy", "lowpass", "checksum"):
+        path = next((ROOT / "programs" / name).glob("*.vliw"))
+        seconds = {}
+        with tempfile.TemporaryDirectory() as folder:
+            os.environ["XDG_CACHE_HOME"] = folder
+            for when in ("first", "kept"):
+                machine = Machine(assemble(path).program)
+                cache.code_of.cache_clear()
+                started = time.process_time()
+                Native(machine).begin(range(0))
+                seconds[when] = time.process_time() - started
+        line(f"translation of {name}", f"{seconds['first']:.2f} s", f"processor time; kept: {seconds['kept']:.3f} s")
+
+
+def many_cases(count: int = 100_000) -> None:
+    from vliwsim.kernel.loaded import load_kernel
+
+    energy = load_kernel("energy")
+    x = np.random.default_rng(2).integers(-3000, 3000, (count, 64)).astype(np.int16)
+    energy.run_many({"x": x[:100]})
+    rates, wanted = [], (x.astype(np.int64) ** 2).sum(axis=1)
+
+    def ours() -> float:
+        started = time.perf_counter()
+        many = energy.run_many({"x": x})
+        seconds = time.perf_counter() - started
+        assert many.ok
+        assert (many.outputs["total"] == wanted).all()
+        return seconds
+
+    def numpy() -> float:
+        started = time.perf_counter()
+        (x.astype(np.int64) ** 2).sum(axis=1)
+        return time.perf_counter() - started
+
+    mine, theirs = interleaved(ours, numpy)
+    rates = count / statistics.median(mine)
+    slower = statistics.median(m / t for m, t in zip(mine, theirs, strict=True))
+    line("cases of energy, n = 64", f"{rates:,.0f}/s", f"asked: 200,000/s; NumPy's reference alone {slower:.0f} x")
+
+
+PARTS = {"stepper": stepper, "start": start, "assemble": assembling, "growth": growth, "shell": shell, "native": native}
 
 
 def main() -> int:

@@ -667,31 +667,59 @@ class Beats(Text):
         memory, accesses = self.core.memory, self.accesses
         if not accesses or (len(accesses) == 1 and not memory.waits):
             return None
-        width, banks = memory.bank_width, memory.banks
-        simple = memory.misaligned == "reject" and all(width % a.size == 0 for a in accesses)
-        if len(accesses) == 2 and simple and not memory.waits:
-            one, other = accesses
-            a, b = (self.let(f"udiv i32 {x.address}, {width}") for x in accesses)
-            if banks & banks - 1 == 0:
-                apart = self.let(f"and i32 {self.let(f'xor i32 {a}, {b}')}, {banks - 1}")
-                same = self.compare("eq", "i32", apart, "0")
-            else:
-                same = self.compare("eq", "i32", self.let(f"urem i32 {a}, {banks}"), self.let(f"urem i32 {b}, {banks}"))
-            loads = not one.store and not other.store
-            differ = self.compare("ne", "i32", a, b) if memory.broadcast and loads else None
-            conflict = self.both(same, differ, one.on, other.on)
-            bank = self.let(f"zext i1 {conflict} to i64")
-            if memory.conflict == "reject":
-                self.doubt(conflict)
-                return None
-            return bank, "0"
-        key = tuple((a.size, a.store) for a in accesses)
-        name = self.charges.setdefault(key, f"{self.prefix}charge{len(self.charges)}")
-        arguments = ", ".join(f"i32 {a.address}, i1 {a.on or 'true'}" for a in accesses)
-        made = self.let(f"call {{i64, i64}} @{name}({arguments})")
-        bank = self.let(f"extractvalue {{i64, i64}} {made}, 0")
+        within = all(memory.bank_width % a.size == 0 for a in accesses)
+        if len(accesses) != 2 or not within or memory.waits:
+            bank, wait = self.charge_by_call()
+        elif memory.misaligned == "reject":
+            bank, wait = self.let(f"zext i1 {self.meet()} to i64"), "0"
+        else:
+            bank, wait = self.charge_unless_aligned(), "0"
         if memory.conflict == "reject":
             self.doubt(self.compare("ne", "i64", bank, "0"))
+            return None if wait == "0" else ("0", wait)
+        return bank, wait
+
+    def meet(self) -> str:
+        """Whether two accesses, each within a word, make a bank serve one after the other."""
+        memory, (one, other) = self.core.memory, self.accesses
+        a, b = (self.let(f"udiv i32 {x.address}, {memory.bank_width}") for x in self.accesses)
+        if memory.banks & memory.banks - 1 == 0:
+            apart = self.let(f"and i32 {self.let(f'xor i32 {a}, {b}')}, {memory.banks - 1}")
+            same = self.compare("eq", "i32", apart, "0")
+        else:
+            same = self.compare(
+                "eq", "i32", self.let(f"urem i32 {a}, {memory.banks}"), self.let(f"urem i32 {b}, {memory.banks}")
+            )
+        loads = not one.store and not other.store
+        differ = self.compare("ne", "i32", a, b) if memory.broadcast and loads else None
+        return self.both(same, differ, one.on, other.on) or "true"
+
+    def charge_unless_aligned(self) -> str:
+        """Bank cycles of two accesses that are hardly ever misaligned."""
+        odd = self.either(
+            [
+                self.compare("ne", "i32", self.let(f"and i32 {a.address}, {a.size - 1}"), "0")
+                for a in self.accesses
+                if a.size > 1
+            ]
+        )
+        plain = self.let(f"zext i1 {self.meet()} to i64")
+        if odd is None:
+            return plain
+        before, apart, done = self.here, self.label("odd"), self.label("charged")
+        self.put(f"br i1 {odd}, label %{apart}, label %{done}{UNLIKELY}")
+        self.block(apart)
+        bank, _ = self.charge_by_call()
+        self.put(f"br label %{done}")
+        self.block(done)
+        return self.let(f"phi i64 [{plain}, %{before}], [{bank}, %{apart}]")
+
+    def charge_by_call(self) -> tuple[str, str]:
+        key = tuple((a.size, a.store) for a in self.accesses)
+        name = self.charges.setdefault(key, f"{self.prefix}charge{len(self.charges)}")
+        arguments = ", ".join(f"i32 {a.address}, i1 {a.on or 'true'}" for a in self.accesses)
+        made = self.let(f"call {{i64, i64}} @{name}({arguments})")
+        bank = self.let(f"extractvalue {{i64, i64}} {made}, 0")
         return bank, self.let(f"extractvalue {{i64, i64}} {made}, 1")
 
     # ------------------------------------------------------------------------------------------------------- redirect

@@ -42,7 +42,10 @@ class Turn:
 
 @attrs.frozen
 class Context:
-    """At the start of a beat, before anything lands; ``busy``: (slot, beats still taken)."""
+    """At the start of a beat, before anything lands; ``busy``: (slot, beats still taken).
+
+    ``lap``: which copy of the context this is where a loop is unrolled; it means nothing else.
+    """
 
     at: int
     within: int = 0
@@ -50,6 +53,7 @@ class Context:
     flights: tuple[Flight, ...] = ()
     turns: tuple[Turn, ...] = ()
     busy: tuple[tuple[int, int], ...] = ()
+    lap: int = 0
 
 
 @attrs.frozen(eq=False)

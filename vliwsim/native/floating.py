@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from vliwsim.description.language.floats import NAN
 from vliwsim.description.language.types import ValueType
-from vliwsim.native.text import Text, number
+from vliwsim.native.text import UNLIKELY, Text, number
 
 _CANONICAL = str(NAN)
 _MAGNITUDE = "2147483647"
@@ -25,8 +25,9 @@ def to_float(text: Text, bits: str) -> str:
 
 def from_float(text: Text, value: str) -> str:
     """The bits of a number, of a NaN the canonical one's."""
-    bits = text.let(f"bitcast float {value} to i32")
-    return text.select(text.let(f"fcmp uno float {value}, {value}"), "i32", _CANONICAL, bits)
+    odd = text.let(f"fcmp uno float {value}, {value}")
+    chosen = text.let(f"select i1 {odd}, float 0x7FF8000000000000, float {value}{UNLIKELY}")
+    return text.let(f"bitcast float {chosen} to i32")
 
 
 def is_nan(text: Text, bits: str) -> str:

@@ -5,12 +5,17 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Iterator
 
+import attrs
+
 from vliwsim.native.contexts import Context, Contexts, Step
 
 MOST_CONTEXTS = 3000
 """Contexts of a region; the ways beyond lead back to the stepper."""
 
 MOST_ENTRIES = 64
+
+UNROLLED = 8
+"""Loops of so many contexts at most are unrolled, to as many."""
 
 
 class Region:
@@ -24,11 +29,22 @@ class Region:
 
     def __init__(self, walker: Contexts, seed: Context, undefined: int, cap: int = MOST_CONTEXTS) -> None:
         self.walker = walker
+        self._laps: dict[Context, tuple[int, int, bool]] = {}
+        self._walk(seed, cap)
+        self._laps = self._unrolled()
+        if self._laps:
+            self._walk(seed, cap)
+        self.entries = [0, *sorted(self.heads - {0})][:MOST_ENTRIES]
+        self.may = self._may_be_undefined(undefined)
+        self.chain, self.place = self._chains()
+        self.span, self.reach = self._spans()
+
+    def _walk(self, seed: Context, cap: int) -> None:
         self.index: dict[Context, int] = {seed: 0}
         self.steps: list[Step] = []
         ahead = deque([seed])
         while ahead:
-            step = walker.step(ahead.popleft())
+            step = self._lapped(self.walker.step(ahead.popleft()))
             self.steps.append(step)
             for context in step.successors:
                 if context not in self.index and len(self.index) < cap:
@@ -36,10 +52,76 @@ class Region:
                     ahead.append(context)
         self.successors = [[self.index[c] for c in step.successors if c in self.index] for step in self.steps]
         self.heads, self._order = self._search()
-        self.entries = [0, *sorted(self.heads - {0})][:MOST_ENTRIES]
-        self.may = self._may_be_undefined(undefined)
-        self.chain, self.place = self._chains()
-        self.span, self.reach = self._spans()
+
+    def _unrolled(self) -> dict[Context, tuple[int, int, bool]]:
+        """Contexts of small loops: which loop, its laps, and whether a lap begins here.
+
+        In one pass a result in flight is moved from variable to variable at every beat; in some passes one behind the
+        other LLVM finds that most of these moves are none.
+        """
+        found = {}
+        for number, loop in enumerate(self._loops()):
+            if len(loop) <= UNROLLED:
+                for k in loop:
+                    found[self.steps[k].context] = number, -(-UNROLLED // len(loop)), k in self.heads
+        return found
+
+    def _lapped(self, step: Step) -> Step:
+        """The step with its successors in the right lap."""
+        here = self._laps.get(attrs.evolve(step.context, lap=0)) if self._laps else None
+        if here is None:
+            return step
+
+        def lapped(context: Context | None) -> Context | None:
+            there = self._laps.get(context) if context else None
+            if context is None or there is None or there[0] != here[0]:
+                return context
+            return attrs.evolve(context, lap=(step.context.lap + there[2]) % there[1])
+
+        return attrs.evolve(
+            step, waiting=lapped(step.waiting), refreshed=lapped(step.refreshed), fallen=lapped(step.fallen),
+            turned=tuple(map(lapped, step.turned)),
+        )  # fmt: skip
+
+    def _loops(self) -> list[list[int]]:
+        """Sets of contexts that all lead to each other (R. Tarjan, Depth-first search and linear graph algorithms,
+        SIAM Journal on Computing 1, 1972)."""
+        number, low = [-1] * len(self), [0] * len(self)
+        open_: list[int] = []
+        inside = [False] * len(self)
+        loops: list[list[int]] = []
+        stack: list[tuple[int, Iterator[int]]] = []
+        count = 0
+
+        def enter(k: int) -> None:
+            nonlocal count
+            number[k] = low[k] = count
+            count += 1
+            open_.append(k)
+            inside[k] = True
+            stack.append((k, iter(self.successors[k])))
+
+        enter(0)
+        while stack:
+            here, rest = stack[-1]
+            following = next(rest, None)
+            if following is not None:
+                if number[following] < 0:
+                    enter(following)
+                elif inside[following]:
+                    low[here] = min(low[here], number[following])
+                continue
+            stack.pop()
+            if stack:
+                low[stack[-1][0]] = min(low[stack[-1][0]], low[here])
+            if low[here] == number[here]:
+                at = open_.index(here)
+                loop, open_ = open_[at:], open_[:at]
+                for k in loop:
+                    inside[k] = False
+                if len(loop) > 1 or here in self.successors[here]:
+                    loops.append(loop)
+        return loops
 
     def __len__(self) -> int:
         return len(self.steps)

@@ -31,7 +31,6 @@ from vliwsim.native.exchange import (
 from vliwsim.native.meanings import function
 from vliwsim.native.region import Region
 
-PARAMETERS = "ptr noalias %io, ptr noalias %mem, ptr noalias %status"
 STALLS = {"bank": BANK, "wait": WAIT, "penalty": PENALTY, "straddle": STRADDLE, "fresh": FRESH}
 
 
@@ -93,7 +92,9 @@ class Translation(Beats):
             function(operation, halves, own, self.following) for (operation, halves), own in self.functions.items()
         )
         charges = "\n".join(charge_function(self.core.memory, accesses, own) for accesses, own in self.charges.items())
-        head = f"define void @{name}({PARAMETERS}) nounwind {{\nstart:\n"
+        # the block of hand-over is always there, so that LLVM may keep counters out of loops
+        block = f"ptr noalias writable dereferenceable({self.layout.bytes}) %io"
+        head = f"define void @{name}({block}, ptr noalias %mem, ptr noalias %status) nounwind {{\nstart:\n"
         return f"{calls}\n{charges}\n{head}" + "\n".join(lines) + "\n}\n"
 
     def enter(self) -> None:
