@@ -35,7 +35,7 @@ def test_every_shipped_kernel_is_decided(source: Path, core: str) -> None:
 
 
 def test_tagged_kernels_mean_every_read_before_a_landing() -> None:
-    for name in ("energy", "weighted_sum"):
+    for name in ("energy", "weighted_sum", "peak", "window_scale"):
         verdict = check_kernel(assemble_source(name))
         assert verdict.tagged
         assert verdict.early
