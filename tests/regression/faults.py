@@ -6,7 +6,10 @@ from typing import NamedTuple
 
 
 class Fault(NamedTuple):
-    """``old`` becomes ``new`` in ``file``, where it first stands; ``kind`` of the claim that must not hold then."""
+    """``old`` becomes ``new`` in ``file``, where it first stands; ``kind`` of the claim that must not hold then.
+
+    ``cases``: how many of the smallest are enough to find it.
+    """
 
     name: str
     file: str
@@ -14,6 +17,7 @@ class Fault(NamedTuple):
     new: str
     kind: str = "case"
     core: str | None = None
+    cases: int = 8
 
 
 PLAIN = "weighted_sum/plain.vliw"
@@ -63,7 +67,7 @@ FAULTS = [
         "guard turned round", ENERGY, "@1  lw g2, [g10 then +8] if g20", "@1  lw g2, [g10 then +8] if not g20", "legal"
     ),
     Fault("declared bytes too few", ENERGY, "over 24", "over 8"),
-    Fault("signed shift of an unsigned value", PEAK, "srl       g12, g6, 16", "sra       g12, g6, 16"),
+    Fault("signed shift of an unsigned value", PEAK, "srl       g12, g6, 16", "sra       g12, g6, 16", cases=24),
     Fault("last sums collected twice", FULL, "@1  add        g7, g7, front", "@0  add        g7, g7, front", "legal"),
     Fault("missing saturation", CALIBRATE, "@load                 sub.h2.sat", "@load                 sub.h2    "),
     Fault(

@@ -35,7 +35,7 @@ def size_of(case: Case) -> int:
     return sum(len(value) for value in case.inputs.values() if hasattr(value, "__len__"))
 
 
-def broken_claims(source: Path, fault: Fault, most: int | None = 24) -> list[Claim]:
+def broken_claims(source: Path, fault: Fault, most: int | None) -> list[Claim]:
     """What does not hold, in the order of a report; judged on the smallest cases only, for speed."""
     options = Options(interrupts=fault.kind == "interrupts", limit=100_000)
     judge = Judge(str(source), fault.core, options)
@@ -56,7 +56,7 @@ def _first_cases(judge: Judge) -> list[Claim]:
 @pytest.mark.parametrize("fault", [*FAULTS, *UNSAFE], ids=lambda fault: fault.name)
 def test_a_planted_fault_is_found_and_the_message_leads_to_the_line(fault: Fault, tmp_path: Path, long: bool) -> None:
     source, line = planted(tmp_path, fault)
-    broken = broken_claims(source, fault, None if long else 24)
+    broken = broken_claims(source, fault, None if long else fault.cases)
     assert broken
     assert broken[0].kind == fault.kind
     leading = [claim for claim in broken[:SHOWN] if line in claim.lines]

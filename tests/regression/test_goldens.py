@@ -215,7 +215,7 @@ class TestAgainstAGolden:
 
     def test_slower_does_not_hold_and_says_where(self, tmp_path: Path) -> None:
         source = write(tmp_path, SUM.replace("budget  5 * n + 2", ""))
-        assert command("golden", source, "--date", DAY).return_value == 0
+        assert command("golden", source, "--date", DAY, "--case", "smallest", "--case", "small-3").return_value == 0
         text = source.read_text()
         source.write_text(text.replace("@1 count", "@2 count").replace("@4 add", "@5 add"))
         verdict = Judge(str(source), None, Options()).verdict()
