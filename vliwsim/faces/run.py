@@ -32,6 +32,16 @@ NOT_SIMULATED = (
 """What the JSON object of a kernel that is not simulated has no value for."""
 
 
+def _clear(context: click.Context, _: click.Parameter, wanted: bool) -> None:
+    """Drop the kept machine code."""
+    if wanted:
+        from vliwsim.native import cache
+
+        count = cache.clear()
+        click.echo(f"{count} kept {'translation' if count == 1 else 'translations'} dropped.")
+        context.exit(0)
+
+
 @click.command(short_help="Run a kernel.")
 @click.argument("kernel")
 @click.option(
@@ -58,6 +68,14 @@ NOT_SIMULATED = (
     type=click.Choice(["auto", "step", "native"]),
     default=None,
     help="What runs it: the stepper, machine code, or machine code once a run is long (auto).",
+)
+@click.option(
+    "--clear-code",
+    is_flag=True,
+    is_eager=True,
+    expose_value=False,
+    callback=_clear,
+    help="Drop the machine code kept between runs, and leave.",
 )
 @click.option("--save", multiple=True, metavar="NAME=FILE.npy", help="Write an output to a new file.")
 @click.option("--replace", is_flag=True, help="Let --save replace files.")
