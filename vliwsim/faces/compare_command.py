@@ -63,12 +63,15 @@ def _silent(text: str) -> None:
 
 
 def _given(kernel: Any, reference: Any, given: Mapping[str, Any]) -> Any:
+    from vliwsim.kernel.binding import bind
     from vliwsim.kernel.cases import case_with
     from vliwsim.kernel.interface import interface_of
 
     arrays = {item.name for item in interface_of(kernel).arrays}
     values = {n: [v] if n in arrays and isinstance(v, (int, float)) else v for n, v in given.items()}
-    return case_with(kernel, reference, None, values)
+    case = case_with(kernel, reference, None, values)
+    bind(kernel, case.inputs)  # what was asked for must fit; cases that do not are only left out
+    return case
 
 
 def _sizes(text: str | None) -> list[int]:
