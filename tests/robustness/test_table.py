@@ -13,6 +13,7 @@ import pytest
 from tests.kernel.sources import DOUBLE, REFERENCES, SUM
 from tests.robustness import (
     rows_arrays,
+    rows_commands,
     rows_cores,
     rows_images,
     rows_operations,
@@ -30,6 +31,7 @@ ROOMS = {
     "array": rows_arrays.ROWS,
     "reference": rows_references.ROWS,
     "option": rows_options.ROWS,
+    "command": rows_commands.ROWS,
 }
 CASES = [pytest.param(row, id=f"{room}: {row.title}") for room, rows in ROOMS.items() for row in rows]
 

@@ -153,7 +153,8 @@ def usage_problem(error: click.ClickException, arguments: Sequence[str] | None =
     if isinstance(error, click.BadParameter):
         name = error.param.opts[0] if error.param else "an argument"
         kind = error.param.type if error.param else None
-        return problem("bad-option", f"{name}: {error.message.rstrip('.')}", _allowed(kind), remedy)
+        found = error.message.rstrip(".").partition(" is not ")[0]
+        return problem("bad-option", f"{name}: {found}", _allowed(kind), remedy)
     if isinstance(error, click.UsageError) and error.message.startswith("No such command"):
         given = error.message.split("'")[1] if "'" in error.message else ""
         near = _near(given, list(COMMANDS), "--help")
