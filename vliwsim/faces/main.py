@@ -102,7 +102,9 @@ def status_of(arguments: Sequence[str] | None = None) -> int:
         complain([usage_problem(error, arguments)])
         return 2
     except MemoryError:
-        complain([problem("out-of-memory", "not enough memory on this machine", "", "smaller sizes or memory.size")])
+        complain(
+            [problem("out-of-memory", "not enough memory", "what this machine has", "smaller sizes or memory.size")]
+        )
         return 2
     except BrokenPipeError:
         _drop_output()  # whoever read it has gone
