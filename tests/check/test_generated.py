@@ -41,3 +41,9 @@ def test_it_would_notice(monkeypatch: pytest.MonkeyPatch) -> None:
         examine(seed, tally)
     assert any("lands-twice" in line for line in tally.missed)
     assert any("write-ports" in line for line in tally.missed)
+
+
+@pytest.mark.parametrize("seed", [40725])
+def test_programs_that_once_slipped_through(seed: int) -> None:
+    """40725: an interlocked core judges guards while a bundle waits, also one that can never issue."""
+    assert not examined(range(seed, seed + 1)).missed

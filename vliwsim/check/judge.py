@@ -164,14 +164,13 @@ class _Judge:
         spread = Spread(self.graph, domain)
         for index, registers in enumerate(spread.read):
             beat = self.graph.beats[index]
-            if registers is None or beat is None or not beat.guards and beat.did != "issue":
+            if registers is None or beat is None:
                 continue
             if None in self.graph.successors(index):
                 for use in domain.at_the_end(spread, index):
                     self._use(spread, domain, use)
-            if beat.guards:
-                for use in domain.uses(index, registers):
-                    self._use(spread, domain, use)
+            for use in domain.uses(index, registers):
+                self._use(spread, domain, use)
         if self.inputs.stored and self.complete:
             detail = f"bytes of {', '.join(self.inputs.stored)} that nothing is stored to"
             self.found.setdefault("undefined-used", {})["stored"] = Incident(

@@ -131,14 +131,26 @@ class Definedness:
         """Undefined registers that the bundle of a context must not use."""
         beat = self.graph.beats[context]
         assert beat is not None
+        if self._judges_guards(context):
+            for k, part in enumerate(self._parts(context)):
+                guard = part.instruction.guard
+                if guard and registers[guard.register]:
+                    yield Use(context, k, guard.register, "guard", registers[guard.register], True)
         for k, (part, on) in enumerate(zip(self._parts(context), beat.guards)):
-            guard = part.instruction.guard
-            if guard and registers[guard.register]:
-                yield Use(context, k, guard.register, "guard", registers[guard.register], True)
             if on is not False:
                 for register, what, certain in self._needed(part):
                     if registers[register]:
                         yield Use(context, k, register, what, registers[register], certain and on is True)
+
+    def _judges_guards(self, context: int) -> bool:
+        """Whether guards are judged in the beat: where a bundle issues, or waits with none of them pending."""
+        beat, ready = self.graph.beats[context], self.graph.ready
+        assert beat is not None
+        if beat.guards or not ready.core.interlocked:
+            return bool(beat.guards)
+        guards = {p.instruction.guard.register for p in self._parts(context) if p.instruction.guard}
+        flights = self.graph.contexts[context].flights
+        return not any(f.beats and ready.sites[f.number].write.register in guards for f in flights)
 
     def _needed(self, part: Part) -> Iterator[tuple[int, str, bool]]:
         """(register, what, whether an undefined one is an error for certain) of what must be defined."""
