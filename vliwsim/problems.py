@@ -53,7 +53,7 @@ class Problem:
         if self.key:
             head.append(self.key)
         head.append(f"{self.name}  ({self.kind})")
-        lines = ["  ".join(head)]
+        lines = [printable("  ".join(head))]
         if self.excerpt.strip() and self.place:
             text, caret = _window(self.excerpt.rstrip(), self.place.column - 1)
             lines += [f"    {printable(text)}", "    " + " " * caret + "^"]
