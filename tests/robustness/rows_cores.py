@@ -75,7 +75,7 @@ KEYS = [
         "a key misspelt", ["unknown-key", "missing-key"], but("registers   =", "registres   ="), remedy="registers"
     ),
     refused("a table nobody has", "unknown-key", SMALL + "[cache]\nsize = 4\n"),
-    refused("a terminal's command for a key", "unknown-key", SMALL + '"\\u001b[2J\\u00a0" = 1\n'),
+    refused("a terminal's command for a key", ["bad-name", "unknown-class"], SMALL + '"\\u001b[2J\\u00a0" = 1\n'),
     refused("no operations", "missing-key", but('operations = ["integer", "memory", "control"]\n', "")),
     refused("text for a number", "wrong-type", but("load = 3", 'load = "3"')),
     refused("a float for a number", "wrong-type", but("load = 3", "load = 3.0")),
