@@ -128,7 +128,16 @@ def test_what_takes_long_to_import_is_imported_when_it_is_used(module: str) -> N
     loaded = {name.split(".")[0] for name in imports(module, list(at_import(TREES[module])))}
     if module == "vliwsim.faces.pytest_plugin":  # which only pytest imports
         loaded.discard("pytest")
-    assert not loaded & {"networkx", "rich", "prompt_toolkit", "scipy", "hypothesis", "pytest", "matplotlib", "llvmlite"}
+    assert not loaded & {
+        "networkx",
+        "rich",
+        "prompt_toolkit",
+        "scipy",
+        "hypothesis",
+        "pytest",
+        "matplotlib",
+        "llvmlite",
+    }
     if level_of(module) <= level_of("vliwsim.program"):
         assert "numpy" not in loaded
 

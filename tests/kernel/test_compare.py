@@ -70,7 +70,7 @@ def test_json_has_no_nan() -> None:
 
 
 def test_an_overflow_is_no_last_place() -> None:
-    """Infinity is one step beyond the largest number on the line of all binary32 values, and still no rounding of it."""
+    """Infinity is one step beyond the largest binary32 number, and still no rounding of it."""
     largest = np.array([np.finfo(np.float32).max], np.float32)
     infinite = np.array([np.inf], np.float32)
     element = ELEMENTS["f32"]
