@@ -7,7 +7,8 @@ from pathlib import Path
 import pytest
 
 from tests.robustness import fuzz
-from tests.robustness.fuzz import Defect, Mutant, campaign, judge, mutant, table
+from tests.robustness.fuzz import Defect, campaign, judge, table
+from tests.robustness.mutants import Mutant, mutant
 from tests.robustness.workshop import Result
 
 PARTS = 10

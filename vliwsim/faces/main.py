@@ -7,6 +7,7 @@ user stopped it. A mistake of the user is said as found, allowed, try on standar
 from __future__ import annotations
 
 import errno
+import gc
 import io
 import os
 import sys
@@ -75,6 +76,7 @@ def cli(ctx: click.Context, version: bool) -> None:
 
 def main(arguments: Sequence[str] | None = None) -> NoReturn:
     """Run the command line and leave with its exit status."""
+    gc.set_threshold(100_000, 20, 50)  # starting makes many objects and hardly any garbage
     for stream in (sys.stdout, sys.stderr):
         if isinstance(stream, io.TextIOWrapper):
             stream.reconfigure(errors="replace")  # what a terminal has no letter for is no reason to fail
