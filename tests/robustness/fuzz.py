@@ -1,6 +1,6 @@
 """A fuzzer over every kind of file and over command lines.
 
-Each mutant is made from its seed alone, so that any of them can be made and run again:
+Each mutant is made from its number alone (and the shipped files), so any of them can be made and run again:
 
     python -m tests.robustness.fuzz 50000             mutants 0 to 49999, counts by outcome
     python -m tests.robustness.fuzz 25000 --from 25000
@@ -38,7 +38,6 @@ SECONDS = 5
 """CPU time after which a mutant hangs."""
 LARGEST = 2_000_000
 """Characters that one command may say."""
-OUTPUT = {"assemble": "out.image", "disassemble": "out.vliw", "run": "out.npy"}
 SILENT = ("more-problems",)
 """Problems that allow nothing."""
 
