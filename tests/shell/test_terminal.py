@@ -210,7 +210,7 @@ def vliwsim(monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str])
     return run
 
 
-TRANSCRIPT = """early_read on pair7, n = 6, case given. help lists the commands.
+DIALOGUE = """early_read on pair7, n = 6, case given. help lists the commands.
   landed  nothing
   issues  lh sample, [g10 then +2]
   out     nothing
@@ -242,7 +242,7 @@ def test_a_script_is_plain_text_and_always_the_same(tmp_path: Path, vliwsim: Vli
     assert runs[0].stdout == runs[1].stdout
     assert runs[0].stderr == ""
     assert runs[0].returncode == 0
-    assert runs[0].stdout == TRANSCRIPT
+    assert runs[0].stdout == DIALOGUE
 
 
 def test_a_pipe_is_a_script(tmp_path: Path, vliwsim: Vliwsim) -> None:
