@@ -216,6 +216,10 @@ def weights(translation: Translation) -> dict[int, int]:
     for first in translation.chain:
         number = translation.chain_counter[first]
         found[number] = found.get(number, 0) + 1
+    for (k, kind), number in translation.edge_counter.items():
+        if kind == "out":  # the rest of the last pass is not run
+            chain = translation.chain_counter[translation.chain[k]]
+            found[number] = translation.region.place[k] + 1 - found[chain]
     return found
 
 

@@ -44,7 +44,8 @@ class Turn:
 class Context:
     """At the start of a beat, before anything lands; ``busy``: (slot, beats still taken).
 
-    ``lap``: which copy of the context this is where a loop is unrolled; it means nothing else.
+    ``lap`` and ``trusted``: which copy of the context this is where a loop is unrolled or runs in strips; they mean
+    nothing else.
     """
 
     at: int
@@ -54,6 +55,7 @@ class Context:
     turns: tuple[Turn, ...] = ()
     busy: tuple[tuple[int, int], ...] = ()
     lap: int = 0
+    trusted: bool = False
 
 
 @attrs.frozen(eq=False)

@@ -51,7 +51,10 @@ class Loaded:
         self.bundle_of = np.array([step.context.at for step in region.steps], np.int64)
         self.beginning = np.array([step.context.within == 0 for step in region.steps], np.int64)
         self.holding = np.array([step.held for step in region.steps], bool)
-        self.edges = [(k, kind, number) for (k, kind), number in translation.edge_counter.items()]
+        self.outside = list(translation.outside)
+        edges = translation.edge_counter.items()
+        self.edges = [(k, kind, number) for (k, kind), number in edges if kind != "out"]
+        self.outs = [(k, number) for (k, kind), number in edges if kind == "out"]
 
     def view(self, start: int, kind: type, count: int) -> np.ndarray:
         return np.frombuffer(self.block, kind, count, start)
@@ -155,7 +158,7 @@ class Loaded:
             self._halted(state, k)
             return
         inside = k < len(region)
-        context = region.steps[k].context if inside else self.translation.outside[k - len(region)]
+        context = region.steps[k].context if inside else self.outside[k - len(region)]
         state.at, state.within, state.waited_fresh = context.at, context.within, context.waited
         state.flight = {}
         sites = self.machine.ready.sites
@@ -184,6 +187,9 @@ class Loaded:
         times = counts[self.chain_of]
         if reason in (exchange.GIVEN_BACK, exchange.OUT_OF_FUEL):
             times[(self.chain_of == self.chain_of[k]) & (self.place >= self.place[k])] -= 1
+        for context, number in self.outs:  # the rest of the last pass is not run
+            behind = (self.chain_of == self.chain_of[context]) & (self.place > self.place[context])
+            times[behind] -= counts[number]
         beats = int(times.sum())
         held = int(times[self.holding].sum())
         times[self.holding] = 0

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 from collections import deque
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 
 import attrs
 
 from vliwsim.native.contexts import Context, Contexts, Step
+from vliwsim.native.strips import Strip, strip_of
 
 MOST_CONTEXTS = 3000
 """Contexts of a region; the ways beyond lead back to the stepper."""
@@ -24,20 +25,31 @@ class Region:
     ``undefined``: registers that may be undefined at the seed, as bits. ``entries``: contexts that may be entered, the
     seed and the heads of loops. ``heads``: contexts that loops come back to. ``may``: for every context the registers
     that may be undefined, as bits. ``span``: an upper bound of the cycles from one head to the next;
-    ``reach``: of those before the first head and behind the last.
+    ``reach``: of those before the first head and behind the last. ``strips``: by head, the loops with a trusted copy;
+    the copies are the contexts from ``own`` on, ``copy`` leads to them, and ``trusted`` has their (context, part) whose
+    accesses are not judged. ``thorough``: unroll small loops and run in strips those that can be.
     """
 
-    def __init__(self, walker: Contexts, seed: Context, undefined: int, cap: int = MOST_CONTEXTS) -> None:
+    def __init__(
+        self, walker: Contexts, seed: Context, undefined: int, cap: int = MOST_CONTEXTS, thorough: bool = True
+    ) -> None:
         self.walker = walker
         self._laps: dict[Context, tuple[int, int, bool]] = {}
         self._walk(seed, cap)
-        self._laps = self._unrolled()
+        if thorough:
+            self._laps = self._unrolled()
         if self._laps:
             self._walk(seed, cap)
         self.entries = [0, *sorted(self.heads - {0})][:MOST_ENTRIES]
         self.may = self._may_be_undefined(undefined)
         self.chain, self.place = self._chains()
         self.span, self.reach = self._spans()
+        self.own = len(self)
+        self.strips: dict[int, Strip] = {}
+        self.trusted: set[tuple[int, int]] = set()
+        self.copy: dict[int, int] = {}
+        if thorough:
+            self._copy_strips()
 
     def _walk(self, seed: Context, cap: int) -> None:
         self.index: dict[Context, int] = {seed: 0}
@@ -72,16 +84,12 @@ class Region:
         if here is None:
             return step
 
-        def lapped(context: Context | None) -> Context | None:
-            there = self._laps.get(context) if context else None
-            if context is None or there is None or there[0] != here[0]:
-                return context
-            return attrs.evolve(context, lap=(step.context.lap + there[2]) % there[1])
-
-        return attrs.evolve(
-            step, waiting=lapped(step.waiting), refreshed=lapped(step.refreshed), fallen=lapped(step.fallen),
-            turned=tuple(map(lapped, step.turned)),
-        )  # fmt: skip
+        led = {}
+        for context in step.successors:
+            there = self._laps.get(context)
+            if there is not None and there[0] == here[0]:
+                led[context] = attrs.evolve(context, lap=(step.context.lap + there[2]) % there[1])
+        return _led(step, led)
 
     def _loops(self) -> list[list[int]]:
         """Sets of contexts that all lead to each other (R. Tarjan, Depth-first search and linear graph algorithms,
@@ -191,6 +199,44 @@ class Region:
         assert -1 not in chain
         return chain, place
 
+    def _copy_strips(self) -> None:
+        """Give every loop that is one cycle, and that has something to trust, its copy."""
+        for loop in self._loops():
+            cycle = self._cycle(loop)
+            strip = strip_of(self.walker, self.steps, cycle) if cycle else None
+            if strip is None:
+                continue
+            self.strips[strip.head] = strip
+            begins = len(self.steps)
+            self.copy.update((k, begins + place) for place, k in enumerate(strip.cycle))
+            self.trusted |= {(self.copy[k], part) for k, part in strip.trusted}
+            inside = {self.steps[k].context: attrs.evolve(self.steps[k].context, trusted=True) for k in strip.cycle}
+            for place, k in enumerate(strip.cycle):
+                step = attrs.evolve(_led(self.steps[k], inside), context=inside[self.steps[k].context])
+                self.index[step.context] = len(self.steps)
+                self.steps.append(step)
+                self.may.append(self.may[k])
+                self.chain.append(begins)
+                self.place.append(place)
+        self.successors += [
+            [self.index[c] for c in step.successors if c in self.index] for step in self.steps[self.own :]
+        ]
+
+    def _cycle(self, loop: list[int]) -> list[int] | None:
+        """The contexts of a loop in order, its head first; None where its ways part, or meet other than at one head."""
+        inside = set(loop)
+        heads = inside & self.heads
+        if len(heads) != 1:
+            return None
+        cycle = [*heads]
+        while True:
+            ahead = [k for k in self.successors[cycle[-1]] if k in inside]
+            if len(ahead) != 1:
+                return None
+            if ahead[0] == cycle[0]:
+                return cycle
+            cycle.append(ahead[0])
+
     def _spans(self) -> tuple[int, int]:
         """The longest way between heads, and of what comes before the first and behind the last, in cycles."""
         core = self.walker.core
@@ -209,3 +255,15 @@ class Region:
             out[here] = own + max((out[f] for f in self.successors[here] if f not in self.heads), default=0)
         last = max((f.beats for step in self.steps for f in (*step.staying, *(f for _, f in step.new))), default=0)
         return max([1, *(to_head[h] for h in self.heads)]), max(0, *to_head, 0) + max(out) + last + 1
+
+
+def _led(step: Step, to: Mapping[Context, Context]) -> Step:
+    """The step with other successors for some."""
+
+    def led(context: Context | None) -> Context | None:
+        return to.get(context, context) if context else None
+
+    return attrs.evolve(
+        step, waiting=led(step.waiting), refreshed=led(step.refreshed), fallen=led(step.fallen),
+        turned=tuple(map(led, step.turned)),
+    )  # fmt: skip

@@ -8,6 +8,7 @@ the stepper with the state as it was at the start of the beat; then all of it is
 
 from __future__ import annotations
 
+from vliwsim.native.ahead import FIRST, HELD, Ahead
 from vliwsim.native.beats import Beats
 from vliwsim.native.charges import charge_function
 from vliwsim.native.contexts import Context
@@ -34,13 +35,14 @@ from vliwsim.native.region import Region
 STALLS = {"bank": BANK, "wait": WAIT, "penalty": PENALTY, "straddle": STRADDLE, "fresh": FRESH}
 
 
-class Translation(Beats):
+class Translation(Ahead, Beats):
     """The text of one region's code. ``following``: undefined bytes are carried along instead of given back."""
 
     def __init__(self, region: Region, following: bool = False) -> None:
         super().__init__(region, following)
-        self.entries = list(range(len(region))) if following else region.entries
+        self.entries = list(range(region.own)) if following else region.entries
         self.chain = list(range(len(region))) if following else region.chain
+        self.heads = {copy: head for head, copy in region.copy.items()}
         flights = max(len(c.flights) for c in [*region.index, *self._edge()])
         turns = max(len(c.turns) for c in [*region.index, *self._edge()])
         firsts = sorted(set(self.chain))
@@ -50,12 +52,14 @@ class Translation(Beats):
             for kind, there in (("hold", step.waiting), ("fresh", step.refreshed)):
                 if there is not None and not step.held:
                     self.edge_counter[k, kind] = len(firsts) + len(self.edge_counter)
+            if k >= region.own and step.ways > 1 and not following:
+                self.edge_counter[k, "out"] = len(firsts) + len(self.edge_counter)
         self.note_index: dict[tuple[str, int, int, int | None], int] = {}
         for bundle in sorted({step.context.at for step in region.steps}):
             self._number_notes(bundle)
         counters = len(firsts) + len(self.edge_counter)
         self.layout: Layout = layout(len(self.core.register_names), flights, turns, counters, len(self.note_index))
-        self.outside: list[Context] = []
+        self.outside: dict[Context, int] = {}
 
     def _edge(self) -> list[Context]:
         """Contexts just outside the region."""
@@ -75,7 +79,7 @@ class Translation(Beats):
     # ---------------------------------------------------------------------------------------------------- the function
 
     def text(self, name: str) -> str:
-        for k in range(len(self.region)):
+        for k in range(self.region.own if self.following else len(self.region)):
             self.context(k)
         for k, context in enumerate(self.outside):
             self.block(f"outside{k}")
@@ -95,13 +99,17 @@ class Translation(Beats):
         # the block of hand-over is always there, so that LLVM may keep counters out of loops
         block = f"ptr noalias writable dereferenceable({self.layout.bytes}) %io"
         head = f"define void @{name}({block}, ptr noalias %mem, ptr noalias %status) nounwind {{\nstart:\n"
-        return f"{calls}\n{charges}\n{head}" + "\n".join(lines) + "\n}\n"
+        held = HELD if self.region.strips and not self.following else ""
+        return f"{calls}\n{charges}\n{held}\n{head}" + "\n".join(lines) + "\n}\n"
 
     def enter(self) -> None:
         """Variables filled, and the way to the context entered at."""
         at = self.layout
         self.put(f"%fuel0 = load i64, ptr {self.header(FUEL)}")
         self.put("store i64 %fuel0, ptr %fuel")
+        for variable, kind in sorted(self.variables.items()):
+            if variable.startswith(("%rest", "%reach", "%left", "%allotted")):
+                self.put(f"store {kind} {FIRST if variable.startswith('%reach') else 0}, ptr {variable}")
         for cause in STALLS:
             self.put(f"store i64 0, ptr %stall.{cause}")
         mask = "i8" if self.following else "i1"
@@ -149,12 +157,22 @@ class Translation(Beats):
     def context(self, k: int) -> None:
         """The blocks of context ``k``."""
         self.begin(k)
-        if self.chain[k] == k:
+        self.probe(k)
+        if self.strip is None and self.chain[k] == k:
             self.tally(self.chain_counter[k])
+        elif self.chain[k] == k:
+            self.begin_pass()
         self.beat()
+        for label, way in self.ways_out.items():
+            self.block(label)
+            self.leave_strip(k)
+            self.count_edge("out")
+            self.put(f"br label %{way}")
         left = f"leave{k}" in self.used
         if left:
             self.block(f"leave{k}")
+            if self.strip is not None:
+                self.leave_strip(k)
             self.put(f"store i64 {GIVEN_BACK}, ptr {self.header(REASON)}")
             self.put(f"br label %give{k}")
         if left or (k in self.region.heads and not self.step.leave):
@@ -233,6 +251,11 @@ class Translation(Beats):
         more = self.let(f"add i64 {self.let(f'load i64, ptr {place}')}, 1")
         self.put(f"store i64 {more}, ptr {place}")
 
+    def add_to_chain(self, k: int, passes: str) -> None:
+        place = self.place(self.layout.counts + 8 * self.chain_counter[self.chain[k]])
+        more = self.let(f"add i64 {self.let(f'load i64, ptr {place}')}, {passes}")
+        self.put(f"store i64 {more}, ptr {place}")
+
     def count_edge(self, kind: str) -> None:
         counter = self.edge_counter.get((self.k, kind))
         if counter is not None:
@@ -244,15 +267,21 @@ class Translation(Beats):
         return self.compare("ne", "i8", self.let(f"load i8, ptr {self.place(self.layout.noted + index)}"), "0")
 
     def way_to(self, context: Context) -> str:
-        """The label of the block that begins ``context``."""
+        """The label of the block that begins ``context``, or leads there from a trusted copy."""
         index = self.region.index.get(context)
-        if index is not None:
-            return f"c{index}"
-        if context not in self.outside:
-            self.outside.append(context)
-        return f"outside{self.outside.index(context)}"
+        if index is None:
+            outside = self.outside.setdefault(context, len(self.outside))
+        label = f"outside{outside}" if index is None else f"c{index}"
+        if self.strip is None or (index is not None and self.region.chain[index] == self.strip):
+            return label
+        out = self.label("out")
+        self.ways_out[out] = label
+        return out
 
     def halted(self, last: str) -> None:
+        if self.strip is not None:
+            self.leave_strip(self.k)
+            self.count_edge("out")
         self.put(f"store i64 {last}, ptr {self.header(LAST)}")
         self.put(f"store i64 {self.k}, ptr {self.header(CONTEXT)}")
         self.put(f"store i64 {HALTED}, ptr {self.header(REASON)}")

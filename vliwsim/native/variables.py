@@ -98,6 +98,8 @@ class Variables(Text):
         self.now: dict[int, Held] = {}
         self.slots: dict[tuple[int, int], tuple[Held, str | None]] = {}
         self.doubts: list[str] = []
+        self.strip = self.region.chain[k] if k >= self.region.own else None
+        self.ways_out: dict[str, str] = {}
         self.block(f"c{k}")
 
     def held(self, register: int) -> Held:
