@@ -477,6 +477,25 @@ class TestProcesses:
         assert b"\x1b" not in out
         assert b"Traceback" not in seen + out
 
+    def test_leaving_at_once_loses_nothing(self, tmp_path: Path) -> None:
+        kept = tmp_path / "kept.txt"
+        code = (
+            "import atexit, sys; from vliwsim.faces.main import main; "
+            f"held = open({str(kept)!r}, 'w'); held.write('said in time'); "
+            "atexit.register(print, 'and the last word'); main(['cores', 'nosuch'])"
+        )
+        result = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, timeout=60, check=False)
+        assert kept.read_text() == "said in time"
+        assert result.stdout == "and the last word\n"
+        assert result.returncode == 2
+        assert "nosuch" in result.stderr
+
+    def test_a_profiler_has_the_last_word(self) -> None:
+        command = [sys.executable, "-m", "cProfile", "-m", "vliwsim", "cores"]
+        result = subprocess.run(command, capture_output=True, text=True, timeout=60, check=False)
+        assert "pair7" in result.stdout
+        assert "function calls" in result.stdout
+
     def test_cold_start_imports_nothing_heavy(self) -> None:
         code = (
             "import sys; from vliwsim.faces.main import status_of; status_of(['run', 'energy', '--no-reference']); "
