@@ -153,7 +153,7 @@ class Loaded:
         known = range(len(self.registers)) if self.following else np.flatnonzero(self.masks == 0).tolist()
         for register in known:
             state.operands[register] = value_of(int(self.registers[register]), int(self.masks[register]))
-        self._account(state, k, reason)
+        self.account(state, k, reason)
         if reason == exchange.HALTED:
             self._halted(state, k)
             return
@@ -181,7 +181,7 @@ class Loaded:
         for slot, beats in context.busy:
             state.busy_until[slot] = state.beat + beats
 
-    def _account(self, state: State, k: int, reason: int) -> None:
+    def account(self, state: State, k: int, reason: int) -> None:
         """Counts, stalls and the three counters."""
         header, counts = self.header, self.counts
         times = counts[self.chain_of]
