@@ -9,8 +9,7 @@ from __future__ import annotations
 import ast
 import math
 from collections.abc import Iterator, Mapping
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.check.residues import UNKNOWN, Residue, constant, lowest_bit
 from vliwsim.program.kernel import Formula
@@ -18,8 +17,7 @@ from vliwsim.program.kernel import Formula
 INFINITY = math.inf
 
 
-@attrs.frozen
-class Range:
+class Range(NamedTuple):
     """Whole numbers from ``low`` to ``high``, both included, that leave ``rest`` when divided by ``step``.
 
     ``address``: the value as a residue.
@@ -48,14 +46,14 @@ class Range:
             low = low + (self.rest - int(low)) % self.step
         if abs(high) < INFINITY:
             high = high - (int(high) - self.rest) % self.step
-        return attrs.evolve(self, low=low, high=high)
+        return self._replace(low=low, high=high)
 
     def stepped(self, step: int, rest: int) -> Range:
         """Leaving ``rest`` when divided by ``step`` too, where that is the finer statement."""
         if step <= self.step:
             return self
         address = Residue.of(None, rest, lowest_bit(step))
-        return attrs.evolve(self, step=step, rest=rest % step, address=address).narrowed()
+        return self._replace(step=step, rest=rest % step, address=address).narrowed()
 
 
 ANY = Range()

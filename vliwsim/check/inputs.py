@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.check.formulas import ANY, INFINITY, Range, Reader
 from vliwsim.check.residues import Residue, constant, lowest_bit
@@ -21,8 +20,7 @@ WHOLE_NUMBERS = {
 }
 
 
-@attrs.frozen
-class Array:
+class Array(NamedTuple):
     """An array's ``least`` and ``most`` bytes (infinity where no bound is known) and ``over`` bytes at least."""
 
     least: int
@@ -30,8 +28,7 @@ class Array:
     over: int
 
 
-@attrs.frozen
-class Inputs:
+class Inputs(NamedTuple):
     """``defined``: registers with a value. ``facts``: (register, is it nonzero). ``residues`` of registers.
 
     ``symbols``: what is known of an array's address itself. ``arrays`` by name. ``outputs``: (name, register) of
@@ -40,9 +37,9 @@ class Inputs:
 
     defined: frozenset[int] = frozenset()
     facts: tuple[tuple[int, bool], ...] = ()
-    residues: Mapping[int, Residue] = attrs.field(factory=dict)
-    symbols: Mapping[str, Residue] = attrs.field(factory=dict)
-    arrays: Mapping[str, Array] = attrs.field(factory=dict)
+    residues: Mapping[int, Residue] = {}
+    symbols: Mapping[str, Residue] = {}
+    arrays: Mapping[str, Array] = {}
     outputs: tuple[tuple[str, int], ...] = ()
     stored: tuple[str, ...] = ()
 
@@ -50,7 +47,7 @@ class Inputs:
         """A residue relative to an array, as one relative to nothing."""
         if residue.symbol is None:
             return residue
-        return attrs.evolve(residue, symbol=None).moved(self.symbols.get(residue.symbol, Residue(None, 0, 1)))
+        return residue._replace(symbol=None).moved(self.symbols.get(residue.symbol, Residue(None, 0, 1)))
 
 
 def inputs_of(kernel: Kernel) -> Inputs:

@@ -8,13 +8,12 @@ accesses of one bundle are.
 
 from __future__ import annotations
 
-import attrs
+from typing import NamedTuple
 
 WHOLE = 1 << 32
 
 
-@attrs.frozen
-class Residue:
+class Residue(NamedTuple):
     """``symbol`` + ``offset`` modulo ``modulus``; ``offset`` lies below ``modulus``."""
 
     symbol: str | None

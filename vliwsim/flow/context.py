@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping, Sequence
+from typing import NamedTuple
 
 import attrs
 
@@ -38,8 +39,7 @@ class Turn:
     target: int | None = attrs.field(order=False)
 
 
-@attrs.frozen
-class Context:
+class Context(NamedTuple):
     """At the start of a beat, before anything lands.
 
     ``at``: bundle index, ``within``: beats of its idle word already issued. ``busy``: (slot, beats still taken).

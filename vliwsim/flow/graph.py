@@ -4,8 +4,7 @@ from __future__ import annotations
 
 from collections import Counter, deque
 from collections.abc import Iterator, Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.flow.context import Context
 from vliwsim.flow.step import Beat, Stepper
@@ -16,8 +15,7 @@ MOST_CONTEXTS = 20_000
 """Contexts an eager walk makes before it gives up."""
 
 
-@attrs.frozen
-class Edge:
+class Edge(NamedTuple):
     """How a context was first reached: from context ``parent`` (an index), by a beat that ``did``."""
 
     parent: int

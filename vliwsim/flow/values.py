@@ -9,15 +9,13 @@ keeps a drained epilogue out of its loop. A comparison with zero and a value tha
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-
-import attrs
+from typing import NamedTuple
 
 Identity = int
 """An opaque value, numbered from 0 within a context."""
 
 
-@attrs.frozen(order=True)
-class Constant:
+class Constant(NamedTuple):
     """A value known exactly: 32 raw bits."""
 
     bits: int
@@ -26,8 +24,7 @@ class Constant:
 Known = Identity | Constant
 
 
-@attrs.frozen(order=True)
-class Literal:
+class Literal(NamedTuple):
     """``value`` is not zero (``nonzero``), or is zero."""
 
     value: Identity

@@ -6,7 +6,7 @@ what each allows stand in :data:`ALLOWED`.
 
 from __future__ import annotations
 
-import attrs
+from typing import NamedTuple
 
 ALLOWED = {
     "lands-twice": "one result a register a beat",
@@ -34,8 +34,7 @@ ALLOWED = {
 """Every hazard's stable name, in the order of judgement, and what is allowed instead."""
 
 
-@attrs.frozen
-class Cause:
+class Cause(NamedTuple):
     """One operation behind a hazard: instruction ``instruction`` of bundle ``bundle``, issued in beat ``beat``."""
 
     bundle: int
@@ -43,8 +42,7 @@ class Cause:
     beat: int
 
 
-@attrs.frozen
-class Hazard:
+class Hazard(NamedTuple):
     """``name`` at ``beat`` and ``cycle``, with bundle index ``bundle`` at the point of issue (``halt``'s in drain).
 
     ``found`` says what happened in terms of registers, clusters, slots and addresses; ``causes`` are the operations

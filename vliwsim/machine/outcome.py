@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.values import Value
 from vliwsim.machine.hazards import Hazard
@@ -12,8 +11,7 @@ from vliwsim.machine.memory import Memory
 from vliwsim.machine.state import NoteSite
 
 
-@attrs.frozen
-class Outcome:
+class Outcome(NamedTuple):
     """The account and final state of a run.
 
     ``reason``: ``halt``, ``hazard`` or ``limit`` (the cycle limit, or a stop asked for). ``stalls``: cycles by cause,

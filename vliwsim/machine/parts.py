@@ -8,6 +8,7 @@ nowhere.
 from __future__ import annotations
 
 from collections.abc import Callable
+from typing import NamedTuple
 
 import attrs
 
@@ -19,8 +20,7 @@ from vliwsim.program.effects import Effects, Write
 WORD = 0xFFFFFFFF
 
 
-@attrs.frozen
-class WriteSite:
+class WriteSite(NamedTuple):
     """A write number's meaning: ``write`` of instruction ``instruction`` in bundle ``bundle``."""
 
     bundle: int
@@ -41,8 +41,7 @@ class Input:
     half: int | None
 
 
-@attrs.frozen
-class Reach:
+class Reach(NamedTuple):
     """An address operand: operand-file indices of base and step, and how they combine."""
 
     base: int
@@ -71,8 +70,7 @@ class Reach:
         return (base + step) & WORD
 
 
-@attrs.frozen
-class Part:
+class Part(NamedTuple):
     """One instruction, prepared.
 
     ``numbers``: the write number of each of the effects' writes. ``results``: for every output that is a register, its

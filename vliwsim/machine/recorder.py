@@ -6,8 +6,7 @@ While a recorder is installed the machine steps by definition; once removed it r
 from __future__ import annotations
 
 from collections.abc import Callable
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.values import Value
 from vliwsim.machine.issued import Issued
@@ -16,8 +15,7 @@ from vliwsim.machine.state import State
 from vliwsim.machine.stepper import Machine
 
 
-@attrs.frozen
-class Landing:
+class Landing(NamedTuple):
     """One register that received ``value``, sent by ``site`` in beat ``sent``."""
 
     register: int
@@ -26,8 +24,7 @@ class Landing:
     sent: int
 
 
-@attrs.frozen
-class Record:
+class Record(NamedTuple):
     """One beat. ``bundle`` and ``within`` name the bundle at the point of issue; ``cause`` says why it did not issue.
 
     ``on``: which of its instructions had their guard on (empty if it did not issue). ``stores``: (address, bytes,

@@ -8,8 +8,6 @@ from collections.abc import Callable
 from functools import lru_cache
 from typing import Any, Literal, NamedTuple
 
-import attrs
-
 from vliwsim.description.core import Core
 from vliwsim.description.operations import Kind
 from vliwsim.description.values import Value, join, split
@@ -74,8 +72,7 @@ class Group(NamedTuple):
     rows: tuple[ResultRow, ...]
 
 
-@attrs.frozen
-class Rows:
+class Rows(NamedTuple):
     """A bundle as the hot loop takes it. ``accesses``: how many of its operations touch memory, guards on."""
 
     groups: tuple[Group, ...]

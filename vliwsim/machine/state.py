@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.core import Core
 from vliwsim.description.values import NOTHING, Value
@@ -19,8 +18,7 @@ Batch = tuple[tuple[int, ...], Sequence[Value]]
 """Results of one bundle that land together: write numbers (see :mod:`vliwsim.machine.prepared`) and their values."""
 
 
-@attrs.frozen
-class NoteSite:
+class NoteSite(NamedTuple):
     """Where a note belongs: its name, the instruction of the program it speaks of, and the register if it names one."""
 
     name: str

@@ -6,16 +6,14 @@ Used by the machine, the checks and the bounds alike, so that none of them knows
 from __future__ import annotations
 
 from collections.abc import Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.core import Core
 from vliwsim.description.operations import Kind, Operation, Role
 from vliwsim.program.code import Address, Instruction, Mode, Place, Register
 
 
-@attrs.frozen
-class Read:
+class Read(NamedTuple):
     """One register read through a port: ``operand`` is its name in the operation (``base``, ``step`` in an address)."""
 
     register: int
@@ -23,8 +21,7 @@ class Read:
     crossing: bool
 
 
-@attrs.frozen
-class Write:
+class Write(NamedTuple):
     """One register written ``latency`` beats after issue. ``what``: ``result``, ``sticky``, ``update`` or ``count``.
 
     ``crossing``: the register is not in the slot's cluster, which no slot can do.
@@ -37,8 +34,7 @@ class Write:
     crossing: bool
 
 
-@attrs.frozen
-class Effects:
+class Effects(NamedTuple):
     """``reads`` by operand place, a pair as two; ``writes`` in operand order, a pair as two, then the base update.
 
     ``busy``: beats the slot's unit is taken.

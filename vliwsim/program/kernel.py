@@ -7,7 +7,7 @@ arrays to it, the machine runs ``program``, and diagnostics find their lines thr
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Protocol
+from typing import NamedTuple, Protocol
 
 import attrs
 
@@ -41,8 +41,7 @@ class Formula(Protocol):
         ...
 
 
-@attrs.frozen
-class Item:
+class Item(NamedTuple):
     """One interface line.
 
     ``kind``: given, returns, changes, table, scratch. ``type``: i8…i32, u8…u32, q15, q31, f32. ``size``: elements, None
@@ -68,8 +67,7 @@ class Item:
     within: Formula | None = None
 
 
-@attrs.frozen
-class Section:
+class Section(NamedTuple):
     """A labelled stretch: ``first`` is its first bundle's index in the program, ``beats`` its length in beats."""
 
     label: str
@@ -78,8 +76,7 @@ class Section:
     place: Place
 
 
-@attrs.frozen
-class ItemTag:
+class ItemTag(NamedTuple):
     """What the source says of an operation: it works on the item of the loop that is ``age`` passes old.
 
     ``others``: (register, age) of operands that come from another item.
@@ -89,8 +86,7 @@ class ItemTag:
     others: tuple[tuple[int, int], ...] = ()
 
 
-@attrs.frozen
-class SourceMap:
+class SourceMap(NamedTuple):
     """From bundles (by index in the program) and their instructions (in bundle order) back to the source."""
 
     sections: tuple[Section, ...]

@@ -8,8 +8,7 @@ where a link would carry too much a bounded search looks for another one. The re
 from __future__ import annotations
 
 from collections.abc import Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.core import Core
 from vliwsim.program.assembly.operands import Ready
@@ -20,8 +19,7 @@ MOST_TRIES = 20_000
 """Steps of the search for an assignment that the links can carry."""
 
 
-@attrs.frozen
-class Crowd:
+class Crowd(NamedTuple):
     """Operations (by index in the bundle) that have only ``slots`` to share, fewer than they are."""
 
     operations: tuple[int, ...]

@@ -81,8 +81,7 @@ class AddressFields(NamedTuple):
     step: Field
 
 
-@attrs.frozen
-class Part:
+class Part(NamedTuple):
     """The fields of one operand: a register, perhaps with a half; an address; a narrow constant; of a wide one none.
 
     ``immediate``: the register (or ``step``) field may hold the code for an immediate. ``value_bits``: width of an
@@ -114,8 +113,7 @@ class Part:
         return tuple(field for field in (self.register, self.half, self.constant) if field is not None)
 
 
-@attrs.frozen
-class Format:
+class Format(NamedTuple):
     """How one operation uses the bits above the header: a part for each operand, then the short immediate.
 
     ``immediate`` has width 0 where no bit is left (every immediate then takes an extension word) or none is possible.

@@ -6,8 +6,7 @@ import re
 from collections import Counter
 from collections.abc import Iterable
 from pathlib import PurePosixPath
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.program.kernel import Formula, Item
 from vliwsim.program.source.complaints import Complaints
@@ -24,8 +23,7 @@ _ARRAYS_ONLY = ("over", "align", "bank", "from")
 _LSB = re.compile(r"\s+lsb\Z")
 
 
-@attrs.frozen
-class Interface:
+class Interface(NamedTuple):
     """What the header says of data. ``sizes``: the names a caller gives or that follow from array lengths."""
 
     items: tuple[Item, ...]

@@ -67,8 +67,7 @@ class Repeat(NamedTuple):
 Node = Label | Stamp | Idle | Let | Name | Call | Repeat
 
 
-@attrs.define
-class ItemLine:
+class ItemLine(NamedTuple):
     """An interface line: ``clauses`` are the texts behind ``= from at in over within align bank``."""
 
     kind: str
