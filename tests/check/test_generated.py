@@ -9,7 +9,7 @@ from __future__ import annotations
 import pytest
 
 from tests.check.generated import Tally, examine, examined, lines
-from vliwsim.flow import step
+from vliwsim.flow import landing
 from vliwsim.machine.hazards import ALLOWED
 
 CHUNK = 250
@@ -35,7 +35,7 @@ def test_no_run_of_many_meets_what_is_proved_absent(first: int) -> None:
 
 def test_it_would_notice(monkeypatch: pytest.MonkeyPatch) -> None:
     """A check that overlooks what lands together is found out."""
-    monkeypatch.setattr(step._Step, "judge_landing", lambda *_: None)
+    monkeypatch.setattr(landing, "judge_landing", lambda *_: None)
     tally = Tally()
     for seed in range(60):
         examine(seed, tally)
