@@ -122,7 +122,7 @@ class _Builder:
         try:
             return check(table[key])
         except Refused as why:
-            self.findings += [attrs.evolve(f, path=(*path, *f.path)) for f in why.findings]
+            self.findings += [f._replace(path=(*path, *f.path)) for f in why.findings]
             return otherwise
 
     def table(self, key: str, most: int = MOST_ENTRIES) -> Table:
@@ -210,7 +210,7 @@ class _Builder:
         made = structure(Latency, {"classes": table} | own, ("latency",), findings)
         # "classes" is no key of the file: what it holds stands in [latency] itself
         for f in findings:
-            self.findings.append(attrs.evolve(f, path=("latency", *f.path[2:])) if f.path[1:2] == ("classes",) else f)
+            self.findings.append(f._replace(path=("latency", *f.path[2:])) if f.path[1:2] == ("classes",) else f)
         assert made is not None
         return made
 

@@ -11,9 +11,7 @@ import re
 import tomllib
 from collections.abc import Iterable, Mapping, Sequence
 from pathlib import Path
-from typing import Any
-
-import attrs
+from typing import Any, NamedTuple
 
 from vliwsim.description.coreparts import Finding, described
 from vliwsim.description.places import isa_folder
@@ -36,8 +34,7 @@ def core_names() -> list[str]:
     return sorted(path.stem for path in (isa_folder() / "cores").glob("*.toml"))
 
 
-@attrs.frozen(eq=False)
-class Layer:
+class Layer(NamedTuple):
     """Plain data and the file it is from; None for the changes a user asks for and for an existing core."""
 
     data: Plain

@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 from collections.abc import Callable, Iterator, Mapping
 from functools import cache
-from typing import Any, TypeVar, cast
+from typing import Any, NamedTuple, TypeVar, cast
 
 import attrs
 
@@ -37,8 +37,7 @@ IDENTIFIER = re.compile(r"[a-z][a-z0-9_]{0,39}")
 OPERATION = re.compile(r"[a-z][a-z0-9_]{0,39}(\.[a-z0-9_]{1,40}){0,6}")
 
 
-@attrs.frozen
-class Finding:
+class Finding(NamedTuple):
     """One mistake at a key path, not yet placed in a file."""
 
     name: str
@@ -190,7 +189,7 @@ def several(check: Check, what: str, least: int = 0, most: int = 64) -> Check:
             try:
                 checked = check(element)
             except Refused as why:
-                findings += [attrs.evolve(f, path=(k, *f.path)) for f in why.findings]
+                findings += [f._replace(path=(k, *f.path)) for f in why.findings]
                 continue
             if checked in kept:
                 findings.append(
@@ -216,7 +215,7 @@ def beats_by_name(value: object) -> object:
                 raise refuse("bad-name", shown(name), "the name of an operation, such as mul.half")
             beats(number)
         except Refused as why:
-            findings += [attrs.evolve(f, path=(name, *f.path)) for f in why.findings]
+            findings += [f._replace(path=(name, *f.path)) for f in why.findings]
     if findings:
         raise Refused(*findings[:MOST_FINDINGS])
     return dict(value)
@@ -303,7 +302,7 @@ def structure(
         return cast(T, _structurer(kind)({**offered, **given}, kind))
     except Exception as why:
         mistakes = list(_findings(why, keys))
-    findings.extend(attrs.evolve(mistake, path=(*path, *mistake.path)) for mistake in mistakes)
+    findings.extend(mistake._replace(path=(*path, *mistake.path)) for mistake in mistakes)
     bad = {mistake.path[0] for mistake in mistakes}
     good = {key: value for key, value in offered.items() if key not in bad}
     return cast(T, _structurer(kind)({**_STAND_IN.get(kind, {}), **good, **given}, kind))
@@ -340,7 +339,7 @@ def _findings(why: Exception, keys: Mapping[str, Check]) -> Iterator[Finding]:
     for inner in why.exceptions:
         field = next((note.name for note in getattr(inner, "__notes__", ()) if hasattr(note, "name")), "")
         if isinstance(inner, Refused):
-            yield from (attrs.evolve(f, path=(field, *f.path)) for f in inner.findings)
+            yield from (f._replace(path=(field, *f.path)) for f in inner.findings)
         elif isinstance(inner, ForbiddenExtraKeysError):
             for key in sorted(inner.extra_fields)[:MOST_FINDINGS]:
                 yield unknown_key((key,), keys)

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import enum
 from collections.abc import Callable, Mapping, Sequence
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import attrs
 
@@ -30,8 +30,7 @@ class Role(enum.Enum):
     CONSTANT = "constant"  # an immediate, never a register
 
 
-@attrs.frozen
-class Operand:
+class Operand(NamedTuple):
     """``type`` is a value type's name (``i32``, ``i16x2``, ``f32``…; ``i64``/``u64`` are register pairs).
 
     ``half``: reads one chosen half of a register, ``type`` then has 16 bits.
@@ -44,8 +43,7 @@ class Operand:
     pair: bool = False
 
 
-@attrs.frozen
-class Access:
+class Access(NamedTuple):
     """The one memory access of an operation: value ``type``, ``bytes`` (1, 2, 4, 8), load or store."""
 
     type: str

@@ -12,8 +12,7 @@ The text is made from the tree alone, of numbers and names of our own making: no
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.language import calls_python as calls
 from vliwsim.description.language import floats, helpers
@@ -52,8 +51,7 @@ HELPERS: Mapping[str, object] = {
 _FLOAT_NAMES = {"+": "_add", "-": "_subtract", "*": "_multiply", "/": "_divide"}
 
 
-@attrs.frozen
-class Held:
+class Held(NamedTuple):
     """Where in the raw value given for an input its bits are: ``bits`` from bit ``low``, of ``whole`` given."""
 
     low: int

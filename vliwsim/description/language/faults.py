@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.problems import Place, Problem
 
@@ -38,8 +37,7 @@ class Faults(Exception):
         super().__init__("; ".join(fault.found for fault in self.faults))
 
 
-@attrs.frozen
-class Origin:
+class Origin(NamedTuple):
     """Where a text stands in its file: ``line`` and ``column`` of its first character, counted from 1.
 
     ``before``: what stands before it on its first line.

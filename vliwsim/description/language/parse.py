@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import ast
 from collections.abc import Sequence
+from typing import NamedTuple
 
 import attrs
 
@@ -23,8 +24,7 @@ from vliwsim.description.operations import Access, Operand, Role
 _TRUTH_TYPE = ValueType("truth", 1, False)
 
 
-@attrs.frozen
-class Parsed:
+class Parsed(NamedTuple):
     """The syntax of one meaning: roles settled, names resolved, types not yet checked."""
 
     operands: tuple[Operand, ...]
@@ -102,9 +102,7 @@ class _Parser(Expressions):
     def settled(self) -> tuple[Operand, ...]:
         """The operands with their final roles: a plain one that is assigned is a RESULT."""
         return tuple(
-            attrs.evolve(operand, role=Role.RESULT)
-            if operand.role is Role.SOURCE and name in self.assigned
-            else operand
+            operand._replace(role=Role.RESULT) if operand.role is Role.SOURCE and name in self.assigned else operand
             for name, operand in self.operands.items()
         )
 

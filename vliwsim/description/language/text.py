@@ -2,15 +2,14 @@
 
 from __future__ import annotations
 
-import attrs
+from typing import NamedTuple
 
 NOTHING: frozenset[int] = frozenset()
 SOME = frozenset({-1})
 """Passes on an undefined value that is not meant to be a copy: whoever uses it must refuse."""
 
 
-@attrs.frozen
-class Text:
+class Text(NamedTuple):
     """``code`` computes a value; the value meant is that plus ``offset`` (kept apart so that sums can drop it).
 
     ``atom``: binds closer than any operator. ``passes``: sizes in bytes of undefined values that the code, instead of
@@ -53,7 +52,7 @@ class Text:
 
     def computed(self) -> Text:
         """As a computed value, which passes on no undefined value as a copy."""
-        return attrs.evolve(self, passes=SOME) if self.passes else self
+        return self._replace(passes=SOME) if self.passes else self
 
 
 def literal(value: int) -> str:

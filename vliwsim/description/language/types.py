@@ -8,15 +8,13 @@ to the whole register when written.
 from __future__ import annotations
 
 import re
-
-import attrs
+from typing import NamedTuple
 
 LONGEST = 128
 """Every intermediate value of a meaning fits so many bits."""
 
 
-@attrs.frozen
-class ValueType:
+class ValueType(NamedTuple):
     """``bits`` of one lane (the only one of a scalar); ``lanes`` of a packed type, lane 0 in the low bits."""
 
     name: str
