@@ -13,7 +13,7 @@ from vliwsim.native import cache
 from vliwsim.native.compiler import Code, compile_text
 from vliwsim.native.contexts import Context, Contexts, Flight, Turn
 from vliwsim.native.loaded import Loaded
-from vliwsim.native.region import Region
+from vliwsim.native.region import MOST_CONTEXTS, Region
 from vliwsim.native.translate import Translation
 
 MOST_REGIONS = 8
@@ -31,11 +31,20 @@ class Native:
 
     ``regions``: what has been translated. ``patience``: cycles the stepper goes on, where no context fits, before a
     translation from there is made. ``effort``: LLVM's optimisation level.
-    ``following``: carry undefined bytes along, which is slower, instead of leaving them to the stepper.
+    ``following``: carry undefined bytes along, which is slower, instead of leaving them to the stepper. ``most``:
+    contexts of a translation; the ways beyond lead back to the stepper.
     """
 
-    def __init__(self, machine: Machine, *, patience: int = PATIENCE, effort: int = 2, following: bool = False) -> None:
-        self.machine = machine
+    def __init__(
+        self,
+        machine: Machine,
+        *,
+        patience: int = PATIENCE,
+        effort: int = 2,
+        following: bool = False,
+        most: int = MOST_CONTEXTS,
+    ) -> None:
+        self.machine, self.most = machine, most
         self.patience, self.effort, self.following = patience, effort, following
         self.walker = Contexts(machine.ready)
         self.regions: list[Loaded] = []
@@ -57,7 +66,7 @@ class Native:
         return self._translate(seed, sum(1 << r for r in registers if isinstance(state.operands[r], Undefined)))
 
     def _translate(self, seed: Context, undefined: int) -> Loaded:
-        translation = Translation(Region(self.walker, seed, undefined), self.following)
+        translation = Translation(Region(self.walker, seed, undefined, self.most), self.following)
         made = Loaded(self.machine, translation, self.code(translation.text("run")))
         self.regions.append(made)
         return made
