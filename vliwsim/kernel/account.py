@@ -3,14 +3,12 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.program.kernel import Kernel, Section
 
 
-@attrs.frozen(eq=False)
-class SectionCost:
+class SectionCost(NamedTuple):
     """One labelled stretch of a run. ``bundles`` it issued, of which each pass through all of it issues ``beats``.
 
     ``passes``: how often its first beat was issued. ``whole``: every pass went through all of it. ``drain``: cycles of
@@ -29,16 +27,14 @@ class SectionCost:
         return self.bundles + self.drain
 
 
-@attrs.frozen(eq=False)
-class SlotUse:
+class SlotUse(NamedTuple):
     """``used``: beats of the hottest section in which the slot's unit was taken, whether the guard was on or off."""
 
     slot: str
     used: int
 
 
-@attrs.frozen(eq=False)
-class Account:
+class Account(NamedTuple):
     """The cycles of a run; :attr:`cycles` is always bundles + stalls + drain.
 
     ``stalls`` by cause, ``sections`` in program order (those that issued anything), ``hottest`` the label of the

@@ -11,9 +11,8 @@ from __future__ import annotations
 import inspect
 import zlib
 from collections.abc import Callable, Iterator, Mapping
-from typing import Any
+from typing import Any, NamedTuple
 
-import attrs
 import numpy as np
 
 from vliwsim.kernel.binding import bind
@@ -26,8 +25,7 @@ from vliwsim.problems import InterfaceError, Place, ReferenceFailure, problem
 from vliwsim.program.kernel import Kernel
 
 
-@attrs.frozen(eq=False)
-class Case:
+class Case(NamedTuple):
     """``inputs``: arrays, scalars and sizes by name, as :func:`vliwsim.kernel.binding.bind` takes them."""
 
     name: str

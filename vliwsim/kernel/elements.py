@@ -8,15 +8,14 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Mapping
+from typing import NamedTuple
 
-import attrs
 import numpy as np
 
 from vliwsim.problems import Problem, problem
 
 
-@attrs.frozen(eq=False)
-class Element:
+class Element(NamedTuple):
     """One element type: ``bytes`` in memory, the NumPy type it is shown as, the raw integers from ``low`` to ``high``.
 
     ``fraction``: bits after the point of a q type, else None. ``floating``: binary32, whose raw value is its bits.
@@ -73,8 +72,7 @@ ELEMENTS: Mapping[str, Element] = {
 }
 
 
-@attrs.frozen(eq=False)
-class Converted:
+class Converted(NamedTuple):
     """``array`` in the element's type, or None with the ``problems`` that forbid it; ``notes`` say what changed."""
 
     array: np.ndarray | None

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from typing import NamedTuple
 
-import attrs
 import numpy as np
 
 from vliwsim.description.values import Value, parts
@@ -19,8 +19,7 @@ ReadMemory = Callable[[int, int], tuple[bytes, bytes]]
 """(address, bytes) → the bytes, and for each a 1 if it is undefined."""
 
 
-@attrs.frozen(eq=False)
-class Outputs:
+class Outputs(NamedTuple):
     """``values`` by name in interface order; ``undefined``: for each, which elements are (0-dimensional for a scalar).
 
     ``problems``: one ``undefined-output`` for each output that is not all defined.

@@ -8,9 +8,7 @@ sizes always give the same addresses.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from typing import Any
-
-import attrs
+from typing import Any, NamedTuple
 
 from vliwsim.description.core import Memory
 from vliwsim.kernel.elements import ELEMENTS
@@ -27,8 +25,7 @@ ALIGN = 8
 """Alignment of an array that asks for none, in bytes: a register pair can be loaded from its start."""
 
 
-@attrs.frozen
-class Area:
+class Area(NamedTuple):
     """An array in memory: ``bytes`` from ``start``, then ``over`` readable bytes."""
 
     name: str
