@@ -62,14 +62,15 @@ def simulate(
     watch: Watch | None = None,
     listen: Callable[[Record], None] | None = None,
     engine: str = "auto",
+    machine: Machine | None = None,
 ) -> Simulation:
     """Run the program of ``setup`` to its halt, a hazard, ``limit`` cycles, or until ``watch`` asks to stop.
 
     ``engine``: ``step``; ``native``, machine code wherever there is some; ``auto``, that only once a run is long.
     ``interrupt_at``: the cycle, from 0, at or after which one interrupt is taken. ``listen`` gets a record
-    of every beat.
+    of every beat. ``machine``: one of the program that is there already.
     """
-    machine = Machine(setup.kernel.program)
+    machine = machine or Machine(setup.kernel.program)
     regions = [Region(a.name, a.start, a.bytes, a.over) for a in setup.areas]
     state = machine.start(dict(setup.registers), setup.memory, regions)
     if listen:

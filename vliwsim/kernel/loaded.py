@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 from vliwsim.description.core import Core
 from vliwsim.kernel.binding import describe
 from vliwsim.kernel.cases import Case, case_with, cases_of
+from vliwsim.kernel.crew import batch_of
 from vliwsim.kernel.interface import interface_of
 from vliwsim.kernel.loading import Changes, assemble_source
 from vliwsim.kernel.reference import Reference, load_reference
@@ -16,7 +17,8 @@ from vliwsim.kernel.runner import LIMIT, KernelRun, run_kernel
 from vliwsim.program.kernel import Kernel
 
 if TYPE_CHECKING:
-    from vliwsim.kernel.many import ManyRuns
+    from vliwsim.kernel.many import Cases, ManyRuns
+    from vliwsim.native.batch import Batch
 
 
 class LoadedKernel:
@@ -74,13 +76,18 @@ class LoadedKernel:
             trace=trace,
         )
 
+    @cached_property
+    def batch(self) -> Batch:
+        """The kernel's code, made ready for many runs on first use."""
+        return batch_of(self.kernel)
+
     def run_many(
-        self, arrays: Mapping[str, Any], *, limit: int = LIMIT, progress: Callable[[int], None] | None = None
+        self, cases: Cases, *, limit: int = LIMIT, progress: Callable[[int], bool | None] | None = None
     ) -> ManyRuns:
-        """Run many cases at once: of every array input a matrix, a row a case; see :func:`.many.run_many`."""
+        """Run many cases on all processors: a matrix of every array, or dicts; see :func:`.many.run_many`."""
         from vliwsim.kernel.many import run_many
 
-        return run_many(self.kernel, arrays, limit=limit, progress=progress)
+        return run_many(self.kernel, cases, limit=limit, progress=progress, batch=self.batch)
 
     def __repr__(self) -> str:
         interface = interface_of(self.kernel)

@@ -1,232 +1,337 @@
-"""Many runs of one program: a compiled loop over cases, on all processors.
+"""Many runs of one program: a compiled loop over cases, on all processors, and the account of all of them together.
 
-All cases have their arrays in the same places. A case runs in plain code until it meets undefined data, and from there
-in code that carries undefined bytes along; one that either gives back for another reason is left to the caller.
+A case runs in plain code until it meets undefined data, and from there in code that carries undefined bytes along; one
+that either gives back for another reason is left to the caller.
 """
 
 from __future__ import annotations
 
 import ctypes
-import os
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from concurrent.futures import ThreadPoolExecutor
+import threading
+from collections.abc import Collection, Mapping, Sequence
+from typing import Any, cast
 
+import attrs
 import numpy as np
 
-from vliwsim.machine.memory import Memory, Region
+from vliwsim.machine.memory import DEFINED, Memory, Region
+from vliwsim.machine.state import CAUSES, State
 from vliwsim.machine.stepper import Machine
-from vliwsim.native import cache, exchange
+from vliwsim.native import cache, driver, exchange
 from vliwsim.native.contexts import Context, Contexts
-from vliwsim.native.exchange import HALTED
+from vliwsim.native.loaded import Loaded
 from vliwsim.native.region import Region as Contextual
-from vliwsim.native.text import Text
 from vliwsim.native.translate import Translation
 
-CHUNK = 2048
-"""Cases handed to a processor at a time."""
+SLICE = 1 << 23
+"""Cycles of a case between two looks at whether to go on, at most: well below a tenth of a second."""
 
-_MANY = ctypes.CFUNCTYPE(None, *[ctypes.c_void_p] * 6, ctypes.c_int64, ctypes.c_int64)
-Piece = tuple[int, int]
-"""(address, bytes)"""
+FOLLOWING_EFFORT = 0
+"""LLVM's optimisation level for code that follows undefined bytes: three times the text, mostly run for a few beats."""
+
+ROW, SHARED, BEFORE = 0, 1, 2
+"""Where a register or a piece of memory comes from: the case's row, what all cases share, the result before."""
+
+_MANY = ctypes.CFUNCTYPE(ctypes.c_int64, ctypes.c_void_p, ctypes.c_int64)
 
 
-class Batch:
-    """A program made ready for many cases.
+@attrs.frozen(eq=False)
+class Plan:
+    """Where everything of a case stands; the same for all cases that are run together.
 
-    ``given``: numbers of the registers that every case gives. ``regions``: the arrays. ``pieces``: (address, bytes) of
-    what every case puts into memory, ``outputs`` of what it gives back. A row holds a case's registers (32 bits each,
-    all of the core's) and its pieces, one behind the other.
+    ``registers``: (number, offset, source) of 32-bit values; ``image``: start values of all registers, for those that
+    are given and the same for all. ``pieces``: (address, bytes, offset, source) of what is put into memory. Offsets are
+    bytes in the row, in ``shared`` or in a result. What a case gives back: ``values`` (register, mask of the bytes that
+    matter) and ``arrays`` (address, bytes). ``row``: bytes of a case's row.
     """
 
-    def __init__(
-        self,
-        machine: Machine,
-        given: Sequence[int],
-        regions: Sequence[Region],
-        pieces: Sequence[Piece],
-        outputs: Sequence[Piece],
+    regions: tuple[Region, ...]
+    image: np.ndarray
+    registers: tuple[tuple[int, int, int], ...]
+    pieces: tuple[tuple[int, int, int, int], ...]
+    values: tuple[tuple[int, int], ...]
+    arrays: tuple[tuple[int, int], ...]
+    row: int
+    shared: bytes
+
+    @property
+    def value_places(self) -> list[int]:
+        """Offsets of the values in a result."""
+        return [driver.DATA + 4 * k for k in range(len(self.values))]
+
+    @property
+    def array_places(self) -> list[int]:
+        """Offsets of the arrays in a result."""
+        at, places = driver.DATA + 8 * -(-len(self.values) // 2), []
+        for _, size in self.arrays:
+            places.append(at)
+            at += 8 * -(-size // 8)
+        return [*places, at]
+
+    @property
+    def result(self) -> int:
+        """Bytes of a result."""
+        return self.array_places[-1]
+
+
+@attrs.frozen(eq=False)
+class Results:
+    """What some cases gave, a row each: ``rows`` as the plan says. ``finished``: ran through within the limit;
+    ``defined``: and all outputs are; ``cycles``: drain included."""
+
+    plan: Plan
+    rows: np.ndarray
+
+    @property
+    def finished(self) -> np.ndarray:
+        return self._number(driver.REASON) == exchange.HALTED
+
+    @property
+    def defined(self) -> np.ndarray:
+        return self._number(driver.DEFINED) != 0
+
+    @property
+    def cycles(self) -> np.ndarray:
+        return self._number(driver.CYCLES)
+
+    def value(self, k: int) -> np.ndarray:
+        """Raw 32-bit value ``k`` of every case."""
+        at = self.plan.value_places[k]
+        return np.ascontiguousarray(self.rows[:, at : at + 4]).view(np.uint32)[:, 0]
+
+    def array(self, k: int) -> np.ndarray:
+        """The bytes of array ``k``, a row a case."""
+        at = self.plan.array_places[k]
+        return np.ascontiguousarray(self.rows[:, at : at + self.plan.arrays[k][1]])
+
+    def _number(self, at: int) -> np.ndarray:
+        return np.ascontiguousarray(self.rows[:, at : at + 8]).view(np.int64)[:, 0]
+
+
+class Counted:
+    """What the cases that ran through counted: as a machine's state has it, all cases added up.
+
+    ``halts``: for each bundle how many cases halted in it, and the drain there.
+    """
+
+    def __init__(self, bundles: int) -> None:
+        self.cycle = self.beat = self.issue = 0
+        self.counts, self.begun = [0] * bundles, [0] * bundles
+        self.stalls = dict.fromkeys(CAUSES, 0)
+        self.halts: dict[int, tuple[int, int]] = {}
+
+    def add(self, other: Counted, times: int = 1) -> None:
+        self.cycle += times * other.cycle
+        self.beat += times * other.beat
+        self.issue += times * other.issue
+        for own, more in ((self.counts, other.counts), (self.begun, other.begun)):
+            own[:] = [one + times * two for one, two in zip(own, more, strict=True)]
+        for cause, stalls in other.stalls.items():
+            self.stalls[cause] += times * stalls
+        for bundle, (halts, drain) in other.halts.items():
+            self.halt(bundle, times * halts, times * drain)
+
+    def add_run(
+        self, counts: Sequence[int], begun: Sequence[int], stalls: Mapping[str, int], bundle: int | None, drain: int
     ) -> None:
-        self.machine, self.regions, self.pieces, self.outputs = machine, regions, tuple(pieces), tuple(outputs)
-        core = machine.core
-        self.registers = len(core.register_names)
-        zero = {core.register_numbers[name] for name in core.zero_registers}
-        defined = {*given, *zero}
-        undefined = sum(1 << r for r in range(self.registers) if r not in defined)
-        region = Contextual(Contexts(machine.ready), Context(0), undefined)
-        self.plain, self.following = Translation(region), Translation(region, following=True)
-        self.row = 4 * self.registers + sum(size for _, size in pieces)
-        self.result = 16 + 5 * self.registers + 2 * sum(size for _, size in outputs)
-        self.template = Memory(core.memory, regions)
-        for address, size in pieces:
-            self.template.define(address, bytes(size))
-        masks = bytes(0 if r in defined else 15 for r in range(self.registers))
-        status = b"".join(bytes(self.template.status[r.start : r.start + r.bytes]) for r in regions)
-        self.fixed = np.frombuffer(masks + status, np.uint8).copy()
-        text = self.plain.text("run") + self.following.text("follow") + _Many(self).text()
-        self.code = cache.code_of(text, 2)
-        self.function = _MANY(self.code.address("many"))
+        """A run by itself, with the bundle it halted in."""
+        other = Counted(len(self.counts))
+        other.counts[:], other.begun[:], other.issue = counts, begun, sum(counts)
+        other.stalls.update(stalls)
+        other.beat = other.cycle = other.issue + sum(stalls.values())
+        self.add(other)
+        if bundle is not None:
+            self.halt(bundle, 1, drain)
 
-    def run(
-        self, rows: Callable[[int, int], np.ndarray], count: int, fuel: int, progress: Callable[[int], None] | None
-    ) -> np.ndarray:
-        """Results of ``count`` cases, a row each; ``rows(first, last)`` gives the rows of some. See :meth:`parts`."""
-        results = np.zeros((count, self.result), np.uint8)
-        done = 0
+    def halt(self, bundle: int, halts: int, drain: int) -> None:
+        before = self.halts.get(bundle, (0, 0))
+        self.halts[bundle] = (before[0] + halts, before[1] + drain)
 
-        def some(first: int) -> int:
-            last = min(first + CHUNK, count)
-            self._some(np.ascontiguousarray(rows(first, last)), results[first:last], fuel)
-            return last - first
+    @property
+    def drain(self) -> int:
+        return sum(drain for _, drain in self.halts.values())
 
-        with ThreadPoolExecutor(os.cpu_count() or 1) as pool:
-            for finished in pool.map(some, range(0, count, CHUNK)):
-                done += finished
-                if progress:
-                    progress(done)
-        return results
 
-    def _some(self, rows: np.ndarray, results: np.ndarray, fuel: int) -> None:
-        block = np.zeros(max(self.plain.layout.bytes, self.following.layout.bytes), np.uint8)
-        memory = np.zeros(len(self.template.bytes), np.uint8)
-        status = np.frombuffer(bytes(self.template.status), np.uint8).copy()
-        arrays = (block, memory, status, rows, results, self.fixed)
-        self.function(*[array.ctypes.data for array in arrays], len(rows), fuel)
+class _Side:
+    """One translation, and what one count of each of its counters means."""
 
-    def parts(self, results: np.ndarray) -> Mapping[str, np.ndarray]:
-        """What a matrix of results holds: ``finished`` (did it halt), ``cycles``, ``registers``, ``masks`` (undefined
-        bytes), and for output k ``data k`` and ``status k``."""
-        at = 16 + 4 * self.registers
-        found = {
-            "finished": results[:, :8].copy().view(np.int64)[:, 0] == HALTED,
-            "cycles": results[:, 8:16].copy().view(np.int64)[:, 0],
-            "registers": results[:, 16:at].copy().view(np.uint32),
-            "masks": results[:, at : at + self.registers],
-        }
-        at += self.registers
-        for k, (_, size) in enumerate(self.outputs):
-            found[f"data {k}"], found[f"status {k}"] = results[:, at : at + size], results[:, at + size : at + 2 * size]
-            at += 2 * size
+    def __init__(self, machine: Machine, translation: Translation) -> None:
+        code = cache.code_of(translation.text("run"), FOLLOWING_EFFORT if translation.following else 2)
+        self.loaded = Loaded(machine, translation, code)
+        self.function = code.address("run")
+        self.bytes = translation.layout.bytes
+        self.counters = len(self.loaded.counts)
+        self.contexts = len(self.loaded.region) + len(self.loaded.outside)
+        units = [self.tallied(counter=k) for k in range(self.counters)]
+        self.weights = np.array([unit.beat for unit in units] or [0], np.int64)
+        inside = range(len(self.loaded.region))
+        self.left = np.zeros(self.contexts, np.int64)
+        self.left[inside] = [-self.tallied(given_back=k).beat for k in inside]
+        self.fuelled = np.full(self.contexts, -1, np.int64)
+        for k in set(translation.entries) & set(self.loaded.region.heads):
+            counter = translation.chain_counter[translation.chain[k]]
+            if int(self.weights[counter]) == int(self.left[k]):  # all that its chain counts lies behind it
+                self.fuelled[k] = counter
+
+    def tallied(self, counter: int | None = None, given_back: int | None = None) -> Counted:
+        """What one count of a counter means, or how much too much is counted of a context that is given back."""
+        counts = np.zeros(self.counters, np.int64)
+        if counter is not None:
+            counts[counter] = 1
+        return self.counted(counts, [0] * len(driver.CAUSES), given_back)
+
+    def counted(self, counts: np.ndarray, stalls: Sequence[int], given_back: int | None = None) -> Counted:
+        loaded, found = self.loaded, Counted(len(self.loaded.machine.program.bundles))
+        loaded.header[:] = 0
+        loaded.header[list(driver.CAUSES)] = stalls
+        loaded.counts[:] = counts
+        reason = exchange.HALTED if given_back is None else exchange.GIVEN_BACK
+        loaded.account(cast(State, found), given_back or 0, reason)
         return found
 
 
-class _Many(Text):
-    """Writes the loop over cases."""
+class Batch:
+    """A program made ready for many cases, of any sizes. ``given``: numbers of the registers every case gives."""
 
-    def __init__(self, batch: Batch) -> None:
-        super().__init__()
-        self.batch = batch
-        self.globals: list[str] = []
+    def __init__(self, machine: Machine, given: Collection[int]) -> None:
+        self.machine = machine
+        core = machine.core
+        self.registers = len(core.register_names)
+        self.defined = {*given, *(core.register_numbers[name] for name in core.zero_registers)}
+        undefined = sum(1 << r for r in range(self.registers) if r not in self.defined)
+        self.region = Contextual(Contexts(machine.ready), Context(0), undefined)
+        self.plain = _Side(machine, Translation(self.region))
+        self.code = cache.code_of(driver.Driver().text(), 2)
+        self.origin = np.arange(self.plain.contexts)
+        for own, copy in self.region.copy.items():
+            self.origin[copy] = own
+        self._following: _Side | None = None
+        self._lock = threading.Lock()
 
-    def text(self) -> str:
-        batch, put = self.batch, self.put
-        registers, layout = batch.registers, batch.plain.layout
-        put("br label %test")
-        self.block("test")
-        put("%c = phi i64 [0, %start], [%next, %end]")
-        put("%more = icmp slt i64 %c, %count")
-        put("br i1 %more, label %case, label %over")
-        self.block("over")
-        put("ret void")
-        self.block("case")
-        row = self.at("%rows", self.let(f"mul i64 %c, {batch.row}"))
-        result = self.at("%results", self.let(f"mul i64 %c, {batch.result}"))
-        self.copy(self.at("%io", layout.registers), row, 4 * registers)
-        self.copy(self.at("%io", layout.masks), "%fixed", registers)
-        offset = registers
-        for region in batch.regions:
-            self.copy(self.at("%status", region.start), self.at("%fixed", offset), region.bytes)
-            offset += region.bytes
-        offset = 4 * registers
-        for address, size in batch.pieces:
-            self.copy(self.at("%mem", address), self.at(row, offset), size)
-            offset += size
-        put(f"store i64 0, ptr {self.header(exchange.CONTEXT)}")
-        put(f"store i64 %fuel, ptr {self.header(exchange.FUEL)}")
-        first = self.run(batch.plain, "run")
-        reason = self.let(f"load i64, ptr {self.header(exchange.REASON)}")
-        put(f"br i1 {self.compare('eq', 'i64', reason, str(exchange.GIVEN_BACK))}, label %again, label %join")
-        self.block("again")
-        second = self.let(f"add i64 {first}, {self.run(batch.following, 'follow')}")
-        put("br label %join")
-        self.block("join")
-        total = self.let(f"phi i64 [{first}, %case], [{second}, %again]")
-        reason = self.let(f"load i64, ptr {self.header(exchange.REASON)}")
-        last = self.let(f"sub i64 {self.let(f'load i64, ptr {self.header(exchange.LAST)}')}, 1")
-        drain = self.let(f"call i64 @llvm.smax.i64(i64 {last}, i64 0)")
-        halted = self.compare("eq", "i64", reason, str(HALTED))
-        total = self.let(f"add i64 {total}, {self.select(halted, 'i64', drain, '0')}")
-        put(f"store i64 {reason}, ptr {result}, align 1")
-        put(f"store i64 {total}, ptr {self.at(result, 8)}, align 1")
-        self.copy(self.at(result, 16), self.at("%io", layout.registers), 4 * registers)
-        self.copy(self.at(result, 16 + 4 * registers), self.at("%io", layout.masks), registers)
-        offset = 16 + 5 * registers
-        for address, size in batch.outputs:
-            self.copy(self.at(result, offset), self.at("%mem", address), size)
-            self.copy(self.at(result, offset + size), self.at("%status", address), size)
-            offset += 2 * size
-        put("br label %end")
-        self.block("end")
-        put("%next = add i64 %c, 1")
-        put("br label %test")
-        names = ("io", "mem", "status", "rows", "results", "fixed")
-        parameters = ", ".join(f"ptr noalias %{name}" for name in names)
-        head = f"define void @many({parameters}, i64 %count, i64 %fuel) nounwind {{\nstart:\n"
-        return "\n".join(self.globals) + "\n" + head + "\n".join(self.lines) + "\n}\n"
+    @property
+    def following(self) -> _Side:
+        """The code that carries undefined bytes along, made when the first case needs it."""
+        with self._lock:
+            if self._following is None:
+                self._following = _Side(self.machine, Translation(self.region, following=True))
+            return self._following
 
-    def header(self, number: int) -> str:
-        return self.at("%io", 8 * number)
+    @property
+    def known(self) -> _Side | None:
+        """That code if it has been made."""
+        return self._following
 
-    def at(self, base: str, offset: int | str) -> str:
-        return self.let(f"getelementptr i8, ptr {base}, i64 {offset}")
-
-    def copy(self, to: str, source: str, size: int) -> None:
-        if size:
-            self.put(f"call void @llvm.memcpy.p0.p0.i64(ptr {to}, ptr {source}, i64 {size}, i1 false)")
-
-    def run(self, translation: Translation, name: str) -> str:
-        """A call of the code; the cycles it took, without drain."""
-        layout = translation.layout
-        counters = layout.noted - layout.counts
-        self.put(f"call void @llvm.memset.p0.i64(ptr {self.at('%io', layout.counts)}, i8 0, i64 {counters}, i1 false)")
-        notes = layout.bytes - layout.noted
-        self.put(f"call void @llvm.memset.p0.i64(ptr {self.at('%io', layout.noted)}, i8 1, i64 {notes}, i1 false)")
-        self.put(f"call void @{name}(ptr %io, ptr %mem, ptr %status)")
-        total = "0"
-        for number, weight in sorted(weights(translation).items()):
-            times = self.let(f"load i64, ptr {self.at('%io', layout.counts + 8 * number)}")
-            times = self.let(f"mul i64 {times}, {weight}") if weight != 1 else times
-            total = self.let(f"add i64 {total}, {times}")
-        for cause in range(exchange.BANK, exchange.FRESH + 1):
-            total = self.let(f"add i64 {total}, {self.let(f'load i64, ptr {self.header(cause)}')}")
-        left = list(unfinished(translation))
-        values = ", ".join(f"i64 {one}" for one in left)
-        self.globals.append(f"@left.{name} = internal constant [{len(left)} x i64] [{values}]")
-        context = self.let(f"load i64, ptr {self.header(exchange.CONTEXT)}")
-        reason = self.let(f"load i64, ptr {self.header(exchange.REASON)}")
-        back = self.compare("eq", "i64", reason, str(exchange.GIVEN_BACK))
-        where = self.select(back, "i64", context, "0")
-        place = self.let(f"getelementptr i64, ptr @left.{name}, i64 {where}")
-        less = self.select(back, "i64", self.let(f"load i64, ptr {place}"), "0")
-        return self.let(f"sub i64 {total}, {less}")
+    def fuel(self, limit: int) -> int:
+        """Passes of loop heads that take no more than ``limit`` cycles."""
+        return max(0, min(1 << 60, (limit - self.region.reach) // self.region.span - 1))
 
 
-def weights(translation: Translation) -> dict[int, int]:
-    """Beats that one count of each counter stands for."""
-    found: dict[int, int] = {}
-    for first in translation.chain:
-        number = translation.chain_counter[first]
-        found[number] = found.get(number, 0) + 1
-    for (k, kind), number in translation.edge_counter.items():
-        if kind == "out":  # the rest of the last pass is not run
-            chain = translation.chain_counter[translation.chain[k]]
-            found[number] = translation.region.place[k] + 1 - found[chain]
-    return found
+class Worker:
+    """Buffers for running cases of a plan on one processor at a time, and the totals of what has been run in them.
+
+    ``stop``: one 64-bit number; when somebody makes it other than 0, what runs ends within a fraction of a second.
+    ``chained``: cases take what comes from the result before from that of the case before, and the first that does not
+    run through, with all outputs defined, ends the row of them.
+    """
+
+    def __init__(self, batch: Batch, plan: Plan, stop: np.ndarray, *, chained: bool = False) -> None:
+        self.batch, self.plan = batch, plan
+        memory = Memory(batch.machine.core.memory, plan.regions)
+        low = min((r.start for r in plan.regions), default=0)
+        high = max((min(r.start + r.bytes + r.over, len(memory.status)) for r in plan.regions), default=0)
+        for address, size, _, _ in plan.pieces:
+            memory.define(address, bytes(size))
+        self.memory = np.zeros(len(memory.bytes), np.uint8)
+        self.status = np.zeros(len(memory.status), np.uint8)
+        self.stop = stop
+        tables: dict[str, np.ndarray] = {
+            "memory": self.memory,
+            "status": self.status,
+            "template": np.frombuffer(bytes(memory.status[low:high]), np.uint8),
+            "shared": np.frombuffer(plan.shared or b"\0", np.uint8),
+            "image": plan.image,
+            "masks": np.array([0 if r in batch.defined else 15 for r in range(batch.registers)], np.uint8),
+            "registers": _table(plan.registers, 3),
+            "pieces": _table(plan.pieces, 4),
+            "values": _table([(*v, at) for v, at in zip(plan.values, plan.value_places, strict=True)], 3),
+            "arrays": _table([(*a, at) for a, at in zip(plan.arrays, plan.array_places, strict=False)], 3),
+            "ones": np.full(max([1, *(size for _, size in plan.arrays)]), DEFINED, np.uint8),
+            "stop": self.stop,
+            "origin": batch.origin,
+        }
+        layout = batch.plain.loaded.layout
+        numbers = {
+            "low": low, "span": max(0, high - low), "row": plan.row, "result": plan.result,
+            "image.bytes": 4 * batch.registers, "masks.bytes": batch.registers,
+            "registers.place": layout.registers, "masks.place": layout.masks, "handed": layout.counts,
+            "registers.number": len(plan.registers), "pieces.number": len(plan.pieces),
+            "values.number": len(plan.values), "arrays.number": len(plan.arrays),
+            "slice": max(1, SLICE // batch.region.span), "chained": int(chained),
+        }  # fmt: skip
+        self.numbers = np.zeros(len(driver.PLAN), np.int64)
+        self.kept: list[object] = [tables]
+        self._put({**numbers, **{name: table.ctypes.data for name, table in tables.items()}})
+        self.sides: dict[str, tuple[_Side, dict[str, np.ndarray]]] = {}
+        self._side("plain", batch.plain)
+        self._function = _MANY(batch.code.address("many"))
+
+    def _put(self, numbers: Mapping[str, int]) -> None:
+        for name, number in numbers.items():
+            self.numbers[driver.INDEX[name]] = number
+
+    def _side(self, name: str, side: _Side) -> None:
+        block = np.zeros(side.bytes, np.uint8)
+        layout = side.loaded.layout
+        block[layout.noted :] = 1  # every note has been made: nothing is given back for one
+        contexts = np.zeros((3, side.contexts), np.int64)
+        made = {
+            "block": block, "weights": side.weights, "left": side.left, "fuelled": side.fuelled,
+            "totals": np.zeros(side.counters, np.int64),
+            "stalls": np.zeros(len(driver.CAUSES), np.int64), "stalled": np.zeros(len(driver.CAUSES), np.int64),
+            "backs": contexts[0], "halts": contexts[1], "drains": contexts[2],
+        }  # fmt: skip
+        self.sides[name] = side, made
+        self._put({f"{name}.{key}": table.ctypes.data for key, table in made.items()})
+        self._put({f"{name}.function": side.function, f"{name}.counters": side.counters})
+        self._put({f"{name}.counts": block.ctypes.data + layout.counts})
+
+    def run(self, rows: np.ndarray, results: np.ndarray, limit: int, before: np.ndarray | None = None) -> int:
+        """Run the cases of ``rows``, filling the same rows of ``results``; how many were run.
+
+        ``limit``: cycles a case. ``before``: what the first case takes for the result before. Fewer are run when
+        somebody sets ``stop``, or a row of chained cases ends. The interpreter is free meanwhile.
+        """
+        plan, done = self.plan, 0
+        assert rows.shape == (len(results), plan.row)
+        assert results.shape[1:] == (plan.result,)
+        first = np.zeros(plan.result, np.uint8) if before is None else np.ascontiguousarray(before)
+        self._put({"limit": limit, "fuel": self.batch.fuel(limit), "before": first.ctypes.data})
+        while done < len(rows):
+            last = results[done - 1] if done else first
+            if done:
+                self._put({"before": last.ctypes.data})
+            self._put({"rows": rows[done:].ctypes.data, "results": results[done:].ctypes.data, "wanted": 0})
+            if self.batch.known is not None and "following" not in self.sides:
+                self._side("following", self.batch.following)
+            done += self._function(self.numbers.ctypes.data, len(rows) - done)
+            if not self.numbers[driver.INDEX["wanted"]]:
+                break
+            self._side("following", self.batch.following)
+        return done
+
+    def counted(self) -> Counted:
+        """The account of all that has run through so far."""
+        total = Counted(len(self.batch.machine.program.bundles))
+        with self.batch._lock:
+            for side, made in self.sides.values():
+                total.add(side.counted(made["totals"], made["stalled"].tolist()))
+                for k in np.flatnonzero(made["backs"]).tolist():
+                    total.add(side.tallied(given_back=k), int(made["backs"][k]))
+                for k in np.flatnonzero(made["halts"]).tolist():
+                    bundle = side.loaded.region.steps[k].context.at
+                    total.halt(bundle, int(made["halts"][k]), int(made["drains"][k]))
+        return total
 
 
-def unfinished(translation: Translation) -> Iterator[int]:
-    """For every context, beats that its chain's count stands for and that were not run when it is given back."""
-    lengths: dict[int, int] = {}
-    for first in translation.chain:
-        lengths[first] = lengths.get(first, 0) + 1
-    for k, first in enumerate(translation.chain):
-        yield lengths[first] - (0 if translation.following else translation.region.place[k])
+def _table(rows: Sequence[Sequence[int]], width: int) -> np.ndarray[Any, Any]:
+    return np.array(rows or [[0] * width], np.int64).reshape(-1, width)
