@@ -18,13 +18,17 @@ import numpy as np
 
 from vliwsim.check.judge import check_kernel
 from vliwsim.description.core import Core
+from vliwsim.kernel.binding import bind
 from vliwsim.kernel.cases import Case, cases_of
+from vliwsim.kernel.engine import simulate
 from vliwsim.kernel.loading import assemble_source
-from vliwsim.kernel.reference import Reference, load_reference
-from vliwsim.kernel.runner import KernelRun, run_kernel
+from vliwsim.kernel.outputs import Output
+from vliwsim.kernel.reference import Reference, call_reference, load_reference
+from vliwsim.kernel.runner import KernelRun, judged
+from vliwsim.machine.stepper import Machine
 from vliwsim.problems import ReferenceFailure, SourceError, VliwsimError
 from vliwsim.program.assembler import assemble
-from vliwsim.program.code import Address, Immediate, Instruction, Register
+from vliwsim.program.code import Address, Immediate, Instruction, Place, Register
 from vliwsim.program.disassembly import text_of
 from vliwsim.program.kernel import ItemTag, Kernel
 
@@ -152,7 +156,7 @@ def neighbours(core: Core, instruction: Instruction) -> Iterator[Instruction]:
         fits = 0 <= other < len(core.register_names)
         return other if fits and core.register_clusters[other] == core.register_clusters[register] else None
 
-    def with_place(k: int, place: object) -> Instruction:
+    def with_place(k: int, place: Place) -> Instruction:
         places = (*instruction.places[:k], place, *instruction.places[k + 1 :])
         return attrs.evolve(instruction, places=places)
 
@@ -179,13 +183,19 @@ class Court:
     def __init__(self, path: str, core: str | None = None) -> None:
         self.kernel = assemble_source(path, core)
         self.sheet = Sheet.of(self.kernel)
-        self.reference: Reference | None = load_reference(self.kernel)
-        assert self.reference is not None
+        reference = load_reference(self.kernel)
+        assert reference is not None
+        self.reference: Reference = reference
         every = list(cases_of(self.kernel, self.reference))
         self.cases = varied(every)
         """Small cases of many sizes: they find most of what runs find."""
-        self.rest = [case for case in every if case.name not in {c.name for c in self.cases}]
+        rest = [case for case in every if case.name not in {c.name for c in self.cases}]
+        self.order = [*self.cases, *rest]
+        """All cases, those in front that found most for their size."""
+        self.finds: Counter[str] = Counter()
         self.more = list(self._more())
+        self.expected: dict[str, Mapping[str, Output]] = {}
+        """What the reference says, by case."""
 
     def _more(self) -> Iterator[Case]:
         """Further inputs: the cases' own, shuffled, and noise of their types."""
@@ -200,8 +210,14 @@ class Court:
                     inputs[name] = value
             yield Case(f"more of {case.name}", inputs)
 
-    def run(self, kernel: Kernel, case: Case) -> KernelRun:
-        return run_kernel(kernel, case.inputs, case=case.name, reference=self.reference, limit=LIMIT)
+    def run(self, machine: Machine, kernel: Kernel, case: Case) -> KernelRun:
+        """One run on the stepper; ``machine``: of the kernel's program, the same for all its cases."""
+        setup = bind(kernel, case.inputs)
+        expected = self.expected.get(case.name)
+        if expected is None:
+            expected = self.expected[case.name] = call_reference(self.reference, setup)
+        simulation = simulate(setup, limit=LIMIT, engine="step", machine=machine)
+        return judged(setup, simulation, case=case.name, expected=expected, limit=LIMIT)
 
     def assembled(self, text: str) -> Kernel | None:
         try:
@@ -216,31 +232,54 @@ class Court:
             return ASSEMBLER
         if check_kernel(kernel, interrupts=False).violated:
             return CHECK
-        for case in (*self.cases, *self.rest):
-            if not self._ok(kernel, case):
+        machine = Machine(kernel.program)
+        for case in self.order:
+            if not self.passes(machine, kernel, case):
+                self.finds[case.name] += 1
+                self.order.sort(key=lambda case: (size(case) + 100) / (self.finds[case.name] + 0.1))
                 return RUN
+        unchanged = Machine(self.kernel.program)
         for case in self.more:
-            if self._ok(self.kernel, case) and not self._ok(kernel, case):
+            if not self.passes(machine, kernel, case) and self.passes(unchanged, self.kernel, case):
                 return ESCAPED
         return EQUAL
 
-    def _ok(self, kernel: Kernel, case: Case) -> bool:
+    def passes(self, machine: Machine, kernel: Kernel, case: Case) -> bool:
         try:
-            return self.run(kernel, case).ok
+            return self.run(machine, kernel, case).ok
         except ReferenceFailure:
             raise
         except VliwsimError:
             return False
 
-    def met(self, kernel: Kernel) -> set[str]:
-        """Names of all that runs of the cases complain of, however they end."""
-        found: set[str] = set()
-        for case in self.cases:
-            run = self.run(kernel, case)
-            found |= {p.name for p in run.diagnostics if p.kind == "illegal"}
-            if not run.ok and run.legal:
-                found.add("wrong")
-        return found
+    def false_alarm(self, fault: Fault) -> str | None:
+        """What no run of a case meets though the check calls it violated; "" if one does, None if nothing is called so.
+
+        Wrong items are none of the machine's rules; a run that they spoil is wrong.
+        """
+        kernel = self.assembled(fault.text)
+        if kernel is None:
+            return None
+        verdict = check_kernel(kernel, interrupts=False)
+        rules = {judgement.rule for judgement in verdict.violated} - {"wrong-item"}
+        if not rules:
+            return None
+        met: set[str] = set()
+        for names in self.met(kernel):
+            met |= names
+            if rules & names:
+                return ""
+        return f"{self.kernel.name}: {fault.where}: {sorted(rules)}, met {sorted(met)}"
+
+    def met(self, kernel: Kernel) -> Iterator[set[str]]:
+        """Names of all that a run of each case complains of, however it ends."""
+        machine = Machine(kernel.program)
+        for case in self.order:
+            run = self.run(machine, kernel, case)
+            found = {p.name for p in run.diagnostics if p.kind == "illegal"}
+            if "undefined-output" in found:
+                found.add("undefined-used")
+            yield found
 
 
 def varied(cases: list[Case]) -> list[Case]:
