@@ -7,6 +7,7 @@ Every mistake of a user, from a typo to a hazard, is one :class:`Problem`; every
 from __future__ import annotations
 
 from collections.abc import Iterable
+from typing import NamedTuple
 
 import attrs
 
@@ -16,8 +17,7 @@ LONGEST = 1000
 """Characters of a found, allowed or try that are printed; ``as_json`` has them whole."""
 
 
-@attrs.frozen
-class Place:
+class Place(NamedTuple):
     """A position in a text file: line and column count from 1; ``length`` is the number of characters meant."""
 
     file: str

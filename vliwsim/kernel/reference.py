@@ -109,7 +109,7 @@ def _raised(path: Path, source: str, doing: str, error: BaseException) -> Proble
         place = Place(str(path), lines[-1] if lines else 1)
     text = source.splitlines()
     line = text[place.line - 1] if 0 < place.line <= len(text) else ""
-    place = attrs.evolve(place, column=max(place.column, len(line) - len(line.lstrip()) + 1))
+    place = place._replace(column=max(place.column, len(line) - len(line.lstrip()) + 1))
     said = str(error).splitlines()
     found = f"{type(error).__name__} while {doing}" + (f": {said[0]}" if said else "")
     return problem("reference-raised", found, "a reference that returns the outputs", place=place, excerpt=line)

@@ -9,6 +9,7 @@ from __future__ import annotations
 import enum
 from collections.abc import Mapping
 from functools import cached_property
+from typing import NamedTuple
 
 import attrs
 
@@ -27,8 +28,7 @@ class Register:
     half: int | None = None
 
 
-@attrs.frozen
-class Immediate:
+class Immediate(NamedTuple):
     """A constant operand, as the raw unsigned 32-bit value the operation receives (16-bit for a half operand).
 
     As a target it is the byte address of a bundle.
@@ -37,8 +37,7 @@ class Immediate:
     value: int
 
 
-@attrs.frozen
-class Label:
+class Label(NamedTuple):
     """A target not yet placed; only between the assembler and the encoder, never in decoded code."""
 
     name: str
@@ -86,8 +85,7 @@ class Instruction:
     guard: Guard | None = None
 
 
-@attrs.frozen
-class Bundle:
+class Bundle(NamedTuple):
     """One bundle, or an idle word of ``beats`` empty bundles (then ``instructions`` is empty).
 
     ``address``: byte address of its first word. ``position``: in program order. ``words``: operation words it takes,

@@ -310,9 +310,8 @@ class Formula:
 
     def refusal(self, refusal: Refused) -> Problem:
         """The problem that says why this formula is refused, at its place."""
-        place = attrs.evolve(
-            self.place, column=self.place.column + refusal.column, length=max(1, min(refusal.length, len(self.text)))
-        )
+        length = max(1, min(refusal.length, len(self.text)))
+        place = self.place._replace(column=self.place.column + refusal.column, length=length)
         return Problem(refusal.name, refusal.found, refusal.allowed, refusal.remedy, place, excerpt=self.excerpt)
 
     def __reduce__(self) -> tuple[object, ...]:
