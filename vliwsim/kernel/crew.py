@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 from collections import deque
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from concurrent.futures import Future, ThreadPoolExecutor, wait
 from typing import TYPE_CHECKING, Any
 
@@ -80,13 +80,11 @@ class Crew:
     def __init__(
         self, batch: Batch, limit: int, look: Callable[[], bool] | None = None, *, chained: bool = False
     ) -> None:
-        from vliwsim.native.batch import Counted
-
         self.batch, self.limit, self.look, self.chained = batch, limit, look, chained
         self.stop = np.zeros(1, np.int64)
         self.threads = 1 if chained else os.cpu_count() or 1
         self._workers: dict[int, tuple[Stack, list[Worker]]] = {}
-        self._past = Counted(len(batch.machine.program.bundles))
+        self._raw: dict[str, Mapping[str, np.ndarray]] = {}
 
     def run(self, jobs: Iterator[Job]) -> Iterator[tuple[Job, Results]]:
         """Each job with the results of its cases, in order; fewer than it has where it was stopped or a chain ended.
@@ -94,6 +92,7 @@ class Crew:
         Jobs are asked for while earlier ones run, so that few of them are held at a time. When this iterator is
         closed, or an exception such as Ctrl-C's passes through, what runs is stopped.
         """
+        self.stop[0] = 0
         pool = ThreadPoolExecutor(self.threads)
         ahead: deque[tuple[Job, Worker, Future[Results]]] = deque()
         try:
@@ -113,14 +112,15 @@ class Crew:
 
         results = np.zeros((len(job.rows), job.stack.plan.result), np.uint8)
         count = worker.run(job.rows, results, self.limit, job.before)
-        return Results(job.stack.plan, results[:count])
+        return Results(job.stack.plan, results[:count], worker.totals())
 
     def _finished(self, job: Job, worker: Worker, future: Future[Results]) -> tuple[Job, Results]:
         while not future.done():
             wait([future], timeout=LOOK)
             if self.look and self.look():
                 self.stop[0] = 1
-        self._workers[id(job.stack)][1].append(worker)
+        if not self.chained:
+            self._workers[id(job.stack)][1].append(worker)
         return job, future.result()
 
     def _worker(self, stack: Stack) -> Worker:
@@ -129,24 +129,26 @@ class Crew:
 
         _, free = self._workers.setdefault(id(stack), (stack, []))
         if free:
-            return free.pop()
+            return free[0] if self.chained else free.pop()
         if len(self._workers) > MOST_PLANS:
             self._forget(stack)
-        return Worker(self.batch, stack.plan, self.stop, chained=self.chained)
+        worker = Worker(self.batch, stack.plan, self.stop, chained=self.chained)
+        if self.chained:  # which runs one job behind the other
+            free.append(worker)
+        return worker
 
     def _forget(self, but: Stack) -> None:
         """Drop the buffers that are free."""
         for stack, free in self._workers.values():
-            while free and stack is not but:
-                self._past.add(free.pop().counted())
+            if stack is not but:
+                free.clear()
+
+    def take(self, results: Results) -> None:
+        """Count what has run through in these for the account."""
+        for name, made in results.totals.items():
+            before = self._raw.get(name)
+            self._raw[name] = {key: array + before[key] if before else array for key, array in made.items()}
 
     def counted(self) -> Counted:
-        """The account of all that has run through; to be asked for when nothing runs."""
-        from vliwsim.native.batch import Counted
-
-        total = Counted(len(self.batch.machine.program.bundles))
-        total.add(self._past)
-        for _, free in self._workers.values():
-            for worker in free:
-                total.add(worker.counted())
-        return total
+        """The account of all that has been taken."""
+        return self.batch.counted(self._raw)

@@ -21,7 +21,7 @@ from vliwsim.problems import InterfaceError, problem
 from vliwsim.program.kernel import Kernel
 
 if TYPE_CHECKING:
-    from vliwsim.native.batch import Batch
+    from vliwsim.native.batch import Batch, Results
 
 CHUNK = 2048
 """Cases that are prepared at a time, unless they are large."""
@@ -124,7 +124,7 @@ class _Many:
             if len(found.rows) < len(job.rows):
                 self.stopped = True
                 break
-            self._take(job, found)
+            self._take(crew, job, found)
             if self.stopped:
                 break
         results.close()  # type: ignore[attr-defined]
@@ -209,8 +209,9 @@ class _Many:
 
     # --------------------------------------------------------------------------------------------------------- results
 
-    def _take(self, job: Job, found: Any) -> None:
+    def _take(self, crew: Crew, job: Job, found: Results) -> None:
         group: _Group = job.tag
+        crew.take(found)
         outputs = job.stack.outputs(found)
         cycles, good = found.cycles, found.finished & found.defined
         for k in np.flatnonzero(~good).tolist():

@@ -32,6 +32,8 @@ FOLLOWING_EFFORT = 0
 ROW, SHARED, BEFORE = 0, 1, 2
 """Where a register or a piece of memory comes from: the case's row, what all cases share, the result before."""
 
+TOTALS = ("totals", "stalled", "backs", "halts", "drains")
+
 _MANY = ctypes.CFUNCTYPE(ctypes.c_int64, ctypes.c_void_p, ctypes.c_int64)
 
 
@@ -74,13 +76,18 @@ class Plan:
         return self.array_places[-1]
 
 
+Totals = Mapping[str, Mapping[str, np.ndarray]]
+"""Counters of each translation, of many cases added up; :meth:`Batch.counted` makes an account of them."""
+
+
 @attrs.frozen(eq=False)
 class Results:
     """What some cases gave, a row each: ``rows`` as the plan says. ``finished``: ran through within the limit;
-    ``defined``: and all outputs are; ``cycles``: drain included."""
+    ``defined``: and all outputs are; ``cycles``: drain included. ``totals``: the counters of those that are both."""
 
     plan: Plan
     rows: np.ndarray
+    totals: Totals
 
     @property
     def finished(self) -> np.ndarray:
@@ -221,6 +228,21 @@ class Batch:
         """That code if it has been made."""
         return self._following
 
+    def counted(self, totals: Totals) -> Counted:
+        """The account that counters stand for."""
+        total = Counted(len(self.machine.program.bundles))
+        with self._lock:
+            for name, made in totals.items():
+                side = self.plain if name == "plain" else self._following
+                assert side is not None
+                total.add(side.counted(made["totals"], made["stalled"].tolist()))
+                for k in np.flatnonzero(made["backs"]).tolist():
+                    total.add(side.tallied(given_back=k), int(made["backs"][k]))
+                for k in np.flatnonzero(made["halts"]).tolist():
+                    bundle = side.loaded.region.steps[k].context.at
+                    total.halt(bundle, int(made["halts"][k]), int(made["drains"][k]))
+        return total
+
     def fuel(self, limit: int) -> int:
         """Passes of loop heads that take no more than ``limit`` cycles."""
         return max(0, min(1 << 60, (limit - self.region.reach) // self.region.span - 1))
@@ -235,7 +257,7 @@ class Worker:
     """
 
     def __init__(self, batch: Batch, plan: Plan, stop: np.ndarray, *, chained: bool = False) -> None:
-        self.batch, self.plan = batch, plan
+        self.batch, self.plan, self.chained = batch, plan, chained
         memory = Memory(batch.machine.core.memory, plan.regions)
         low = min((r.start for r in plan.regions), default=0)
         high = max((min(r.start + r.bytes + r.over, len(memory.status)) for r in plan.regions), default=0)
@@ -271,6 +293,8 @@ class Worker:
         self.numbers = np.zeros(len(driver.PLAN), np.int64)
         self.kept: list[object] = [tables]
         self._put({**numbers, **{name: table.ctypes.data for name, table in tables.items()}})
+        self.last = np.zeros(plan.result, np.uint8)
+        self.ended = False
         self.sides: dict[str, tuple[_Side, dict[str, np.ndarray]]] = {}
         self._side("plain", batch.plain)
         self._function = _MANY(batch.code.address("many"))
@@ -298,13 +322,16 @@ class Worker:
     def run(self, rows: np.ndarray, results: np.ndarray, limit: int, before: np.ndarray | None = None) -> int:
         """Run the cases of ``rows``, filling the same rows of ``results``; how many were run.
 
-        ``limit``: cycles a case. ``before``: what the first case takes for the result before. Fewer are run when
-        somebody sets ``stop``, or a row of chained cases ends. The interpreter is free meanwhile.
+        ``limit``: cycles a case. ``before``: what the first case takes for the result before; None goes on from the
+        last of the run before, and runs nothing if that one's chain had ended. Fewer are run when somebody sets
+        ``stop``, or a chain ends. The interpreter is free meanwhile.
         """
         plan, done = self.plan, 0
         assert rows.shape == (len(results), plan.row)
         assert results.shape[1:] == (plan.result,)
-        first = np.zeros(plan.result, np.uint8) if before is None else np.ascontiguousarray(before)
+        if before is None and self.ended:
+            return 0
+        first = np.ascontiguousarray(self.last if before is None else before)
         self._put({"limit": limit, "fuel": self.batch.fuel(limit), "before": first.ctypes.data})
         while done < len(rows):
             last = results[done - 1] if done else first
@@ -317,20 +344,19 @@ class Worker:
             if not self.numbers[driver.INDEX["wanted"]]:
                 break
             self._side("following", self.batch.following)
+        if self.chained:
+            self.ended = done < len(rows) or not Results(plan, results[done - 1 : done], {}).defined.all()
+            self.last = results[done - 1].copy() if done else first
         return done
 
-    def counted(self) -> Counted:
-        """The account of all that has run through so far."""
-        total = Counted(len(self.batch.machine.program.bundles))
-        with self.batch._lock:
-            for side, made in self.sides.values():
-                total.add(side.counted(made["totals"], made["stalled"].tolist()))
-                for k in np.flatnonzero(made["backs"]).tolist():
-                    total.add(side.tallied(given_back=k), int(made["backs"][k]))
-                for k in np.flatnonzero(made["halts"]).tolist():
-                    bundle = side.loaded.region.steps[k].context.at
-                    total.halt(bundle, int(made["halts"][k]), int(made["drains"][k]))
-        return total
+    def totals(self) -> Totals:
+        """The counters of what has run through since this was asked last."""
+        taken = {}
+        for name, (_, made) in self.sides.items():
+            taken[name] = {key: made[key].copy() for key in TOTALS}
+            for key in TOTALS:
+                made[key][:] = 0
+        return taken
 
 
 def _table(rows: Sequence[Sequence[int]], width: int) -> np.ndarray[Any, Any]:
