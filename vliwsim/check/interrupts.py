@@ -85,13 +85,15 @@ def _unsafe(graph: Graph, index: int) -> Reason | None:
 
 def _settled(graph: Graph, contexts: set[int]) -> set[int]:
     """The contexts that pass a beat, of some that may still fork."""
-    found: set[int] = set()
+    found, seen = set[int](), set(contexts)
     ahead = list(contexts)
     while ahead:
         index = ahead.pop()
         beat = graph.beats[index]
         if beat is not None and beat.did == "fork":
-            ahead.extend(s for s in graph.successors(index) if s is not None)
+            new = {s for s in graph.successors(index) if s is not None} - seen
+            seen |= new
+            ahead.extend(new)
         elif beat is not None:
             found.add(index)
     return found

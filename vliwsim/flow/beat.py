@@ -11,7 +11,7 @@ from typing import NamedTuple
 
 from vliwsim.flow.context import Context, Flight
 from vliwsim.flow.follow import Follow
-from vliwsim.flow.values import ALWAYS, Condition, Known, Literal, literal
+from vliwsim.flow.values import ALWAYS, Condition, Identity, Known, Literal, literal
 from vliwsim.machine.prepared import Preparation, Prepared
 
 
@@ -66,6 +66,8 @@ class Moment:
         self.landed: list[tuple[int, bool]] = []
         self.guards: tuple[bool | None, ...] = ()
         self.flights = [f for f in context.flights if f.beats > 0]
+        self.joined: dict[Identity, Condition] = {}
+        """Of values that are one of two since this very beat, what decides which."""
         self.next_identity = 1 + max(
             [v for v in context.values if isinstance(v, int)]
             + [i.value for f in context.flights for i in f.on]
@@ -110,5 +112,7 @@ class Moment:
         if condition is None:
             return False
         for item in sorted(condition):
+            if item.value in self.joined:  # which the context does not know yet
+                self.decide(self.joined[item.value])
             raise Fork(item)
         return True

@@ -66,4 +66,5 @@ def bring(now: Moment, flight: Flight) -> None:
     elif flight.since is not None and old == flight.since and flight.on == literal(flight.since, True):
         now.values[index] = new  # counted down where not zero, and still the same zero where it is
     else:
-        now.values[index] = now.fresh_identity()
+        now.values[index] = joined = now.fresh_identity()
+        now.joined[joined] = flight.on
