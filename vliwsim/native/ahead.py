@@ -112,6 +112,7 @@ class Ahead(Variables):
             self.put(f"store i64 {passes}, ptr {self.variable(name)}")
         self.put(f"br label %c{self.region.copy[k]}")
         self.block(f"judged{k}")
+        self.slots = {}  # what was loaded on one way here is not known on the other
 
     def bounds(self, walk: Walk) -> tuple[str, str, str]:
         """(lowest, highest value on the way to the walk's register, or now in it: i64; whether it can be trusted)."""
