@@ -158,6 +158,7 @@ SPOILED = [
     ('"exposed"', '"expose"', "unknown-word", "issue.rule"),
     ('"warn"', '"Warn"', "unknown-word", "issue.early"),
     ("size       = 4096", "size       = 4294967297", "out-of-range", "memory.size"),
+    ("size       = 4096", "waits      = 3", "unknown-key", "memory.waits"),  # a field of the class, and no key
     ("size       = 4096", "size       = 2048", "outside-memory", "memory.wait.slower"),
     ('"big"', '"middle"', "unknown-word", "memory.endianness"),
     ("banks      = 3", "banks      = 0", "out-of-range", "memory.banks"),

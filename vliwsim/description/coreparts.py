@@ -1,17 +1,14 @@
 """One part of a core file at a time: plain TOML data to a frozen class, every mistake of the part at once.
 
-cattrs builds the classes of :mod:`vliwsim.description.core`; the table :data:`RULES` says what each key may be. What
+The table :data:`RULES` says of every class of :mod:`vliwsim.description.core` what its keys are and may be. What
 concerns several parts together is judged in :mod:`vliwsim.description.corebuild`.
 """
 
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Iterator, Mapping
-from functools import cache
-from typing import Any, NamedTuple, TypeVar, cast
-
-import attrs
+from collections.abc import Callable, Mapping
+from typing import NamedTuple, TypeVar, cast
 
 from vliwsim.description.core import (
     Branch,
@@ -271,9 +268,9 @@ RULES: Mapping[type, Mapping[str, Check]] = {
 }
 """For every class of a core its keys, and what each may be."""
 
-# What stands in for a required key that is missing or refused, so that the other parts can be judged. It is chosen to
-# raise no complaint of its own; the core is refused anyway.
-_STAND_IN: Mapping[type, Mapping[str, object]] = {
+# The required keys, and what stands in for one that is missing or refused, so that the other parts can be judged. It is
+# chosen to raise no complaint of its own; the core is refused anyway.
+_REQUIRED: Mapping[type, Mapping[str, object]] = {
     Cluster: {"registers": 1024, "read_ports": 1, "write_ports": 1},
     Slot: {"classes": ("control",)},
     Link: {"operands": 1},
@@ -291,62 +288,22 @@ def structure(
     Returns an object even then, refused values replaced by defaults; None if ``table`` is no table.
     """
     assert isinstance(kind, type)
-    keys = RULES[kind]
+    keys, stand_in = RULES[kind], _REQUIRED.get(kind, {})
     if not isinstance(table, dict):
         findings.append(Finding("wrong-type", path, described(table), f"a table with the keys {listed(keys)}"))
         return None
-    for clash in set(table) & set(given):
-        findings.append(unknown_key((*path, clash), keys))
-    offered = {key: value for key, value in table.items() if key not in given}
-    try:
-        return cast(T, _structurer(kind)({**offered, **given}, kind))
-    except Exception as why:
-        mistakes = list(_findings(why, keys))
-    findings.extend(mistake._replace(path=(*path, *mistake.path)) for mistake in mistakes)
-    bad = {mistake.path[0] for mistake in mistakes}
-    good = {key: value for key, value in offered.items() if key not in bad}
-    return cast(T, _structurer(kind)({**_STAND_IN.get(kind, {}), **good, **given}, kind))
-
-
-@cache
-def _converter() -> Any:
-    """One for all classes: making one takes longer than all that is done with it."""
-    import cattrs
-
-    return cattrs.Converter(detailed_validation=True)
-
-
-@cache
-def _structurer(kind: type) -> Callable[[object, type], object]:
-    """cattrs' function for one class, made when first wanted."""
-    from cattrs.gen import make_dict_structure_fn, override
-
-    def hook(check: Check) -> Any:
-        return override(struct_hook=lambda value, _: check(value))
-
-    fields: dict[str, Any] = {field.name: hook(lambda value: value) for field in attrs.fields(kind)}
-    fields |= {key: hook(check) for key, check in RULES[kind].items()}
-    made: Any = make_dict_structure_fn(kind, _converter(), _cattrs_forbid_extra_keys=True, **fields)
-    return cast(Callable[[object, type], object], made)
-
-
-def _findings(why: Exception, keys: Mapping[str, Check]) -> Iterator[Finding]:
-    """The findings in an exception of cattrs, each with its key first in the path."""
-    from cattrs import ClassValidationError, ForbiddenExtraKeysError
-
-    if not isinstance(why, ClassValidationError):
-        raise why
-    for inner in why.exceptions:
-        field = next((note.name for note in getattr(inner, "__notes__", ()) if hasattr(note, "name")), "")
-        if isinstance(inner, Refused):
-            yield from (f._replace(path=(field, *f.path)) for f in inner.findings)
-        elif isinstance(inner, ForbiddenExtraKeysError):
-            for key in sorted(inner.extra_fields)[:MOST_FINDINGS]:
-                yield unknown_key((key,), keys)
-        elif isinstance(inner, KeyError):
-            yield Finding("missing-key", (field,), f"no {field}", "this key must be given")
-        else:
-            raise inner
+    kept: dict[str, object] = {}
+    for key, check in keys.items():
+        if key in table:
+            try:
+                kept[key] = check(table[key])
+            except Refused as why:
+                findings += [f._replace(path=(*path, key, *f.path)) for f in why.findings]
+        elif key in stand_in:
+            findings.append(Finding("missing-key", (*path, key), f"no {key}", "this key must be given"))
+    strange = sorted(key for key in table if key not in keys)
+    findings += [unknown_key((*path, key), keys) for key in strange[:MOST_FINDINGS]]
+    return cast(T, kind(**{**stand_in, **kept, **given}))
 
 
 def unknown_key(path: KeyPath, known: Mapping[str, object] | tuple[str, ...]) -> Finding:
