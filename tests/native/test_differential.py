@@ -33,9 +33,9 @@ def test_native_equals_model(monkeypatch: pytest.MonkeyPatch) -> None:
     passed = Counter[str]()
     leap = Native.leap
 
-    def counted(self: Native, state: State, until: int = FOREVER) -> bool:
+    def counted(self: Native, state: State, until: int = FOREVER, most: int = FOREVER) -> bool:
         before = state.cycle
-        done = leap(self, state, until)
+        done = leap(self, state, until, most)
         passed["native"] += state.cycle - before
         return done
 

@@ -11,7 +11,7 @@ import pytest
 from vliwsim.description.corefile import load_core
 from vliwsim.machine.memory import Region
 from vliwsim.machine.state import State
-from vliwsim.machine.stepper import Machine
+from vliwsim.machine.stepper import FOREVER, Machine
 from vliwsim.native.engine import Native
 from vliwsim.program.assembler import assemble
 
@@ -30,9 +30,9 @@ class Counted(Native):
 
     passed = 0
 
-    def leap(self, state: State, until: int) -> bool:
+    def leap(self, state: State, until: int, most: int = FOREVER) -> bool:
         before = state.cycle
-        done = super().leap(state, until)
+        done = super().leap(state, until, most)
         self.passed += state.cycle - before
         return done
 

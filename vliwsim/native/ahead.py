@@ -15,48 +15,6 @@ MOST = 1 << 16
 PAUSE = 16
 """Passes that are judged one by one where no strip was possible."""
 
-HELD = """\
-define internal i1 @held(ptr %status, i64 %from, i64 %to, i8 %want) noinline nounwind {
-start:
-  %one = insertelement <32 x i8> poison, i8 %want, i32 0
-  %all = shufflevector <32 x i8> %one, <32 x i8> poison, <32 x i32> zeroinitializer
-  br label %wide
-wide:
-  %at = phi i64 [%from, %start], [%end, %fine]
-  %end = add i64 %at, 32
-  %fits = icmp ule i64 %end, %to
-  br i1 %fits, label %look, label %narrow
-look:
-  %place = getelementptr inbounds i8, ptr %status, i64 %at
-  %bytes = load <32 x i8>, ptr %place, align 1
-  %both = and <32 x i8> %bytes, %all
-  %differ = icmp ne <32 x i8> %both, %all
-  %bits = bitcast <32 x i1> %differ to i32
-  %some = icmp ne i32 %bits, 0
-  br i1 %some, label %no, label %fine
-fine:
-  br label %wide
-narrow:
-  %last = phi i64 [%at, %wide], [%next, %good]
-  %done = icmp uge i64 %last, %to
-  br i1 %done, label %yes, label %byte
-byte:
-  %here = getelementptr inbounds i8, ptr %status, i64 %last
-  %status.here = load i8, ptr %here
-  %kept = and i8 %status.here, %want
-  %good.here = icmp eq i8 %kept, %want
-  br i1 %good.here, label %good, label %no
-good:
-  %next = add i64 %last, 1
-  br label %narrow
-yes:
-  ret i1 true
-no:
-  ret i1 false
-}
-"""
-"""Whether all bytes of status from %from to before %to have the bits %want."""
-
 
 class Ahead(Variables):
     """What a loop that runs in strips needs around it. Passes not run are given back to %fuel at the way out."""
@@ -186,6 +144,14 @@ class Ahead(Variables):
         run = self.let(f"sub i64 {self.count_of('allotted')}, {left}")
         run = self.let(f"call i64 @llvm.umax.i64(i64 {run}, i64 {FIRST})")
         self.put(f"store i64 {run}, ptr {self.variable(f'reach{head}')}")
+
+    def back_to_judged(self, k: int) -> None:
+        """From a beat of a trusted copy that may break a rule to the same beat of the loop outside."""
+        head, first = self.head_of(k), self.region.chain[k]
+        self.leave_strip(k)
+        self.count_edge("back")
+        self.put(f"store i64 {PAUSE}, ptr {self.variable(f'rest{head}')}")
+        self.put(f"br label %c{self.region.strips[head].cycle[k - first]}")
 
     def add_to_chain(self, k: int, passes: str) -> None:
         raise NotImplementedError

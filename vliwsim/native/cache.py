@@ -15,6 +15,7 @@ from functools import lru_cache
 from pathlib import Path
 
 from vliwsim.native.compiler import Code, binding, compile_text, host
+from vliwsim.native.text import COMMON
 
 MOST_BYTES = 128 << 20
 """Of all files together; beyond it the least recently used half goes."""
@@ -44,7 +45,7 @@ def code_of(text: str, effort: int) -> Code:
 def key(text: str, effort: int) -> str:
     llvm = binding()
     versions = [*llvm.llvm_version_info, effort]
-    parts = [VERSION, repr(versions).encode(), "\n".join(host()).encode(), text.encode()]
+    parts = [VERSION, repr(versions).encode(), "\n".join(host()).encode(), (text + COMMON).encode()]
     return hashlib.sha256(b"\0".join(parts)).hexdigest()
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 from functools import lru_cache
 from typing import Any
 
-from vliwsim.native.text import METADATA
+from vliwsim.native.text import COMMON
 
 
 @lru_cache(maxsize=1)
@@ -48,7 +48,7 @@ class Code:
 def compile_text(text: str, effort: int = 2) -> bytes:
     """The object file of a module's text. ``effort``: LLVM's optimisation level."""
     llvm = binding()
-    module = llvm.parse_assembly(text + METADATA)
+    module = llvm.parse_assembly(text + COMMON)
     machine = target_machine(effort)
     module.triple = machine.triple
     module.data_layout = str(machine.target_data)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Collection
+from time import perf_counter
 
 from vliwsim.description.values import Undefined
 from vliwsim.machine.hazards import HazardMet
@@ -19,8 +20,11 @@ from vliwsim.native.translate import Translation
 MOST_REGIONS = 8
 """Translations of one program; beyond that the stepper goes on alone where none fits."""
 
-SLICE = 1 << 24
-"""Cycles between two looks at whether to go on: a fraction of a second."""
+FIRST_SLICE = 1 << 20
+"""Cycles between two looks at whether to go on; as many more as the engine does in :data:`SHORT`."""
+
+SHORT = 0.03
+"""Seconds; between two looks there are hardly ever more than thrice as many, so that Ctrl-C is heard at once."""
 
 PATIENCE = 4096
 """Cycles the stepper goes on, where no context fits, before a translation from there is made."""
@@ -48,6 +52,7 @@ class Native:
         self.patience, self.effort, self.following = patience, effort, following
         self.walker = Contexts(machine.ready)
         self.regions: list[Loaded] = []
+        self.alone = 0
 
     # -------------------------------------------------------------------------------------------------- translations
 
@@ -116,21 +121,24 @@ class Native:
 
     def advance(self, state: State, until: int = FOREVER) -> None:
         """As :meth:`vliwsim.machine.stepper.Machine.advance`."""
-        machine, alone = self.machine, 0
         while not state.finished and state.cycle < until:
-            asked = state.interrupt_at
-            if state.halt_beat is not None or state.frozen or (asked is not None and state.cycle >= asked):
-                machine.advance(state, min(until, state.cycle + 1))
-                continue
-            if self.leap(state, until if asked is None else min(until, asked)):
-                alone = 0
-                continue
-            machine.advance(state, min(until, state.cycle + 1))
-            alone += 1
-            if alone > self.patience and self.translate(state) is None and len(self.regions) >= MOST_REGIONS:
-                machine.advance(state, min(until, state.cycle + (1 << 16)))
+            self.go_on(state, until)
 
-    def leap(self, state: State, until: int) -> bool:
+    def go_on(self, state: State, until: int, most: int = FOREVER) -> None:
+        """Run on: machine code for about ``most`` cycles, never beyond ``until``, or else a little by the stepper."""
+        machine, asked = self.machine, state.interrupt_at
+        if state.halt_beat is not None or state.frozen or (asked is not None and state.cycle >= asked):
+            machine.advance(state, min(until, state.cycle + 1))
+            return
+        if self.leap(state, until if asked is None else min(until, asked), most):
+            self.alone = 0
+            return
+        machine.advance(state, min(until, state.cycle + 1))
+        self.alone += 1
+        if self.alone > self.patience and self.translate(state) is None and len(self.regions) >= MOST_REGIONS:
+            machine.advance(state, min(until, state.cycle + (1 << 16)))
+
+    def leap(self, state: State, until: int, most: int = FOREVER) -> bool:
         """Run machine code from here if there is some; whether time has passed."""
         if not self.regions:
             self.translate(state)
@@ -139,11 +147,11 @@ class Native:
             if match is None:
                 continue
             # it may first come to a head, and at last leave all heads behind
-            fuel = min((until - state.cycle - loaded.region.reach) // loaded.region.span - 1, 1 << 60)
+            fuel = (until - state.cycle - loaded.region.reach) // loaded.region.span - 1
             if fuel < (match[0] in loaded.region.heads):
                 return False
             before = state.cycle
-            loaded.run(state, match, fuel)
+            loaded.run(state, match, min(fuel, 1 + most // loaded.region.span, 1 << 60))
             return state.cycle > before
         return False
 
@@ -160,11 +168,19 @@ class Native:
         if interrupt_at is not None:
             state.interrupt_at = interrupt_at
         end = FOREVER if limit is None else limit
+        slice_, seen = FIRST_SLICE, state.cycle
         try:
             while not state.finished and state.cycle < end:
-                self.advance(state, min(end, state.cycle + SLICE))
-                if progress:
-                    progress(state.cycle)
+                began = perf_counter()
+                self.go_on(state, end, slice_)
+                passed = perf_counter() - began
+                if passed < SHORT:
+                    slice_ *= 2
+                elif passed > 2 * SHORT:
+                    slice_ = max(FIRST_SLICE, slice_ // 2)
+                if progress and state.cycle - seen >= FIRST_SLICE:
+                    seen = state.cycle
+                    progress(seen)
         except HazardMet as met:
             return machine.stopped_by(state, met.hazard)
         return machine.run(state, limit=end)

@@ -70,20 +70,24 @@ class Executing(Accessing):
         operation = part.operation
         if not operation.outputs:
             return []
-        key = operation, part.halves
+        # in a strip what makes a NaN goes back to the judged copy, so that every sum need not wait for the choice
+        bare = self.strip is not None and any(t.floating for t in operation.meaning.output_types.values())
+        key = operation, part.halves, bare
         name = self.functions.setdefault(key, f"{self.prefix}op{len(self.functions)}")
         given, made = widths(operation)
         values = [self.input(k, wanted, part, width) for wanted, width in zip(part.inputs, given, strict=True)]
         arguments = [f"i{width} {value.bits}" for value, width in zip(values, given, strict=True)]
         if self.following:
             arguments += [f"i8 {value.mask or '0'}" for value in values]
-        kind = result_type(operation, self.following)
+        kind = result_type(operation, self.following, bare)
         result = self.let(f"call {kind} @{name}({', '.join(arguments)})")
         outputs = []
         for j in range(len(made)):
             bits = self.let(f"extractvalue {kind} {result}, {j}")
             mask = self.let(f"extractvalue {kind} {result}, {j + len(made)}") if self.following else None
             outputs.append(Held(bits, mask))
+        if bare:
+            self.doubt(self.guard_bits[k], self.let(f"extractvalue {kind} {result}, {len(made)}"))
         if self.following:
             self.judge_note(k, part, values, outputs)
         return outputs

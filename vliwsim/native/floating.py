@@ -24,10 +24,13 @@ def to_float(text: Text, bits: str) -> str:
 
 
 def from_float(text: Text, value: str) -> str:
-    """The bits of a number, of a NaN the canonical one's."""
+    """The bits of a number, of a NaN the canonical one's; where ``text`` collects them, whether it is a NaN instead."""
     odd = text.let(f"fcmp uno float {value}, {value}")
-    chosen = text.let(f"select i1 {odd}, float 0x7FF8000000000000, float {value}{UNLIKELY}")
-    return text.let(f"bitcast float {chosen} to i32")
+    if text.odd is not None:
+        text.odd.append(odd)
+    else:
+        value = text.let(f"select i1 {odd}, float 0x7FF8000000000000, float {value}{UNLIKELY}")
+    return text.let(f"bitcast float {value} to i32")
 
 
 def is_nan(text: Text, bits: str) -> str:

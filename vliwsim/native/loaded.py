@@ -53,8 +53,8 @@ class Loaded:
         self.holding = np.array([step.held for step in region.steps], bool)
         self.outside = list(translation.outside)
         edges = translation.edge_counter.items()
-        self.edges = [(k, kind, number) for (k, kind), number in edges if kind != "out"]
-        self.outs = [(k, number) for (k, kind), number in edges if kind == "out"]
+        self.edges = [(k, kind, number) for (k, kind), number in edges if kind in ("hold", "fresh")]
+        self.ways_out = [(k, kind == "back", number) for (k, kind), number in edges if kind in ("out", "back")]
 
     def view(self, start: int, kind: type, count: int) -> np.ndarray:
         return np.frombuffer(self.block, kind, count, start)
@@ -187,9 +187,9 @@ class Loaded:
         times = counts[self.chain_of]
         if reason in (exchange.GIVEN_BACK, exchange.OUT_OF_FUEL):
             times[(self.chain_of == self.chain_of[k]) & (self.place >= self.place[k])] -= 1
-        for context, number in self.outs:  # the rest of the last pass is not run
-            behind = (self.chain_of == self.chain_of[context]) & (self.place > self.place[context])
-            times[behind] -= counts[number]
+        for context, back, number in self.ways_out:
+            if counts[number]:
+                self._left_strip(times, context, back, int(counts[number]))
         beats = int(times.sum())
         held = int(times[self.holding].sum())
         times[self.holding] = 0
@@ -217,6 +217,18 @@ class Loaded:
         state.beat += beats
         state.cycle += beats + bank + wait + penalty + straddle + frozen
         state.issue += int(times.sum())
+
+    def _left_strip(self, times: np.ndarray, k: int, back: bool, often: int) -> None:
+        """A strip ended in mid pass, whose rest is not run.
+
+        ``back``: nor is context ``k``; it and the rest are run in the chain that it is a copy of.
+        """
+        behind = self.place >= self.place[k] if back else self.place > self.place[k]
+        times[(self.chain_of == self.chain_of[k]) & behind] -= often
+        if back:
+            twin = self.region.twin(k)
+            if self.region.chain[twin] != twin:  # a chain that is entered at its beginning is counted there
+                times[(self.chain_of == self.chain_of[twin]) & (self.place >= self.place[twin])] += often
 
     def _halted(self, state: State, k: int) -> None:
         context, last = self.region.steps[k].context, int(self.header[exchange.LAST])

@@ -64,15 +64,20 @@ def widths(operation: Operation) -> tuple[list[int], list[int]]:
     return given, made
 
 
-def result_type(operation: Operation, following: bool) -> str:
+def result_type(operation: Operation, following: bool, bare: bool = False) -> str:
     _, made = widths(operation)
-    fields = [f"i{w}" for w in made] + (["i8"] * len(made) if following else [])
+    fields = [f"i{w}" for w in made] + (["i8"] * len(made) if following else []) + ["i1"] * bare
     return "{" + ", ".join(fields) + "}"
 
 
-def function(operation: Operation, halves: Halves, name: str, following: bool, external: bool = False) -> str:
-    """The text of the function ``@name``. In the following form masks stand behind the bits, in and out."""
-    return _Meaning(operation, halves, following).text(name, external)
+def function(
+    operation: Operation, halves: Halves, name: str, following: bool, external: bool = False, bare: bool = False
+) -> str:
+    """The text of the function ``@name``. In the following form masks stand behind the bits, in and out.
+
+    ``bare``: a last result says whether some float made is a NaN; the others then mean nothing.
+    """
+    return _Meaning(operation, halves, following, bare).text(name, external)
 
 
 def container(bits: int) -> int:
@@ -84,8 +89,10 @@ def signed_bits(interval: Interval) -> int:
 
 
 class _Meaning(Text):
-    def __init__(self, operation: Operation, halves: Halves, following: bool) -> None:
+    def __init__(self, operation: Operation, halves: Halves, following: bool, bare: bool) -> None:
         super().__init__()
+        self.bare = bare
+        self.odd = [] if bare else None
         self.operation = operation
         self.following = following
         self.halves = dict(zip(operation.inputs, halves or (None,) * len(operation.inputs), strict=True))
@@ -106,10 +113,12 @@ class _Meaning(Text):
             self.output(out, kind, width, lanes)
             for (out, kind), width in zip(meaning.output_types.items(), self.made, strict=True)
         ]
-        kind = result_type(self.operation, self.following)
+        kind = result_type(self.operation, self.following, self.bare)
         fields = [(f"i{w}", bits) for w, (bits, _) in zip(self.made, outputs, strict=True)]
         if self.following:
             fields += [("i8", mask) for _, mask in outputs]
+        if self.odd is not None:
+            fields.append(("i1", self.either(self.odd) or "false"))
         made = "undef"
         for k, (field, code) in enumerate(fields):
             made = self.let(f"insertvalue {kind} {made}, {field} {code}, {k}")

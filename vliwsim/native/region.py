@@ -73,9 +73,13 @@ class Region:
         """
         found = {}
         for number, loop in enumerate(self._loops()):
-            if len(loop) <= UNROLLED:
+            contexts = [self.steps[k].context for k in loop]
+            flown = [f.beats + 1 for context in contexts for f in context.flights]
+            out = max([0, *flown, *(turn.bundles for context in contexts for turn in context.turns)])
+            laps = -(-out // len(loop))
+            if len(loop) <= UNROLLED and laps > 1:
                 for k in loop:
-                    found[self.steps[k].context] = number, -(-UNROLLED // len(loop)), k in self.heads
+                    found[self.steps[k].context] = number, laps, k in self.heads
         return found
 
     def _lapped(self, step: Step) -> Step:
@@ -198,6 +202,11 @@ class Region:
                 here, far = following[0], far + 1
         assert -1 not in chain
         return chain, place
+
+    def twin(self, k: int) -> int:
+        """The context that trusted context ``k`` is a copy of."""
+        first = self.chain[k]
+        return next(strip.cycle[k - first] for strip in self.strips.values() if self.copy[strip.head] == first)
 
     def _copy_strips(self) -> None:
         """Give every loop that is one cycle, and that has something to trust, its copy."""

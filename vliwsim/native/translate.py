@@ -8,7 +8,7 @@ the stepper with the state as it was at the start of the beat; then all of it is
 
 from __future__ import annotations
 
-from vliwsim.native.ahead import FIRST, HELD, Ahead
+from vliwsim.native.ahead import FIRST, Ahead
 from vliwsim.native.beats import Beats
 from vliwsim.native.charges import charge_function
 from vliwsim.native.contexts import Context
@@ -52,8 +52,9 @@ class Translation(Ahead, Beats):
             for kind, there in (("hold", step.waiting), ("fresh", step.refreshed)):
                 if there is not None and not step.held:
                     self.edge_counter[k, kind] = len(firsts) + len(self.edge_counter)
-            if k >= region.own and step.ways > 1 and not following:
-                self.edge_counter[k, "out"] = len(firsts) + len(self.edge_counter)
+            if k >= region.own and not following:
+                for kind in ("out", "back") if step.ways > 1 else ("back",):
+                    self.edge_counter[k, kind] = len(firsts) + len(self.edge_counter)
         self.note_index: dict[tuple[str, int, int, int | None], int] = {}
         for bundle in sorted({step.context.at for step in region.steps}):
             self._number_notes(bundle)
@@ -93,14 +94,14 @@ class Translation(Ahead, Beats):
         made = [f"  {variable} = alloca {kind}" for variable, kind in sorted(self.variables.items())]
         lines = [*made, *self.lines, *body]
         calls = "\n".join(
-            function(operation, halves, own, self.following) for (operation, halves), own in self.functions.items()
+            function(operation, halves, own, self.following, bare=bare)
+            for (operation, halves, bare), own in self.functions.items()
         )
         charges = "\n".join(charge_function(self.core.memory, accesses, own) for accesses, own in self.charges.items())
         # the block of hand-over is always there, so that LLVM may keep counters out of loops
         block = f"ptr noalias writable dereferenceable({self.layout.bytes}) %io"
         head = f"define void @{name}({block}, ptr noalias %mem, ptr noalias %status) nounwind {{\nstart:\n"
-        held = HELD if self.region.strips and not self.following else ""
-        return f"{calls}\n{charges}\n{held}\n{head}" + "\n".join(lines) + "\n}\n"
+        return f"{calls}\n{charges}\n{head}" + "\n".join(lines) + "\n}\n"
 
     def enter(self) -> None:
         """Variables filled, and the way to the context entered at."""
@@ -168,14 +169,15 @@ class Translation(Ahead, Beats):
             self.leave_strip(k)
             self.count_edge("out")
             self.put(f"br label %{way}")
-        left = f"leave{k}" in self.used
-        if left:
+        if f"leave{k}" in self.used:
             self.block(f"leave{k}")
             if self.strip is not None:
-                self.leave_strip(k)
+                self.back_to_judged(k)
+                return
             self.put(f"store i64 {GIVEN_BACK}, ptr {self.header(REASON)}")
             self.put(f"br label %give{k}")
-        if left or (k in self.region.heads and not self.step.leave):
+            self.give_back(k, self.step.context)
+        elif k in self.region.heads and not self.step.leave:
             self.give_back(k, self.step.context)
 
     def refuel(self) -> None:

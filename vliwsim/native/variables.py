@@ -63,7 +63,7 @@ class Variables(Text):
                 self.variables[f"%u{register}"] = "i8" if following else "i1"
         self.read: set[int] = set()
         self.used: set[str] = set()
-        self.functions: dict[tuple[Operation, Halves], str] = {}
+        self.functions: dict[tuple[Operation, Halves, bool], str] = {}
         self.charges: dict[tuple[tuple[int, bool], ...], str] = {}
         self.here = "start"
 
