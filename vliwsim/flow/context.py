@@ -5,13 +5,10 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 from typing import NamedTuple
 
-import attrs
-
 from vliwsim.flow.values import Condition, Constant, Identity, Implied, Knowledge, Known, Literal
 
 
-@attrs.frozen(order=True)
-class Flight:
+class Flight(NamedTuple):
     """A result that lands in ``beats`` beats (0: in this one) if ``on`` holds; write number ``number``.
 
     ``value``: what it brings to a register whose values are followed, else None. ``since``: of a ``count``'s update,
@@ -20,13 +17,12 @@ class Flight:
 
     beats: int
     number: int
-    on: Condition = attrs.field(order=sorted)
-    value: Known | None = attrs.field(order=False)
-    since: Known | None = attrs.field(default=None, order=False)
+    on: Condition
+    value: Known | None
+    since: Known | None = None
 
 
-@attrs.frozen(order=True)
-class Turn:
+class Turn(NamedTuple):
     """A branch in flight: the bundle after ``bundles`` more comes from ``target`` if ``on`` holds.
 
     ``target`` is a bundle index, -1 where no bundle begins, None where it is not known. ``site``: (bundle, instruction)
@@ -35,8 +31,8 @@ class Turn:
 
     bundles: int
     site: tuple[int, int]
-    on: Condition = attrs.field(order=sorted)
-    target: int | None = attrs.field(order=False)
+    on: Condition
+    target: int | None
 
 
 class Context(NamedTuple):

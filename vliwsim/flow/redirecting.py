@@ -4,8 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 
-import attrs
-
 from vliwsim.description.operations import Kind
 from vliwsim.flow.beat import Beat, Moment
 from vliwsim.flow.context import Context, Flight, Turn, normal
@@ -51,7 +49,7 @@ def drain(now: Moment, halts: Condition) -> None:
         for flight in now.flights:
             on = now.knowledge.settle(flight.on)
             if on is not None:
-                by_beat.setdefault(flight.beats, []).append(attrs.evolve(flight, on=on))
+                by_beat.setdefault(flight.beats, []).append(flight._replace(on=on))
         for _, flights in sorted(by_beat.items()):
             judge_landing(now, flights, not halts)
     now.knowledge = kept
@@ -117,8 +115,8 @@ def later(
             busy[slot] = max(busy.get(slot, 0), part.effects.busy - 1)
         has_branch = any(part.branches for part in now.prepared.parts)
         behind = 1 if has_branch else min(behind + 1, now.core.branch.latency)
-        turns = [attrs.evolve(t, bundles=t.bundles - 1) for t in turns]
-    flights = [attrs.evolve(f, beats=f.beats - 1) for f in now.flights]
+        turns = [t._replace(bundles=t.bundles - 1) for t in turns]
+    flights = [f._replace(beats=f.beats - 1) for f in now.flights]
     return normal(
         at,
         within,
