@@ -143,7 +143,7 @@ CODE = [
     # labels and targets
     "@0 jump nowhere #~ unknown-label:9\n",
     "@0 jump 16 #~ unknown-label:9\n",
-    "@0 add g1, g2, start #~ unknown-name:16\n",
+    "@0 mul.half g1, g2.lo, start #~ unknown-name:24\n",
     "@0 idle\nstart: #~ label-twice:1\n",
     "@0 idle\ng3: #~ name-taken:1\n",
     "@0 idle\nrepeat: #~ bad-name:1\n",

@@ -25,6 +25,7 @@ from vliwsim.check.verdict import (
     Wait,
 )
 from vliwsim.description.operations import Kind
+from vliwsim.flow.beat import UNKNOWN
 from vliwsim.flow.graph import MOST_CONTEXTS, Graph
 from vliwsim.machine.parts import Part
 from vliwsim.program.code import Program
@@ -78,6 +79,8 @@ class _Judge:
         self.found: dict[str, dict[object, Incident]] = {}
         self.tagged = any(tag for bundle in tags for tag in bundle)
         self.right_beats: dict[Site, tuple[int, ...]] = {}
+        self.astray = False
+        """Some branch goes where nobody knows."""
 
     def verdict(self, with_interrupts: bool) -> Verdict:
         self._flow()
@@ -96,6 +99,7 @@ class _Judge:
             found,
             self.tagged,
             self.right_beats,
+            self.astray,
         )
 
     def _judgement(self, rule: str) -> Judgement:
@@ -106,7 +110,7 @@ class _Judge:
         because = cannot_break(self.core, rule)
         if because:
             return Judgement(rule, PROVED, (), because)
-        unknown = rule != INDIRECT and bool(self.found.get(INDIRECT))
+        unknown = rule != INDIRECT and self.astray
         if (unknown or not self.complete) and self._nothing_to_break(rule):
             return Judgement(rule, PROVED, (), "no bundle of the program could")
         if not self.complete:
@@ -157,6 +161,7 @@ class _Judge:
                 if rule == "early-read" and cannot_break(self.core, rule):
                     continue
                 sure = finding.sure or rule in ALONE
+                self.astray |= rule == INDIRECT and finding.detail == UNKNOWN
                 self._add(rule, sure, index, finding.sites, register=finding.register, detail=finding.detail)
 
     def _undefined(self) -> None:

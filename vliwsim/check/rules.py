@@ -7,12 +7,12 @@ from vliwsim.machine.hazards import ALLOWED
 
 WRONG_ITEM, INDIRECT = "wrong-item", "indirect-target"
 
-RULES = (*ALLOWED, INDIRECT, WRONG_ITEM)
-"""Every rule's name: the machine's hazards, targets that are not known, items."""
+RULES = (*ALLOWED, WRONG_ITEM)
+"""Every rule's name: the machine's hazards, and items."""
 
 ALLOWS = {
     **ALLOWED,
-    INDIRECT: "a target register that holds the link of a `call`, on every path",
+    INDIRECT: "a register that holds the same code address whatever the data, or labels behind `to`",
     WRONG_ITEM: "operands of the item that the operation works on, or of the one it names",
 }
 

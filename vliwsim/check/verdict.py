@@ -80,6 +80,7 @@ class Verdict(NamedTuple):
     ``contexts``: how many there are, and whether that is all of them (``complete``). ``blown_up``: the bundle with most
     of them where it is not. ``tagged``: does the source say which items its operations work on. ``right_beats``: for
     operations that work on another item than is said, the bundles where all their operands are of the right one.
+    ``astray``: some branch goes where its register says, which is not known, so that not every path was looked at.
     """
 
     contexts: int
@@ -91,6 +92,7 @@ class Verdict(NamedTuple):
     interrupts: Interrupts | None
     tagged: bool
     right_beats: Mapping[Site, tuple[int, ...]] = MappingProxyType({})
+    astray: bool = False
 
     def outcome(self, rule: str) -> str:
         return self.judgements[rule].outcome

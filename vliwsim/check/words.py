@@ -7,7 +7,9 @@ from collections.abc import Sequence
 from vliwsim.check.rules import ALLOWS, WRONG_ITEM
 from vliwsim.check.verdict import NEEDS_INPUT, UNDECIDED, VIOLATED, EarlyRead, Incident, Judgement, Site, Verdict
 from vliwsim.description.operations import Kind
+from vliwsim.flow.beat import NAMED, UNKNOWN
 from vliwsim.problems import Place, Problem, problem
+from vliwsim.program.code import Immediate
 from vliwsim.program.effects import effects
 from vliwsim.program.kernel import Kernel
 
@@ -142,7 +144,7 @@ class Words:
         if rule == "branch-past-halt":
             return f"halt at {at} {may}{self._s('come', may)} with a branch in flight: {sent}"
         if rule == "indirect-target":
-            return f"where {one} goes is not known"
+            return self._target(incident, one)
         if rule == WRONG_ITEM:
             return self._item(incident, one, register)
         if rule in ("misaligned", "out-of-array"):
@@ -158,6 +160,19 @@ class Words:
     @staticmethod
     def _s(verb: str, may: str) -> str:
         return verb if may else f"{verb}es" if verb.endswith("ch") else f"{verb}s"
+
+    def _target(self, incident: Incident, one: str) -> str:
+        if incident.detail == UNKNOWN:
+            return f"where {one} goes is not known"
+        bundle, instruction = incident.sites[0]
+        begins, targets = self.kernel.program.index_at, self.bundles[bundle].instructions[instruction].targets
+        names = sentence([self.at(begins[place.value]) for place in targets if isinstance(place, Immediate)])
+        if incident.detail == NAMED:
+            return f"data say which way {one} goes, to {names}; a run that would go elsewhere stops there"
+        may = "goes" if incident.sure else "may go"
+        where = begins.get(int(incident.detail, 0))
+        to = f"byte {incident.detail}" if where is None else self.at(where)
+        return f"{one} {may} to {to}, and names {names}"
 
     def _undefined(self, incident: Incident, one: str, register: str) -> str:
         what, _, why = incident.detail.partition(", ")

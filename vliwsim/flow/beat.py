@@ -14,6 +14,9 @@ from vliwsim.flow.follow import Follow
 from vliwsim.flow.values import ALWAYS, Condition, Identity, Known, Literal, literal
 from vliwsim.machine.prepared import Preparation, Prepared
 
+NAMED, UNKNOWN = "named", "unknown"
+"""Details of an ``indirect-target``: data choose among the places named, or where it goes is not known at all."""
+
 
 class Finding(NamedTuple):
     """A rule that a beat breaks, or may break.

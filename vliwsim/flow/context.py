@@ -25,14 +25,14 @@ class Flight(NamedTuple):
 class Turn(NamedTuple):
     """A branch in flight: the bundle after ``bundles`` more comes from ``target`` if ``on`` holds.
 
-    ``target`` is a bundle index, -1 where no bundle begins, None where it is not known. ``site``: (bundle, instruction)
-    that issued it.
+    ``targets`` are bundle indices, one of which it is, -1 where no bundle begins; None where that is not known.
+    ``site``: (bundle, instruction) that issued it.
     """
 
     bundles: int
     site: tuple[int, int]
     on: Condition
-    target: int | None
+    targets: tuple[int, ...] | None
 
 
 class Context(NamedTuple):
@@ -98,7 +98,7 @@ def normal(
     new_flights = tuple(
         Flight(f.beats, f.number, condition(on), maybe(f.value), maybe(f.since)) for f, on in kept_flights
     )
-    new_turns = tuple(Turn(t.bundles, t.site, condition(on), t.target) for t, on in kept_turns)
+    new_turns = tuple(Turn(t.bundles, t.site, condition(on), t.targets) for t, on in kept_turns)
     facts = tuple(sorted((numbers[v], nonzero) for v, nonzero in knowledge.facts.items() if v in numbers))
     implied = []
     for old, new in numbers.items():

@@ -3,9 +3,9 @@
 from __future__ import annotations
 
 from vliwsim.description.operations import Kind
-from vliwsim.flow.beat import Moment
+from vliwsim.flow.beat import NAMED, UNKNOWN, Moment
 from vliwsim.flow.context import Flight, Turn
-from vliwsim.flow.values import ALWAYS, Condition, both
+from vliwsim.flow.values import ALWAYS, Condition, Constant, both
 
 
 def execute(now: Moment) -> tuple[list[Turn], Condition | None]:
@@ -24,8 +24,7 @@ def execute(now: Moment) -> tuple[list[Turn], Condition | None]:
             taken = both(on, now.follow.taken(now, part))
             taken = None if taken is None else now.knowledge.settle(taken)
             if taken is not None:
-                target = now.follow.target(now, part)
-                turns.append(Turn(now.core.branch.latency, now.here(k), taken, target))
+                turns.append(Turn(now.core.branch.latency, now.here(k), taken, targets(now, k, taken)))
             if part.operation.count:
                 on = taken
         if on is None:
@@ -39,3 +38,18 @@ def execute(now: Moment) -> tuple[list[Turn], Condition | None]:
     if not halts:
         return turns, None
     return turns, ALWAYS if any(not h for h in halts) else halts[0]
+
+
+def targets(now: Moment, k: int, taken: Condition) -> tuple[int, ...] | None:
+    """The bundles that branch ``k`` may go to if ``taken``, -1 where none begins; None where that is not known."""
+    part = now.prepared.parts[k]
+    if part.target_register is None:
+        return (-1 if part.target is None else part.target,)
+    address, begins = now.value(part.target_register), now.ready.program.index_at
+    if not isinstance(address, Constant):
+        now.find("indirect-target", [now.here(k)], False, detail=NAMED if part.targets else UNKNOWN)
+        return None if part.targets is None else tuple(sorted(begins.get(place, -1) for place in part.targets))
+    if part.targets is None or address.bits in part.targets:
+        return (begins.get(address.bits, -1),)
+    now.find("indirect-target", [now.here(k)], not taken, detail=f"{address.bits:#x}")
+    return ()

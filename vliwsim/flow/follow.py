@@ -37,7 +37,10 @@ class Values(Protocol):
 
 
 class Follow:
-    """The registers of one program that are followed: ``registers`` in order, ``index`` their places."""
+    """The registers of one program that are followed: ``registers`` in order, ``index`` their places.
+
+    ``addresses``: those among them that indirect branches go by, and what these are copied from.
+    """
 
     def __init__(self, ready: Preparation) -> None:
         self.ready = ready
@@ -50,19 +53,25 @@ class Follow:
                 followed.update(i.index for i in part.inputs if 0 <= i.index < ready.first_constant)
                 if part.target_register is not None:
                     followed.add(part.target_register)
+        self.registers = tuple(sorted(self.origins(parts, followed)))
+        self.index = {register: k for k, register in enumerate(self.registers)}
+        targets = {part.target_register for part in parts if part.target_register is not None}
+        self.addresses = self.origins(parts, targets) if targets else targets
+
+    def origins(self, parts: Sequence[Part], registers: set[int]) -> set[int]:
+        """The registers, and all that they are copied or told from."""
+        found = set(registers)
         while True:
             more = {
                 part.inputs[source].index
                 for part in parts
-                if len(part.results) == 1 and part.effects.writes[0].register in followed
+                if len(part.results) == 1 and part.effects.writes[0].register in found
                 for source in told_from(part.operation)
             }
-            more = {r for r in more if 0 <= r < ready.first_constant} - followed
+            more = {r for r in more if 0 <= r < self.ready.first_constant} - found
             if not more:
-                break
-            followed |= more
-        self.registers = tuple(sorted(followed))
-        self.index = {register: k for k, register in enumerate(self.registers)}
+                return found
+            found |= more
 
     def operand(self, values: Values, part: Part, source: int) -> Known:
         """The value of an input: of a followed register, or a constant."""
@@ -142,15 +151,6 @@ class Follow:
         if side is not None and len(known) == 2 and isinstance(known[1], Constant) and known[1].bits == 0:
             return literal(known[0], side)
         return literal(values.fresh_identity(), True)
-
-    def target(self, values: Values, part: Part) -> int | None:
-        """Bundle index of a branch's target, -1 where no bundle begins, None where it is not known."""
-        if part.target_register is None:
-            return -1 if part.target is None else part.target
-        address = values.value(part.target_register)
-        if not isinstance(address, Constant):
-            return None
-        return self.ready.program.index_at.get(address.bits, -1)
 
 
 def told_from(operation: Operation) -> range:

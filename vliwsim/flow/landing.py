@@ -6,7 +6,7 @@ from collections.abc import Iterable, Sequence
 
 from vliwsim.flow.beat import Moment
 from vliwsim.flow.context import Flight
-from vliwsim.flow.values import Condition, literal
+from vliwsim.flow.values import Condition, Constant, literal
 
 
 def land(now: Moment, due: Sequence[Flight]) -> None:
@@ -65,6 +65,8 @@ def bring(now: Moment, flight: Flight) -> None:
         now.values[index] = new
     elif flight.since is not None and old == flight.since and flight.on == literal(flight.since, True):
         now.values[index] = new  # counted down where not zero, and still the same zero where it is
+    elif register in now.follow.addresses and (isinstance(old, Constant) or isinstance(new, Constant)):
+        now.values[index] = new if now.decide(flight.on) else old  # so that where the code goes stays known
     else:
         now.values[index] = joined = now.fresh_identity()
         now.joined[joined] = flight.on

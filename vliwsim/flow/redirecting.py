@@ -59,13 +59,13 @@ def taken(now: Moment, turn: Turn, flying: Sequence[Turn]) -> list[Context]:
     knowledge = Knowledge(now.knowledge.facts, now.knowledge.implied)
     if not knowledge.learn(sorted(turn.on)):
         return []
-    if turn.target is None:
-        now.find("indirect-target", [turn.site], False)
-        return []
-    if turn.target < 0:
-        now.find("ran-off-the-end", [turn.site], True, detail="a branch goes where no bundle begins")
-        return []
-    return some(later(now, turn.target, 0, flying, False, knowledge))
+    found: list[Context] = []
+    for target in turn.targets or ():
+        if target < 0:
+            now.find("ran-off-the-end", [turn.site], True, detail="a branch goes where no bundle begins")
+        else:
+            found += some(later(now, target, 0, flying, False, knowledge))
+    return found
 
 
 def not_taken(now: Moment, landing: Sequence[Turn], flying: Sequence[Turn]) -> list[Context]:

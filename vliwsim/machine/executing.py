@@ -27,6 +27,9 @@ def execute(ready: Preparation, state: State, prepared: Prepared, issued: Issued
             address = part.reach.address(state.operands[part.reach.base], state.operands[part.reach.step])
             assert isinstance(address, int)
             addresses[k] = address
+    for k, part in on:
+        if part.targets is not None:
+            judge_target(state, prepared, k, part)
     for k, part in on:  # misaligned
         access = part.operation.access
         if access and memory.misaligned == "reject" and addresses[k] % access.bytes:
@@ -76,6 +79,18 @@ def judge_defined(ready: Preparation, state: State, prepared: Prepared, k: int, 
         raise undefined_used(ready, state, prepared, k, f"{what} of {part.operation.name}")
     if taken and part.target_register is not None and isinstance(state.operands[part.target_register], Undefined):
         raise undefined_used(ready, state, prepared, k, f"target {names[part.target_register]}")
+
+
+def judge_target(state: State, prepared: Prepared, k: int, part: Part) -> None:
+    """``indirect-target``: a taken branch to a register goes where its instruction does not name."""
+    if not part.operation.evaluate(input_values(state, part), part.halves)[-1]:
+        return
+    assert part.target_register is not None
+    assert part.targets is not None
+    address, _ = parts(state.operands[part.target_register])
+    if address not in part.targets:
+        found = f"{part.operation.name} goes to byte {address:#x}, which it does not name"
+        raise stop("indirect-target", state, prepared.index, found, [Cause(prepared.index, k, state.beat)])
 
 
 def judge_stores(state: State, prepared: Prepared, on: Sequence[tuple[int, Part]], addresses: dict[int, int]) -> None:

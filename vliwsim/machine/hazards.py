@@ -21,6 +21,7 @@ ALLOWED = {
     "links": "operands that a link carries, in number and place; results in the slot's own cluster",
     "fresh": "a register over a link one beat after it landed, or later",
     "early-read": "a register with no result in flight",
+    "indirect-target": "one of the places that the branch names behind to",
     "misaligned": "an address that is a multiple of the access's size",
     "out-of-array": "addresses inside the arrays and scratch, for a read also in what their `over` declares",
     "store-twice": "one store a byte a beat",

@@ -77,7 +77,8 @@ class Part(NamedTuple):
     write numbers (two for a pair).
 
     ``target``: bundle index a direct branch goes to (None: nowhere), or for an indirect one the operand-file index in
-    ``target_register``. ``link``: the link value of a call, None where no word begins there.
+    ``target_register``, and in ``targets`` the only byte addresses it may go to, None where the source names none.
+    ``link``: the link value of a call, None where no word begins there.
     """
 
     instruction: Instruction
@@ -88,6 +89,7 @@ class Part(NamedTuple):
     reach: Reach | None
     target: int | None
     target_register: int | None
+    targets: frozenset[int] | None
     link: int | None
 
     @property

@@ -101,6 +101,7 @@ class Preparation:
             reach,
             target,
             target_register,
+            frozenset([place.value for place in instruction.targets if isinstance(place, Immediate)]) or None,
             self._link(bundle),
         )
 

@@ -311,7 +311,7 @@ class _Assembly:
         drafts: list[list[Instruction] | int] = [
             draft
             if isinstance(draft, int)
-            else [Instruction(ready.operation, slot, ready.places, ready.guard) for ready, slot in draft]
+            else [Instruction(ready.operation, slot, ready.places, ready.guard, ready.targets) for ready, slot in draft]
             for draft in self.drafts
         ]
         digest = core_digest(self.core, self.operations.digest)

@@ -14,7 +14,7 @@ from typing import NamedTuple
 import attrs
 
 from vliwsim.description.core import Core
-from vliwsim.description.operations import Operation
+from vliwsim.description.operations import Operation, Role
 
 
 @attrs.frozen
@@ -38,7 +38,7 @@ class Immediate(NamedTuple):
 
 
 class Label(NamedTuple):
-    """A target not yet placed; only between the assembler and the encoder, never in decoded code."""
+    """A code address not yet placed; only between the assembler and the encoder, never in decoded code."""
 
     name: str
 
@@ -77,12 +77,25 @@ class Guard:
 
 @attrs.frozen
 class Instruction:
-    """One operation in a bundle: its slot index in the core, guard, and one place an operand of the operation."""
+    """One operation in a bundle: its slot index in the core, guard, and one place an operand of the operation.
+
+    ``targets``: of a branch to a register, the only places it may go to, where the source names them; in decoded code
+    immediates, in order of address.
+    """
 
     operation: Operation
     slot: int
     places: tuple[Place, ...]
     guard: Guard | None = None
+    targets: tuple[Immediate | Label, ...] = ()
+
+
+def indirect(instruction: Instruction) -> int | None:
+    """The register that a branch takes its target from; None for anything else."""
+    for operand, place in zip(instruction.operation.operands, instruction.places):
+        if operand.role is Role.TARGET and isinstance(place, Register):
+            return place.number
+    return None
 
 
 class Bundle(NamedTuple):

@@ -10,9 +10,6 @@ from vliwsim.description.operations import Operand, Role
 from vliwsim.program.code import Address, Bundle, Immediate, Instruction, Label, Mode, Place, Program, Register
 from vliwsim.program.encoding.layout import longest_idle
 
-OPERAND_WORDS = ("if", "not", "on", "then", "in", "ring")
-"""Words inside a statement; like the words that begin a line they cannot be labels."""
-
 DECIMAL_LIMIT = 1 << 16
 """Packed and unsigned immediates from here up are written in hexadecimal."""
 
@@ -81,6 +78,8 @@ def _text(core: Core, instruction: Instruction, names_at: Mapping[int, str], slo
     text = f"{operation.name} {', '.join(places)}" if places else operation.name
     if guard is not None:
         text += f" if {'not ' if guard.negated else ''}{names[guard.register]}"
+    if instruction.targets:
+        text += " to " + ", ".join(_code_address(target, names_at) for target in instruction.targets)
     return f"{text} on {core.slots[instruction.slot].name}" if slot else text
 
 
@@ -95,7 +94,7 @@ def _labels(program: Program) -> dict[str, int]:
     """The program's labels by address, with made-up ones where the text needs more."""
     from vliwsim.program.assembly.schedule import MOST_BEATS
     from vliwsim.program.source.header import HEADER_WORDS
-    from vliwsim.program.source.parser import BODY_WORDS
+    from vliwsim.program.source.parser import BODY_WORDS, OPERAND_WORDS
 
     unusable = {*HEADER_WORDS, *BODY_WORDS, *OPERAND_WORDS} | program.core.register_numbers.keys()
     found = {name: address for name, address in program.labels.items() if name not in unusable}
@@ -121,9 +120,12 @@ def _labels(program: Program) -> dict[str, int]:
 
 
 def _targets(instruction: Instruction) -> Iterator[int]:
-    """Byte addresses of direct targets."""
+    """Byte addresses of direct targets, and of those that a branch to a register names."""
     for operand, place in zip(instruction.operation.operands, instruction.places):
         if operand.role is Role.TARGET and isinstance(place, Immediate):
+            yield place.value
+    for place in instruction.targets:
+        if isinstance(place, Immediate):
             yield place.value
 
 
@@ -135,8 +137,12 @@ def _place(names: tuple[str, ...], operand: Operand, place: Place, names_at: Map
     if isinstance(place, Label):
         return place.name
     if operand.role is Role.TARGET:
-        return names_at.get(place.value, f"{place.value:#x}")
+        return _code_address(place, names_at)
     return immediate_text(place.value, operand)
+
+
+def _code_address(place: Immediate | Label, names_at: Mapping[int, str]) -> str:
+    return place.name if isinstance(place, Label) else names_at.get(place.value, f"{place.value:#x}")
 
 
 def _address(names: tuple[str, ...], address: Address) -> str:

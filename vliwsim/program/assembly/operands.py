@@ -47,6 +47,7 @@ class Ready:
     reads: list[tuple[int, str]]
     writes: list[tuple[int, str, str]]
     item: ItemTag | None = None
+    targets: tuple[Label, ...] = ()
 
 
 class OperandReader:
@@ -82,9 +83,10 @@ class OperandReader:
             place = fixed.get((piece.text, id(operand))) or self.place(operand, piece)
             if place is not None:
                 places.append(place)
+        targets = self.targets(call) if call.targets is not None else ()
         if len(places) < len(call.operands) or len(self.complaints.problems) > before:
             return None
-        ready = Ready(operation, tuple(places), guard, pin, call, *touched(operation, places), self.item(call))
+        ready = Ready(operation, tuple(places), guard, pin, call, *touched(operation, places), self.item(call), targets)
         self._check_whole(ready)
         return ready
 
@@ -124,6 +126,18 @@ class OperandReader:
             self.complaints.add("unclear-item", piece.where, found, f"0, the newest, to {OLDEST_ITEM}")
             return None
         return value
+
+    def targets(self, call: Call) -> tuple[Label, ...]:
+        """The labels that a branch to a register may go to."""
+        found: dict[str, Label] = {}
+        for piece in call.targets or ():
+            if not piece.text:
+                self.complaints.add("incomplete", piece.where, "nothing where a label is due", "to LABEL, LABEL …")
+            elif piece.text in found:
+                self.complaints.add("twice", piece.where, f"{piece.text} twice", "each label once")
+            elif label := self._label(piece, "a label of this file"):
+                found[piece.text] = label
+        return tuple(found.values())
 
     def guard(self, call: Call) -> Guard | None:
         assert call.guard
@@ -172,6 +186,8 @@ class OperandReader:
         if not text:
             self.complaints.add("operand-missing", piece.where, f"nothing for {operand.name}", operand_form(operand))
             return None
+        if self._is_code_address(operand, text):
+            return Label(text)
         if text[0] == "[" or role is Role.ADDRESS:
             return self._address(operand, piece)
         if role is Role.CONSTANT:
@@ -219,6 +235,13 @@ class OperandReader:
             self._fixed[piece.text, id(operand)] = place
         return place
 
+    def _is_code_address(self, operand: Operand, text: str) -> bool:
+        """Whether a label stands where a whole number of 32 bits may: the address of its code."""
+        if text not in self.labels or text in self.scope.environment or text in self.scope.registers:
+            return False
+        whole = operand.type in ("i32", "u32") and not operand.half and not operand.pair
+        return whole and (operand.role is Role.SOURCE or (operand.role is Role.CONSTANT and takes_immediate(operand)))
+
     def _unknown_word(self, piece: Piece) -> None:
         scope = self.scope
         if piece.text in self.labels:
@@ -229,9 +252,8 @@ class OperandReader:
         allowed = "a register, a let name or a number"
         self.complaints.add("unknown-name", piece.where, found, allowed, remedy)
 
-    def _label(self, piece: Piece) -> Label | None:
+    def _label(self, piece: Piece, allowed: str = "a label of this file or a register") -> Label | None:
         if piece.text not in self.labels:
-            allowed = "a label of this file or a register"
             self.complaints.add(
                 "unknown-label",
                 piece.where,
@@ -372,6 +394,13 @@ class OperandReader:
                 found = f"a second immediate, {piece.text}"
                 allowed = "one immediate an operation, an offset or a label included"
                 self.complaints.add("two-immediates", piece.where, found, allowed, "one of them in a register")
+        if ready.call.targets and not any(
+            operand.role is Role.TARGET and type(place) is Register
+            for operand, place in zip(ready.operation.operands, ready.places)
+        ):
+            found = f"{ready.operation.name} goes nowhere by a register, and names labels behind to"
+            allowed = "to LABEL, LABEL … behind a branch to a register"
+            self.complaints.add("no-indirect-branch", ready.call.targets[0].where, found, allowed)
         if len(ready.writes) > 1:
             seen: set[int] = set()
             for register, _, _ in ready.writes:

@@ -8,10 +8,23 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 
+import attrs
+
 from vliwsim.description.core import Core
 from vliwsim.description.operations import Kind, Operation, OperationSet, Role
 from vliwsim.problems import ImageError, Problem, problem
-from vliwsim.program.code import Address, Bundle, Guard, Immediate, Instruction, Mode, Place, Program, Register
+from vliwsim.program.code import (
+    Address,
+    Bundle,
+    Guard,
+    Immediate,
+    Instruction,
+    Mode,
+    Place,
+    Program,
+    Register,
+    indirect,
+)
 from vliwsim.program.encoding.encode import fits, place_after
 from vliwsim.program.encoding.image import Image
 from vliwsim.program.encoding.layout import (
@@ -37,7 +50,7 @@ def decode(core: Core, operations: OperationSet, image: Image, digest: str | Non
 
     Raises :class:`ImageError` with up to 20 problems: ``other-core``, ``other-words``, ``no-code``, ``bad-word``,
     ``names-twice``, ``cut-off``, ``bundle-too-long``, ``slot-order``, ``bad-padding``, ``target-nowhere``,
-    ``label-nowhere``.
+    ``label-nowhere``, ``targets-of-nothing``.
     """
     rule = core.words
     if digest is not None and image.digest != digest:
@@ -73,7 +86,9 @@ class _Decoder:
         self.known: dict[tuple[int, int | None], Instruction] = {}
         """Instructions by word (``last`` cleared) and extension: loops written out repeat themselves."""
         self.targets: list[tuple[int, int]] = []
-        """Direct targets: (index of the word, byte address)."""
+        """Direct targets, and named ones: (index of the word, byte address)."""
+        self.named = {at: tuple([Immediate(place) for place in places]) for at, places in image.targets.items()}
+        """Named targets whose branch has not come yet, by the byte address of its word."""
 
     def program(self) -> Program:
         bundles = tuple(self._bundles())
@@ -83,6 +98,9 @@ class _Decoder:
                 self._complain(
                     at, "target-nowhere", f"a branch to byte {target}", "the address of a bundle's first word"
                 )
+        for address in self.named:
+            found = f"places to go to of byte {address}"
+            self.problems.append(problem("targets-of-nothing", found, "the address of a branch to a register"))
         for name, address in self.image.labels.items():
             if address not in starts:
                 found = f"label {name} at byte {address}"
@@ -160,7 +178,7 @@ class _Decoder:
                 if instruction is None:
                     continue
             if instruction.operation.kind is Kind.BRANCH:
-                self._target(here, instruction)
+                instruction = self._target(here, instruction)
             if instructions and instruction.slot < instructions[-1].slot:
                 found = f"slot {instruction.slot} behind slot {instructions[-1].slot}"
                 self._complain(here, "slot-order", found, "operations in slot order")
@@ -169,10 +187,17 @@ class _Decoder:
             self._complain(start, "bundle-too-long", f"{operations} operations", f"at most {MOST_OPERATIONS}")
         return at, tuple(instructions)
 
-    def _target(self, at: int, instruction: Instruction) -> None:
+    def _target(self, at: int, instruction: Instruction) -> Instruction:
+        """The branch with the targets it names, if it does."""
         for operand, place in zip(instruction.operation.operands, instruction.places):
             if operand.role is Role.TARGET and isinstance(place, Immediate):
                 self.targets.append((at, place.value))
+        byte = at * self.core.words.bytes
+        if byte not in self.named or indirect(instruction) is None:
+            return instruction
+        named = self.named.pop(byte)
+        self.targets += [(at, place.value) for place in named]
+        return attrs.evolve(instruction, targets=named)
 
     def _instruction(self, at: int, word: int, extension: int | None) -> Instruction | None:
         """The instruction of a word not met before; None, with all complaints, when it is bad."""

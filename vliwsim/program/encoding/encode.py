@@ -15,7 +15,7 @@ from vliwsim.description.core import Core, Words
 from vliwsim.description.operations import OperationSet
 from vliwsim.problems import ImageError, Problem, problem
 from vliwsim.problems import Place as SourcePlace
-from vliwsim.program.code import Address, Immediate, Instruction, Label, Mode, Place, Register
+from vliwsim.program.code import Address, Immediate, Instruction, Label, Mode, Place, Register, indirect
 from vliwsim.program.encoding.image import Image
 from vliwsim.program.encoding.layout import MODES, MOST_OPERATIONS, RING_MODE, Field, Format, Layout, Part, layout
 
@@ -39,6 +39,7 @@ class _Word:
     value: int | None = None
     value_bits: int = 32
     extended: bool = False
+    targets: tuple[Immediate | Label, ...] = ()
 
 
 def place_after(end: int, words: int, rule: Words) -> int:
@@ -108,7 +109,8 @@ class _Encoder:
         size = self.rule.bytes
         at = {name: starts[self.first[draft]] * size for name, draft in self.labels.items()}
         words = self._words(starts, at)
-        return Image(self.layout.core.name, self.rule.bits, words, at, digest, tuple(self.first))
+        targets = self._targets(starts, at)
+        return Image(self.layout.core.name, self.rule.bits, words, at, digest, targets, tuple(self.first))
 
     def _refuse(self) -> None:
         if self.problems:
@@ -163,9 +165,31 @@ class _Encoder:
         word = _Word(bits, shape.immediate)
         for part, place in zip(shape.parts, instruction.places):
             self._place(word, shape, part, place)
+        if instruction.targets:
+            self._named_targets(word, instruction)
         if word.value is not None:
             word.extended = not fits(word.value, word.value_bits, word.short.width)
         return word
+
+    def _named_targets(self, word: _Word, instruction: Instruction) -> None:
+        """Take the places that a branch to a register may go to."""
+        if indirect(instruction) is None:
+            raise _Unsayable("places to go to", "none but of a branch to a register")
+        missing = [t.name for t in instruction.targets if isinstance(t, Label) and t.name not in self.labels]
+        if missing:
+            raise _Unsayable(f"label {missing[0]} is nowhere", "a label of the program")
+        word.targets = instruction.targets
+
+    def _targets(self, starts: list[int], at: Mapping[str, int]) -> dict[int, tuple[int, ...]]:
+        """Of every word with named targets, byte address → byte addresses, both in order."""
+        found: dict[int, tuple[int, ...]] = {}
+        for bundle, start in zip(self.bundles, starts):
+            for word in () if isinstance(bundle, int) else bundle:
+                if word.targets:
+                    places = {at[t.name] if isinstance(t, Label) else t.value for t in word.targets}
+                    found[start * self.rule.bytes] = tuple(sorted(places))
+                start += 1 + word.extended
+        return found
 
     def _place(self, word: _Word, shape: Format, part: Part, place: Place) -> None:
         """Put one operand into ``word``."""

@@ -4,7 +4,8 @@ The file, version 1:
 
 1. the line ``vliwsim image 1``;
 2. one line of JSON, keys sorted, no spaces, ASCII: ``bits`` of a word, ``core`` (its name), ``digest`` of the core and
-   its operations, ``labels`` (name → byte address), ``words`` (how many);
+   its operations, ``labels`` (name → byte address), ``words`` (how many), and where there are any ``targets`` (byte
+   address of a branch's word, as text → the byte addresses that it names as places to go to, in order);
 3. the words, ``bits / 8`` bytes each, least significant byte first;
 4. 32 bytes: the SHA-256 of everything before.
 """
@@ -28,6 +29,7 @@ MOST_BYTES = 1 << 25
 """The largest image file that is read, in bytes."""
 
 _DIGEST_BYTES = 32
+_NUMBER = re.compile(r"(?:0|[1-9][0-9]{0,9})\Z")
 _LABEL = re.compile(r"[A-Za-z_]\w*\Z")
 
 
@@ -35,7 +37,8 @@ _LABEL = re.compile(r"[A-Za-z_]\w*\Z")
 class Image:
     """``words`` of ``bits`` bits for the core named ``core``; word i stands at byte ``i * bits / 8``.
 
-    ``digest`` identifies the core and its operations (empty: unknown). ``labels``: name → byte address.
+    ``digest`` identifies the core and its operations (empty: unknown). ``labels``: name → byte address. ``targets``:
+    byte address of a branch to a register → the byte addresses that it may go to, in order, where it names any.
     ``draft_bundles``: of a fresh encoding, for every draft the index of its first bundle in the decoded program.
     """
 
@@ -44,6 +47,7 @@ class Image:
     words: tuple[int, ...]
     labels: Mapping[str, int] = attrs.field(factory=dict)
     digest: str = ""
+    targets: Mapping[int, tuple[int, ...]] = attrs.field(factory=dict)
     draft_bundles: tuple[int, ...] = attrs.field(default=(), eq=False, repr=False)
 
     @property
@@ -54,15 +58,16 @@ class Image:
 
 def to_bytes(image: Image) -> bytes:
     """The image as the bytes of an image file."""
-    header = _header(
-        {
-            "bits": image.bits,
-            "core": image.core,
-            "digest": image.digest,
-            "labels": dict(image.labels),
-            "words": len(image.words),
-        }
-    )
+    values: dict[str, object] = {
+        "bits": image.bits,
+        "core": image.core,
+        "digest": image.digest,
+        "labels": dict(image.labels),
+        "words": len(image.words),
+    }
+    if image.targets:
+        values["targets"] = {str(at): list(places) for at, places in image.targets.items()}
+    header = _header(values)
     size = image.bits // 8
     body = MAGIC + header + b"\n" + b"".join([word.to_bytes(size, "little") for word in image.words])
     return body + hashlib.sha256(body).digest()
@@ -97,7 +102,8 @@ def from_bytes(data: bytes, name: str = "image") -> Image:
     if len(code) != size * header["words"]:
         raise ImageError(_damaged(name, f"{len(code)} bytes of code for {header['words']} words of {size} bytes"))
     words = tuple([int.from_bytes(code[k : k + size], "little") for k in range(0, len(code), size)])
-    return Image(header["core"], header["bits"], words, header["labels"], header["digest"])
+    targets = {int(at): tuple(places) for at, places in header.get("targets", {}).items()}
+    return Image(header["core"], header["bits"], words, header["labels"], header["digest"], targets)
 
 
 def read_image(source: str | os.PathLike[str] | bytes) -> Image:
@@ -174,8 +180,8 @@ def _damaged(name: str, found: str) -> Problem:
 
 def _header_faults(header: object) -> list[str]:
     """What is wrong with a header's content, one sentence each."""
-    if not isinstance(header, dict) or set(header) != {"bits", "core", "digest", "labels", "words"}:
-        return ["the header must have exactly bits, core, digest, labels, words"]
+    if not isinstance(header, dict) or set(header) - {"targets"} != {"bits", "core", "digest", "labels", "words"}:
+        return ["the header must have exactly bits, core, digest, labels, words, and targets where there are any"]
     faults = []
     if type(header["bits"]) is not int or header["bits"] % 8 or not 32 <= header["bits"] <= 1024:
         faults.append("bits is no multiple of 8 from 32 to 1024")
@@ -187,4 +193,17 @@ def _header_faults(header: object) -> list[str]:
         faults.append("labels is no table")
     elif not all(_LABEL.match(key) and type(at) is int and at >= 0 for key, at in labels.items()):
         faults.append("labels does not map names to byte addresses")
+    if "targets" in header and not _are_targets(header["targets"]):
+        faults.append("targets does not map byte addresses to byte addresses in order")
     return faults
+
+
+def _are_targets(targets: object) -> bool:
+    return (
+        isinstance(targets, dict)
+        and bool(targets)
+        and all(_NUMBER.match(at) for at in targets)
+        and all(isinstance(places, list) and places for places in targets.values())
+        and all(type(place) is int and place >= 0 for places in targets.values() for place in places)
+        and all(places == sorted(set(places)) for places in targets.values())
+    )

@@ -51,10 +51,7 @@ def header_line(word: str, line: Piece, tree: Tree, complaints: Complaints) -> N
 
 
 def _cores(rest: Piece, tree: Tree, complaints: Complaints) -> None:
-    at = 0
-    for part in rest.text.split(","):
-        name = rest.part(at, at + len(part))
-        at += len(part) + 1
+    for name in rest.cut(","):
         if not _WORD_CHARACTERS.match(name.text):
             complaints.add("bad-name", name.where, f"a core called {name.text or 'nothing'}", "core NAME, NAME …")
         elif any(name.text == other.text for other in tree.cores):

@@ -10,6 +10,8 @@ from vliwsim.program.source.pieces import Piece, Unbalanced, cut_call, expressio
 from vliwsim.program.source.tree import Call, Idle, Label, Node, Repeat, Stamp, Tree
 
 BODY_WORDS = ("repeat", "end", "idle")
+OPERAND_WORDS = ("if", "not", "on", "then", "in", "ring", "to", "item", "with", "of")
+"""Words inside a statement; like those that begin a line they cannot be labels."""
 DEEPEST_REPEAT = 8
 """Levels of nested ``repeat``."""
 
@@ -96,7 +98,7 @@ class _Parser:
 
     def label(self, name: Piece) -> None:
         self.in_body = True
-        if name.text in BODY_WORDS or name.text in ("if", "not", "on", "then", "in", "ring"):
+        if name.text in BODY_WORDS or name.text in OPERAND_WORDS:
             self.complaints.add("bad-name", name.where, f"a label called {name.text}", "a word without a meaning here")
         if self.blocks:
             self.complaints.add("in-repeat", name.where, f"label {name.text} inside a repeat", "labels outside of it")
@@ -185,7 +187,7 @@ class _Parser:
         self.target = self.blocks[-1][0].body if self.blocks else self.tree.body
 
     def call(self, piece: Piece, start: int) -> None:
-        """An operation: mnemonic, operands between commas, then ``if``, ``on``, ``item`` and ``with`` in any order."""
+        """An operation: mnemonic, operands between commas, then ``if on to item with``, in any order."""
         text = piece.text
         try:
             commas, tails = cut_call(text[start:])
@@ -201,16 +203,18 @@ class _Parser:
                     operands.append(piece.part(at, start + comma))
                     at = start + comma + 1
             operands.append(piece.part(at, end))
-        guard = pin = item = None
+        guard = pin = item = targets = None
         others: list[tuple[Piece, Piece]] = []
         negated = False
         for k, (word, where) in enumerate(tails):
             stop = start + tails[k + 1][1] if k + 1 < len(tails) else len(text)
             value = piece.part(start + where + len(word), stop)
-            if (word == "if" and guard) or (word == "on" and pin) or (word == "item" and item):
+            if {"if": guard, "on": pin, "to": targets, "item": item}.get(word):
                 self.complaints.add("twice", (piece.line, piece.column + start + where), f"{word} twice", f"one {word}")
             elif word == "on":
                 pin = value
+            elif word == "to":
+                targets = tuple(value.cut(","))
             elif word == "item":
                 item = value
             elif word == "with":
@@ -220,7 +224,7 @@ class _Parser:
                 guard = value.part(3) if negated else value
         if others and not item:
             self.complaints.add("no-item", others[0][0].where, "with without item", "item N with REGISTER of M")
-        self.target.append(Call(mnemonic, tuple(operands), guard, negated, pin, item, tuple(others)))
+        self.target.append(Call(mnemonic, tuple(operands), guard, negated, pin, item, tuple(others), targets))
 
     def other(self, value: Piece) -> list[tuple[Piece, Piece]]:
         """``REGISTER of EXPRESSION`` behind ``with``."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Iterator
 from typing import NamedTuple
 
 
@@ -24,8 +25,15 @@ class Piece(NamedTuple):
         bare = text.strip()
         return Piece(bare, self.line, self.column + start + len(text) - len(text.lstrip()))
 
+    def cut(self, mark: str) -> Iterator[Piece]:
+        """The parts between the marks, without the blanks around them."""
+        start = 0
+        for text in self.text.split(mark):
+            yield self.part(start, start + len(text))
+            start += len(text) + len(mark)
 
-_OF_INTEREST = re.compile(r"[\[\](){},]|(?<![\w.])(?:if|on|item|with)(?![\w.])")
+
+_OF_INTEREST = re.compile(r"[\[\](){},]|(?<![\w.])(?:if|on|to|item|with)(?![\w.])")
 _OPEN = {"[": "]", "(": ")", "{": "}"}
 _TOKEN = re.compile(r"\s*(?:(0[xXbB]\w+|\d+(?:\.\d+)?|[A-Za-z_]\w*)|(\*\*|//|<<|>>|[-+*/%&|^~])|(\())")
 
@@ -54,7 +62,7 @@ class Unbalanced(Exception):
 
 
 def cut_call(text: str) -> tuple[list[int], list[tuple[str, int]]]:
-    """Where the top-level commas of a statement are, and its top-level ``if``, ``on``, ``item`` and ``with`` words.
+    """Where the top-level commas of a statement are, and its top-level ``if``, ``on``, ``to``, ``item``, ``with``.
 
     Raises :class:`Unbalanced`.
     """

@@ -45,6 +45,7 @@ class Call(NamedTuple):
     """One operation as written. ``guard`` is the register's text, ``pin`` the slot's, ``item`` an expression.
 
     ``others``: of operands from another item than ``item``, the register's text and the item's expression.
+    ``targets``: the labels behind ``to``, None without one.
     """
 
     mnemonic: Piece
@@ -54,6 +55,7 @@ class Call(NamedTuple):
     pin: Piece | None = None
     item: Piece | None = None
     others: tuple[tuple[Piece, Piece], ...] = ()
+    targets: tuple[Piece, ...] | None = None
 
 
 class Repeat(NamedTuple):
