@@ -14,6 +14,8 @@ from vliwsim.faces.options import core_options, given_values, load, save_outputs
 from vliwsim.problems import OptionError, VliwsimError, problem
 
 if TYPE_CHECKING:
+    from pathlib import Path
+
     from vliwsim.kernel.cases import Case
     from vliwsim.kernel.reference import Reference
     from vliwsim.kernel.runner import KernelRun
@@ -52,6 +54,21 @@ def _clear(context: click.Context, _: click.Parameter, wanted: bool) -> None:
 )
 @click.option("--case", metavar="NAME", help="Run a case by its name, or `all` of them. --give changes single inputs.")
 @click.option("--cases", is_flag=True, help="List the cases and leave.")
+@click.option(
+    "--frames",
+    multiple=True,
+    metavar="NAME=FILE.npy",
+    help="Run a recording frame by frame: x=FILE.npy is cut into frames (a matrix: a row each), `changes` are kept "
+    "between them; a value differs by an expression, first=frame*n. Sizes and all else with --give.",
+)
+@click.option(
+    "--hop",
+    multiple=True,
+    metavar="[NAME=]SAMPLES",
+    help="From one frame's beginning to the next one's, if they overlap.",
+)
+@click.option("--lead", multiple=True, metavar="[NAME=]SAMPLES", help="Zeros in front of the first sample.")
+@click.option("--pad", is_flag=True, help="Fill up the last frame with zeros, in place of leaving its samples out.")
 @core_options
 @click.option(
     "--no-reference", is_flag=True, help="Do not load reference.py (which is Python code) and compare nothing."
@@ -131,6 +148,10 @@ class _Job:
             raise OptionError(problem("bad-option", found, "one case", "vliwsim regress --interrupts for all cases"))
         if options["debug"] and (self.as_json or options["cases"] or options["case"] == "all"):
             raise OptionError(problem("bad-option", "--debug with --json, --cases or --case all", "one run to debug"))
+        if options["frames"] or options["hop"] or options["lead"] or options["pad"]:
+            from vliwsim.faces.frames_command import judge_options
+
+            judge_options(options)
         given = given_values(options["give"])
         kernel = load(self.path, options["core"], options["changes"])
         from vliwsim.kernel.interface import interface_of
@@ -147,6 +168,8 @@ class _Job:
             refused = self._refused(kernel)
             if refused is not None:
                 return refused
+        if options["frames"]:
+            return self._frames(kernel, reference, given, targets)
         if options["case"] == "all":
             return self._all(kernel, reference, given)
         from vliwsim.kernel.cases import case_with
@@ -163,6 +186,22 @@ class _Job:
             from vliwsim.faces.debug_command import open_at_failure
 
             open_at_failure(run, options["interrupt_at"])
+        return run.as_json()
+
+    def _frames(
+        self, kernel: Kernel, reference: Reference | None, given: dict[str, Any], targets: dict[str, Path]
+    ) -> object:
+        """A recording, frame by frame."""
+        from vliwsim.faces.frames_command import report, run_frames
+
+        run = run_frames(kernel, reference, given, targets, self.options)
+        self._say(lambda: report(run, self.options["notes"]))
+        if targets and run.reason != "halt":
+            self._say(lambda: "  nothing saved: not all frames were run")
+        if run.reason == "stopped":
+            self.status = STOPPED
+        elif not run.ok:
+            self.status = 1
         return run.as_json()
 
     def _every(self, run: KernelRun) -> object:

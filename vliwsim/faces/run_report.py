@@ -12,9 +12,9 @@ from vliwsim.problems import Problem
 
 def report(run: KernelRun, all_notes: bool = False) -> str:
     """The whole report, no trailing newline. Of several notes of one name the first is shown, unless ``all_notes``."""
-    parts = [[run.verdict], list(_differences(run)), list(_account(run.account, run.reason))]
+    parts = [[run.verdict], list(_differences(run)), list(account_lines(run.account, run.reason))]
     parts += [str(p).splitlines() for p in run.problems]
-    parts.append(list(_notes(run.notes, all_notes)))
+    parts.append(list(note_lines(run.notes, all_notes)))
     return "\n\n".join("\n".join(lines) for lines in parts if lines)
 
 
@@ -23,7 +23,7 @@ def line(run: KernelRun, width: int) -> str:
     return f"  {run.case:<{width}}  {run.cycles:>8}  {run.verdict}"
 
 
-def _notes(notes: tuple[Problem, ...], all_notes: bool) -> Iterator[str]:
+def note_lines(notes: tuple[Problem, ...], all_notes: bool) -> Iterator[str]:
     groups: dict[str, list[Problem]] = {}
     for note in notes:
         groups.setdefault(note.name, []).append(note)
@@ -37,16 +37,16 @@ def _notes(notes: tuple[Problem, ...], all_notes: bool) -> Iterator[str]:
 
 def _differences(run: KernelRun) -> Iterator[str]:
     wrong = {name: d for name, d in run.differences.items() if d}
-    width = max((len(_element(name, d)) for name, d in wrong.items()), default=0)
+    width = max((len(element(name, d)) for name, d in wrong.items()), default=0)
     for name, difference in wrong.items():
-        yield f"  {_element(name, difference):<{width}}  {_values(difference)}"
+        yield f"  {element(name, difference):<{width}}  {difference_values(difference)}"
 
 
-def _element(name: str, difference: Difference) -> str:
+def element(name: str, difference: Difference) -> str:
     return name if difference.index is None else f"{name}[{difference.index}]"
 
 
-def _values(difference: Difference) -> str:
+def difference_values(difference: Difference) -> str:
     got = "undefined" if difference.got is None else difference.got
     text = f"is {got}, expected {difference.expected}"
     if difference.size > 1:
@@ -56,7 +56,7 @@ def _values(difference: Difference) -> str:
     return text
 
 
-def _account(account: Account, reason: str) -> Iterator[str]:
+def account_lines(account: Account, reason: str) -> Iterator[str]:
     budget = ""
     if account.budget is not None and reason == "halt":
         beside = ", beside interrupt service" if account.judged_cycles != account.cycles else ""

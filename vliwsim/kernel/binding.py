@@ -57,10 +57,14 @@ def formula_names(
     arrays: Mapping[str, np.ndarray],
     areas: tuple[Area, ...],
 ) -> dict[str, Any]:
-    """The environment that the formulas of a kernel are evaluated in; f32 scalars become Python floats."""
+    """The environment that the formulas of a kernel are evaluated in; f32 scalars become Python floats.
+
+    ``addr(x)`` is an array's address in memory, or a label's in code where no array is called so.
+    """
     names: dict[str, Any] = {**kernel.constants, **sizes}
     names |= {k: float(v) if isinstance(v, np.floating) else v for k, v in values.items()}
     names |= {name: Elements(array) for name, array in arrays.items()}
+    names |= {f"addr({label})": address for label, address in kernel.program.labels.items()}
     types = {item.name: ELEMENTS[item.type] for item in kernel.items}
     for area in areas:
         names[f"addr({area.name})"] = area.start

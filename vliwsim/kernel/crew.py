@@ -31,8 +31,8 @@ def batch_of(kernel: Kernel) -> Batch:
     """The program of ``kernel``, made ready for many cases; worth keeping."""
     from vliwsim.native.batch import Batch
 
-    given = {item.register for item in kernel.items if item.register is not None and item.kind != "returns"}
-    return Batch(Machine(kernel.program), given)
+    given = [item for item in kernel.items if item.size is not None or item.kind != "returns"]
+    return Batch(Machine(kernel.program), {item.register for item in given if item.register is not None})
 
 
 class Total:
@@ -74,15 +74,23 @@ class Crew:
     """Threads that run the cases of one program; the interpreter is free while they do.
 
     ``limit``: cycles a case. ``look`` is called every now and then, and stops everything by giving true. ``chained``:
-    jobs run one behind the other, and so do the cases of one (see :class:`vliwsim.native.batch.Worker`).
+    jobs run one behind the other, and so do the cases of one (see :class:`vliwsim.native.batch.Worker`). ``eager``:
+    ask for jobs ahead; without it a job is asked for when the one before has been given away.
     """
 
     def __init__(
-        self, batch: Batch, limit: int, look: Callable[[], bool] | None = None, *, chained: bool = False
+        self,
+        batch: Batch,
+        limit: int,
+        look: Callable[[], bool] | None = None,
+        *,
+        chained: bool = False,
+        eager: bool = True,
     ) -> None:
         self.batch, self.limit, self.look, self.chained = batch, limit, look, chained
         self.stop = np.zeros(1, np.int64)
-        self.threads = 1 if chained else os.cpu_count() or 1
+        self.threads = 1 if chained or not eager else os.cpu_count() or 1
+        self.ahead = self.threads if eager else 0
         self._workers: dict[int, tuple[Stack, list[Worker]]] = {}
         self._raw: dict[str, Mapping[str, np.ndarray]] = {}
 
@@ -99,7 +107,7 @@ class Crew:
             for job in jobs:
                 worker = self._worker(job.stack)
                 ahead.append((job, worker, pool.submit(self._done, worker, job)))
-                while len(ahead) > self.threads:
+                while len(ahead) > self.ahead:
                     yield self._finished(*ahead.popleft())
             while ahead:
                 yield self._finished(*ahead.popleft())
@@ -142,6 +150,16 @@ class Crew:
         for stack, free in self._workers.values():
             if stack is not but:
                 free.clear()
+
+    def again(self, job: Job, count: int, before: np.ndarray) -> Results:
+        """The first ``count`` cases of a job by themselves, for the account of no more than those."""
+        from vliwsim.native.batch import Results, Worker
+
+        worker = Worker(self.batch, job.stack.plan, np.zeros(1, np.int64), chained=self.chained)
+        results = np.zeros((count, job.stack.plan.result), np.uint8)
+        done = worker.run(np.ascontiguousarray(job.rows[:count]), results, self.limit, before)
+        assert done == count
+        return Results(job.stack.plan, results, worker.totals())
 
     def take(self, results: Results) -> None:
         """Count what has run through in these for the account."""

@@ -73,12 +73,14 @@ ELEMENTS: Mapping[str, Element] = {
 
 
 class Converted(NamedTuple):
-    """``array`` in the element's type, or None with the ``problems`` that forbid it; ``notes`` say what changed."""
+    """``array`` in the element's type, or None with the ``problems`` that forbid it; ``notes`` say what changed:
+    values that were ``saturated``, values ``rounded`` to binary32."""
 
     array: np.ndarray | None
     problems: tuple[Problem, ...] = ()
     notes: tuple[Problem, ...] = ()
     saturated: int = 0
+    rounded: int = 0
 
 
 def _refused(name: str, found: str, allowed: str, remedy: str = "") -> Converted:
@@ -145,11 +147,11 @@ def _from_integers(element: Element, array: np.ndarray, label: str) -> Converted
         rounded = array.astype(np.float32)
         # 2**63 and beyond do not survive a comparison in int64, a float64 holds every float32
         inexact = int(np.count_nonzero(rounded.astype(np.longdouble) != array.astype(np.longdouble)))
-        return Converted(rounded, notes=_rounding_note(label, inexact, array.size))
+        return Converted(rounded, notes=rounding_note(label, inexact, array.size), rounded=inexact)
     if array.size and (int(array.min()) < element.low or int(array.max()) > element.high):
         wrong = (array < element.low) | (array > element.high)
         index = int(np.flatnonzero(wrong.ravel())[0])
-        where = label if array.ndim == 0 else f"{label}[{index}]"
+        where = _place(label, array, index)
         more = int(np.count_nonzero(wrong)) - 1
         others = f" and {more} more" if more else ""
         return _refused(
@@ -174,27 +176,36 @@ def _from_floats(element: Element, array: np.ndarray, label: str) -> Converted:
         lost = np.isinf(rounded) & np.isfinite(array)
         if lost.any():
             index = int(np.flatnonzero(lost.ravel())[0])
-            return _refused("value-range", f"{label}[{index}] = {array.flat[index]}", "magnitudes below 2**128 for f32")
+            found = f"{_place(label, array, index)} = {array.flat[index]}"
+            return _refused("value-range", found, "magnitudes below 2**128 for f32")
         inexact = int(np.count_nonzero((rounded.astype(array.dtype) != array) & ~np.isnan(array)))
         if array.dtype.itemsize <= 4:
             inexact = 0
-        return Converted(
-            np.ascontiguousarray(rounded).reshape(array.shape), notes=_rounding_note(label, inexact, array.size)
-        )
+        whole = np.ascontiguousarray(rounded).reshape(array.shape)
+        return Converted(whole, notes=rounding_note(label, inexact, array.size), rounded=inexact)
     if not np.isfinite(array).all():
         index = int(np.flatnonzero(~np.isfinite(array).ravel())[0])
-        return _refused("not-finite", f"{label}[{index}] = {array.flat[index]}", f"finite numbers for {element.name}")
+        found = f"{_place(label, array, index)} = {array.flat[index]}"
+        return _refused("not-finite", found, f"finite numbers for {element.name}")
     assert element.fraction is not None
     with np.errstate(over="ignore"):
         scaled = np.rint(array.astype(np.promote_types(array.dtype, np.float64)) * 2.0**element.fraction)
     saturated = int(np.count_nonzero((scaled < element.low) | (scaled > element.high)))
     raw = np.clip(scaled, element.low, element.high).astype(element.dtype)
+    return Converted(raw, notes=scaling_note(element, label, saturated, array.size), saturated=saturated)
+
+
+def _place(label: str, array: np.ndarray, index: int) -> str:
+    """How an element of ``array`` is called."""
+    return label if array.ndim == 0 else f"{label}[{index}]"
+
+
+def scaling_note(element: Element, label: str, saturated: int, size: int) -> tuple[Problem, ...]:
     scaling = f"floats scaled by 2**{element.fraction}, rounded to nearest even"
-    found = f"{label}: {scaling}; {saturated} of {array.size} saturated"
-    return Converted(raw, notes=(problem("scaled", found, kind="note"),), saturated=saturated)
+    return (problem("scaled", f"{label}: {scaling}; {saturated} of {size} saturated", kind="note"),)
 
 
-def _rounding_note(label: str, inexact: int, size: int) -> tuple[Problem, ...]:
+def rounding_note(label: str, inexact: int, size: int) -> tuple[Problem, ...]:
     if not inexact:
         return ()
     return (problem("rounded", f"{label}: {inexact} of {size} values rounded to binary32", kind="note"),)

@@ -17,6 +17,9 @@ from vliwsim.kernel.runner import LIMIT, KernelRun, run_kernel
 from vliwsim.program.kernel import Kernel
 
 if TYPE_CHECKING:
+    import numpy as np
+
+    from vliwsim.kernel.frames_run import FramesRun
     from vliwsim.kernel.many import Cases, ManyRuns
     from vliwsim.native.batch import Batch
 
@@ -88,6 +91,43 @@ class LoadedKernel:
         from vliwsim.kernel.many import run_many
 
         return run_many(self.kernel, cases, limit=limit, progress=progress, batch=self.batch)
+
+    def run_frames(
+        self,
+        frames: Mapping[str, Any],
+        *,
+        given: Mapping[str, Any] | None = None,
+        hop: int | Mapping[str, int] | None = None,
+        lead: int | Mapping[str, int] = 0,
+        pad: bool = False,
+        reference: bool = True,
+        limit: int = LIMIT,
+        engine: str = "auto",
+        progress: Callable[[int], bool | None] | None = None,
+        take: Callable[[str, np.ndarray], None] | None = None,
+        **same: Any,
+    ) -> FramesRun:
+        """Run a recording frame by frame, ``changes`` kept between them; see :func:`.frames.run_frames`.
+
+        ``frames``: what is cut or differs; ``same``: sizes, and inputs that are the same for all frames (``given``
+        takes those whose names are options here). ``progress`` is called with the number of frames done.
+        """
+        from vliwsim.kernel.frames import run_frames
+
+        return run_frames(
+            self.kernel,
+            frames,
+            {**(given or {}), **same},
+            hop=hop,
+            lead=lead,
+            pad=pad,
+            reference=self.reference if reference else None,
+            limit=limit,
+            engine=engine,
+            look=progress,
+            take=take,
+            batch=lambda: self.batch,
+        )
 
     def __repr__(self) -> str:
         interface = interface_of(self.kernel)

@@ -256,7 +256,7 @@ def judged(
         outputs, diagnostics = read.values, list(read.problems)
         if expected is not None:
             for name, item in interface_of(kernel).outputs.items():
-                within = _whole(setup, item.within)
+                within = whole_number(setup, item.within)
                 element, unknown = interface_of(kernel).element(name), read.undefined[name]
                 differences[name] = compare(element, outputs[name], expected[name], within, unknown)
     if simulation.hazard:
@@ -270,7 +270,7 @@ def judged(
         simulation.begun,
         simulation.stalls,
         simulation.drain,
-        _budget(setup, outputs),
+        budget_of(setup, outputs),
         simulation.halted_in,
     )
     return KernelRun(
@@ -292,7 +292,7 @@ def _limit_problem(kernel: Kernel, simulation: Simulation, limit: int) -> Proble
     return problem("cycle-limit", found, f"a halt within {limit} cycles", "--limit CYCLES", kind="illegal")
 
 
-def _whole(setup: Setup, formula: Formula | None) -> int | None:
+def whole_number(setup: Setup, formula: Formula | None) -> int | None:
     """The value of a ``within``: a whole number of units in the last place."""
     if formula is None:
         return None
@@ -307,7 +307,7 @@ def _whole(setup: Setup, formula: Formula | None) -> int | None:
     return int(value)
 
 
-def _budget(setup: Setup, outputs: Mapping[str, Output]) -> int | float | None:
+def budget_of(setup: Setup, outputs: Mapping[str, Output]) -> int | float | None:
     """The cycles the source allows; a budget may also speak of scalar outputs of a finished run."""
     formula = setup.kernel.budget
     scalars: dict[str, Any] = {n: v if isinstance(v, int) else float(v) for n, v in outputs.items() if np.ndim(v) == 0}

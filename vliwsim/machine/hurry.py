@@ -27,7 +27,8 @@ for freshness, its slots, (latency, most results) pairs, beats, branch target, a
 Land = Callable[[list[Value], Sequence[Batch]], None]
 
 STEPPED_FIRST = 4
-"""Beats a bundle is stepped before a function is generated for it: most code of a program runs only a few times."""
+"""Beats a bundle is stepped, in all runs of a machine, before a function is generated for it: most code of a program
+runs only a few times."""
 
 REMEMBERED = 4096
 """Landing sets whose verdict is kept; beyond that it starts afresh."""
@@ -39,6 +40,7 @@ class HotLoop:
     def __init__(self, ready: Preparation) -> None:
         self.ready, self.core = ready, ready.core
         self.entries: list[Entry | None] = [None] * len(ready.program.bundles)
+        self.stepped = [0] * len(self.entries)
         self.verdicts: dict[object, Land] = {}
         self.met: dict[object, int] = {}
 
@@ -67,7 +69,7 @@ class HotLoop:
         try:
             while cycle < until:
                 if entry is None:
-                    entry = self._entry(state, at)
+                    entry = self._entry(at)
                     if entry is None:
                         return
                 run, watch, cares, slots, writes, beats, target, branches = entry
@@ -197,11 +199,14 @@ class HotLoop:
         land = self.verdicts[key] = landing_function(targets)
         return land
 
-    def _entry(self, state: State, index: int) -> Entry | None:
+    def _entry(self, index: int) -> Entry | None:
         """What the hot loop needs of a bundle, made once it has been stepped often enough; None to step it again."""
         prepared = self.ready[index]
         rows = prepared.rows
-        if rows is None or state.counts[index] < STEPPED_FIRST:
+        if rows is None:
+            return None
+        self.stepped[index] += 1
+        if self.stepped[index] <= STEPPED_FIRST:
             return None
         watch = itemgetter(*prepared.watch, *prepared.watch[:1]) if prepared.watch else None
         target = rows.branch.target if rows.branch else None
