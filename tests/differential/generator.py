@@ -5,7 +5,7 @@ Everything is drawn from one ``random.Random``, so that Hypothesis can steer it 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from random import Random
 
 from vliwsim.description.operations import Operand, Role
@@ -145,7 +145,36 @@ class Writer:
             bundles.append(PlainBundle(self.addresses[k], position, written, beats, r.random() < 0.2))
             position += beats
         interrupt = r.randrange(30) if r.random() < 0.3 else None
-        return Trial(self.core, tuple(bundles), self.registers(), self.regions, interrupt, r.choice((60, 200)))
+        registers, limit = self.registers(), r.choice((60, 200))
+        if any(indirect(o) is not None for bundle in bundles for o in bundle.operations):
+            bundles = self.with_targets(bundles, registers)
+        return Trial(self.core, tuple(bundles), registers, self.regions, interrupt, limit)
+
+    def with_targets(self, bundles: list[PlainBundle], registers: dict[int, Value]) -> list[PlainBundle]:
+        """Some of the branches to registers name places; some of the registers, and constants, are places."""
+        r = self.r
+        named: list[PlainBundle] = []
+        used: set[int] = set()
+        for bundle in bundles:
+            operations = list(bundle.operations)
+            for k, operation in enumerate(operations):
+                register = indirect(operation)
+                if register is not None and r.random() < 0.6:
+                    places = tuple(sorted(r.sample(self.addresses, r.choice((1, 2, min(3, self.size))))))
+                    operations[k] = replace(operation, targets=places)
+                    used.add(register)
+            named.append(replace(bundle, operations=tuple(operations)))
+        for register in sorted(used):
+            if r.random() < 0.7:
+                registers[register] = Value(r.choice(self.addresses))
+        return [replace(b, operations=tuple(self.with_address(o, used) for o in b.operations)) for b in named]
+
+    def with_address(self, operation: PlainOperation, used: set[int]) -> PlainOperation:
+        """A constant for a register that branches go by becomes a place."""
+        place = operation.operands.get("d")
+        if operation.name != "li" or not isinstance(place, Reg) or place.number not in used:
+            return operation
+        return replace(operation, operands={**operation.operands, "n": Imm(self.r.choice(self.addresses))})
 
     def registers(self) -> dict[int, Value]:
         r, given = self.r, {}
@@ -273,6 +302,12 @@ class Writer:
         if mode != "offset" and not self.wild and not self.first[home] <= base < self.first[home + 1]:
             mode = "offset"
         return Addr(base, mode, step, r.choice((0, 0, 16, 32)) if mode == "after" else 0)
+
+
+def indirect(operation: PlainOperation) -> int | None:
+    """The register that a branch goes by; None for all else."""
+    place = operation.operands.get("to")
+    return place.number if isinstance(place, Reg) else None
 
 
 def const_mask(operand: Operand) -> int:

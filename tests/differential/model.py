@@ -454,6 +454,7 @@ class Machine:
         on = [operation for operation in operations if self.guard_on(operation)]
         # "Judged in this order, each for the whole bundle before the next"
         self.judge_undefined(on)
+        self.judge_targets(on)
         accesses = [
             Access(
                 operation,
@@ -511,6 +512,13 @@ class Machine:
                     raise Met("undefined-used")
                 if self.decision(operation) and self.value(operation, "to").unknown:
                     raise Met("undefined-used")
+
+    def judge_targets(self, on: list[PlainOperation]) -> None:
+        """A taken branch to a register that names places goes to one of them, or there is `indirect-target`."""
+        for operation in on:
+            named = operation.targets
+            if named and self.decision(operation) and self.value(operation, "to").bits not in named:
+                raise Met("indirect-target")
 
     def judge_memory(self, accesses: list[Access]) -> None:
         """ "misaligned, out-of-array, store-twice" """

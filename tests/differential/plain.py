@@ -129,13 +129,17 @@ class PlainGuard:
 
 @dataclass(frozen=True)
 class PlainOperation:
-    """``operands`` by the operand's name; an address stands under ``at`` and a branch target under ``to``."""
+    """``operands`` by the operand's name; an address stands under ``at`` and a branch target under ``to``.
+
+    ``targets``: of a branch to a register, the only addresses it may go to; none where any will do.
+    """
 
     name: str
     cls: str
     slot: int
     operands: dict[str, Reg | Imm | Addr] = field(default_factory=dict)
     guard: PlainGuard | None = None
+    targets: tuple[int, ...] = ()
 
 
 @dataclass(frozen=True)

@@ -85,7 +85,7 @@ def instruction_of(plain: PlainOperation) -> Instruction:
         key = {Role.ADDRESS: "at", Role.TARGET: "to"}.get(operand.role, operand.name)
         places.append(place_of(plain.operands[key]))
     guard = Guard(plain.guard.register, plain.guard.negated) if plain.guard else None
-    return Instruction(operation, plain.slot, tuple(places), guard)
+    return Instruction(operation, plain.slot, tuple(places), guard, tuple(map(Immediate, sorted(plain.targets))))
 
 
 def place_of(plain: Reg | Imm | Addr) -> Register | Immediate | Address:

@@ -3,8 +3,8 @@
 Each rule quotes the sentence it pins. The beat tables beside the programs say how the numbers come about; no number
 here was copied from a run. The programs are data, so that every engine can be held to the same table.
 
-Notation of a program: one string a bundle, ``label: slot operation operands if guard ; …``; ``idle k`` is one idle
-word of k beats; a leading ``!`` says that the bundle straddles fetch groups. Every operation takes one word of 8
+Notation of a program: one string a bundle, ``label: slot operation operands to labels if guard ; …``; ``idle k`` is one
+idle word of k beats; a leading ``!`` says that the bundle straddles fetch groups. Every operation takes one word of 8
 bytes, an idle word one.
 """
 
@@ -79,6 +79,7 @@ def assemble(core: PlainCore, lines: tuple[str, ...]) -> tuple[PlainBundle, ...]
 
 def operation(core: PlainCore, text: str, labels: dict[str, int]) -> PlainOperation:
     text, _, condition = text.partition(" if ")
+    text, _, targets = text.partition(" to ")
     guard = None
     if condition:
         guard = PlainGuard(register_number(core, condition.split()[-1]), condition.startswith("not "))
@@ -87,7 +88,8 @@ def operation(core: PlainCore, text: str, labels: dict[str, int]) -> PlainOperat
     written = re.findall(r"\[[^]]*\]|[^,\s]+", rest[0]) if rest else []
     assert len(written) == len(names), text
     operands = {key: operand(core, place, labels) for key, place in zip(names, written, strict=True)}
-    return PlainOperation(name, cls, [s.name for s in core.slots].index(slot), operands, guard)
+    named = tuple(labels[label.strip()] for label in targets.split(",")) if targets else ()
+    return PlainOperation(name, cls, [s.name for s in core.slots].index(slot), operands, guard, named)
 
 
 def operand(core: PlainCore, text: str, labels: dict[str, int]) -> Reg | Imm | Addr:
@@ -1104,6 +1106,32 @@ BRANCHES = [
         cycles=2,
         bundles=2,
         hazard=("ran-off-the-end", 1, 1, 1),
+    ),
+    rule(
+        "a-named-target",
+        "a taken branch to a register that names places goes to one of them",
+        "g.flow bne g1, g2, g3 to here, there",  # not taken: no error
+        "here: g.flow jump g1 to here, there",
+        "idle 1",  # index 2: there comes next
+        "g.sum li g4, 1",
+        "there: g.flow halt",
+        given={"g1": 32, "g2": 32, "g3": 0},
+        cycles=4,
+        bundles=4,
+        after={"g4": UNDEFINED},
+    ),
+    rule(
+        "a-target-not-named",
+        "or there is `indirect-target`",
+        "g.sum li g4, 1",
+        "here: g.flow jump g1 to here, there ; g.sum li g4, 2 ; g.mem lw g5, [g6]",  # before misaligned
+        "off: idle 2",
+        "there: g.flow halt",
+        given={"g1": 16, "g6": 1},
+        cycles=1,
+        bundles=1,
+        after={"g4": 1},
+        hazard=("indirect-target", 1, 1, 1),
     ),
     rule(
         "branch-overlap",

@@ -108,7 +108,7 @@ def test_every_hazard_of_the_text_has_a_rule() -> None:
     assert named == set(
         """
         lands-twice write-ports
-        undefined-used written-twice
+        undefined-used indirect-target written-twice
         slot-taken slot-class guard-register busy read-ports links fresh early-read
         misaligned out-of-array store-twice bank-conflict
         two-redirects ran-off-the-end branch-overlap link-nowhere branch-past-halt

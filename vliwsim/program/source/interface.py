@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections import Counter
-from collections.abc import Iterable
+from collections.abc import Collection, Iterable
 from pathlib import PurePosixPath
 from typing import NamedTuple
 
@@ -12,7 +12,7 @@ from vliwsim.program.kernel import Formula, Item
 from vliwsim.program.source.complaints import Complaints
 from vliwsim.program.source.pieces import Piece
 from vliwsim.program.source.scope import Scope
-from vliwsim.program.source.tree import ItemLine, Tree
+from vliwsim.program.source.tree import ItemLine, Label, Tree
 
 TYPES = ("i8", "i16", "i32", "u8", "u16", "u32", "q15", "q31", "f32")
 
@@ -148,6 +148,7 @@ class _Reader:
         self._find_sizes(items, needs, budget)
         arrays = {item.name for item in items if item.size is not None}
         arrays |= {line.name.text for line in self.tree.items if line.size is not None}
+        labels = {node.name.text for node in self.tree.body if isinstance(node, Label)}
         scalars = {line.name.text: line for line in self.tree.items if line.size is None}
         plain = {name for name, line in scalars.items() if "=" not in line.clauses and line.kind != "returns"}
         earlier: set[str] = set()
@@ -155,7 +156,7 @@ class _Reader:
             for formula in (item.size, item.over, item.align, item.bank, item.within):
                 self._known(formula, self.sizes | plain, arrays)
             counts = {"i"} if item.kind == "table" else set()
-            self._known(item.value, self.sizes | plain | earlier | counts, arrays)
+            self._known(item.value, self.sizes | plain | earlier | counts, arrays, labels)
             if item.size is None and item.kind != "returns":
                 earlier.add(item.name)
         readable = self.sizes | set(scalars) | arrays
@@ -183,7 +184,10 @@ class _Reader:
                 if line.size:
                     self.sizes |= set(re.findall(r"[A-Za-z_]\w*", line.size.text))
 
-    def _known(self, formula: Formula | None, names: Iterable[str], arrays: set[str]) -> None:
+    def _known(
+        self, formula: Formula | None, names: Iterable[str], arrays: set[str], labels: Collection[str] = ()
+    ) -> None:
+        """Tell what has no value in a formula. ``labels``: those whose ``addr`` has one."""
         if formula is None:
             return
         known = set(names)
@@ -193,7 +197,7 @@ class _Reader:
             function, _, rest = reference.partition("(")
             if function == "latency":
                 self._unknown(formula, rest[:-1], set(self.scope.operations.by_name))
-            elif rest[:-1] not in arrays:
+            elif rest[:-1] not in arrays and not (function == "addr" and rest[:-1] in labels):
                 self._unknown(formula, rest[:-1], arrays)
 
     def _unknown(self, formula: Formula, name: str, known: set[str]) -> None:
