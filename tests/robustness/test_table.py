@@ -15,6 +15,7 @@ from tests.robustness import (
     rows_arrays,
     rows_commands,
     rows_cores,
+    rows_frames,
     rows_images,
     rows_operations,
     rows_options,
@@ -32,6 +33,7 @@ ROOMS = {
     "reference": rows_references.ROWS,
     "option": rows_options.ROWS,
     "command": rows_commands.ROWS,
+    "frames": rows_frames.ROWS,
 }
 CASES = [pytest.param(row, id=f"{room}: {row.title}") for room, rows in ROOMS.items() for row in rows]
 

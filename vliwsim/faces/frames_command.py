@@ -62,7 +62,7 @@ def frames_given(kernel: Kernel, texts: Sequence[str]) -> dict[str, Any]:
 
 def steps(kernel: Kernel, texts: Sequence[str], option: str, given: Mapping[str, Any]) -> int | dict[str, int] | None:
     """``--hop`` or ``--lead``: one number for all arrays that are cut, or some by name. Sizes may stand in it."""
-    from vliwsim.program.source.expressions import formula
+    from vliwsim.kernel.recording import expression, value_of
 
     found: dict[str, Any] = {}
     for text in texts:
@@ -71,7 +71,8 @@ def steps(kernel: Kernel, texts: Sequence[str], option: str, given: Mapping[str,
             name, value = "", name
         if name in found or (found and "" in (name, *found)):
             raise OptionError(problem("bad-option", f"--{option} {text} besides another", "one for all, or one a name"))
-        found[name] = formula(value).value({**kernel.constants, **given})
+        what = f"--{option}"
+        found[name] = value_of(what, expression(what, value), {**kernel.constants, **given})
     return found.get("", found) if found else None
 
 

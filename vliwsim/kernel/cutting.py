@@ -8,11 +8,10 @@ from typing import Any
 import numpy as np
 
 from vliwsim.kernel.interface import interface_of
-from vliwsim.kernel.recording import Computed, Rows, Signal, Source, whole_number
+from vliwsim.kernel.recording import Computed, Rows, Signal, Source, expression, whole_number
 from vliwsim.kernel.sizes import formula_value
 from vliwsim.problems import InterfaceError, Problem, problem
 from vliwsim.program.kernel import Item, Kernel
-from vliwsim.program.source.expressions import formula
 
 
 class Cut:
@@ -71,7 +70,7 @@ class Cut:
             if item.size is not None:
                 raise InterfaceError(problem("frame-input", f"{name} is an array", "samples, or the file they are in"))
             known = {**self.kernel.constants, **{n: v for n, v in self.given.items() if isinstance(v, (int, float))}}
-            return Computed(name, element, formula(value), known)
+            return Computed(name, element, expression(name, value), known)
         samples = value if isinstance(value, np.ndarray) else np.asarray(value)
         wanted = (1,) if item.size is None else (1, 2)
         if samples.dtype.kind not in "iuf" or samples.ndim not in wanted:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from time import perf_counter
 from typing import TYPE_CHECKING
 
 import attrs
@@ -18,11 +19,11 @@ from vliwsim.machine.stepper import Machine
 if TYPE_CHECKING:
     from vliwsim.native.engine import Native
 
-SLICE = 1 << 14
-"""Cycles of the stepper between two looks at whether to go on."""
+SLICE = 1 << 12
+"""Cycles before the first look at whether to go on."""
 
-FAST_SLICE = 1 << 22
-"""Cycles of machine code between two looks at whether to go on."""
+SHORT = 0.05
+"""Seconds between two looks, about: as many cycles as are done in that time, whatever runs them."""
 
 LONG = 1 << 17
 """Cycles after which ``auto`` takes a run for a long one and goes on with machine code."""
@@ -76,17 +77,29 @@ def simulate(
     if listen:
         record(machine, listen)
         engine = "step"  # every beat by definition, so that each can be recorded
-    native = None
+    native, ahead = None, SLICE
+    stopped: list[bool] = []
+
+    def look(cycle: int) -> bool:
+        if watch and watch(cycle):
+            stopped.append(True)
+        return bool(stopped)
+
     while True:
         if native is None and (engine == "native" or (engine == "auto" and state.cycle >= LONG)):
             native = fast(machine, setup)
-        ahead = FAST_SLICE if native else SLICE
-        outcome = (native or machine).run(state, limit=min(limit, state.cycle + ahead), interrupt_at=interrupt_at)
+        began = perf_counter()
+        if native:
+            outcome = native.run(state, limit=limit, interrupt_at=interrupt_at, progress=look)
+        else:
+            outcome = machine.run(state, limit=min(limit, state.cycle + ahead), interrupt_at=interrupt_at)
         interrupt_at = None
         reason = outcome.reason
         if reason != "limit" or state.cycle >= limit:
             break
-        if watch and watch(state.cycle):
+        passed = perf_counter() - began
+        ahead = 2 * ahead if passed < SHORT / 2 else max(SLICE, ahead // 2) if passed > SHORT else ahead
+        if stopped or look(state.cycle):
             reason = "stopped"
             break
     return Simulation(

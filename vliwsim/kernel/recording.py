@@ -16,6 +16,7 @@ import numpy as np
 from vliwsim.kernel.elements import Element, convert, rounding_note, scaling_note
 from vliwsim.problems import InterfaceError, Problem, SourceError, problem
 from vliwsim.program.kernel import Formula
+from vliwsim.program.source.expressions import formula as parsed
 
 BLOCK = 1 << 20
 """Values that are looked at together before anything runs."""
@@ -97,11 +98,7 @@ class Computed:
     def frames(self, first: int, last: int) -> np.ndarray:
         values = []
         for frame in range(first, last):
-            try:
-                value = self.formula.value({**self.names, NUMBER: frame})
-            except SourceError as error:
-                said = [attrs.evolve(p, found=f"{self.name} of frame {frame}: {p.found}") for p in error.problems]
-                raise InterfaceError(said) from None
+            value = value_of(f"{self.name} of frame {frame}", self.formula, {**self.names, NUMBER: frame})
             converted = convert(self.element, int(value) if isinstance(value, bool) else value, self.name)
             if converted.array is None:
                 raise InterfaceError([attrs.evolve(p, found=f"frame {frame}: {p.found}") for p in converted.problems])
@@ -145,6 +142,26 @@ def _first(
     where = first + low
     place = f"{name}[{where}]" if len(shape) == 1 else f"{name}[{where // shape[1]}, {where % shape[1]}]"
     return list(convert(element, block[low], place).problems or problems)
+
+
+def expression(what: str, text: str) -> Formula:
+    """An expression that somebody gives; raises :class:`~vliwsim.problems.InterfaceError` where it is none."""
+    try:
+        return parsed(text)
+    except SourceError as error:
+        raise InterfaceError(_said_of(what, error)) from None
+
+
+def value_of(what: str, formula: Formula, names: Mapping[str, Any]) -> Any:
+    """The value of an expression that somebody gave."""
+    try:
+        return formula.value(names)
+    except SourceError as error:
+        raise InterfaceError(_said_of(what, error)) from None
+
+
+def _said_of(what: str, error: SourceError) -> list[Problem]:
+    return [attrs.evolve(p, found=f"{what}: {p.found}", place=None, excerpt="") for p in error.problems]
 
 
 def whole_number(what: str, value: object, least: int) -> int:

@@ -136,7 +136,7 @@ class Native:
         machine.advance(state, min(until, state.cycle + 1))
         self.alone += 1
         if self.alone > self.patience and self.translate(state) is None and len(self.regions) >= MOST_REGIONS:
-            machine.advance(state, min(until, state.cycle + (1 << 16)))
+            machine.advance(state, min(until, state.cycle + (1 << 13)))
 
     def leap(self, state: State, until: int, most: int = FOREVER) -> bool:
         """Run machine code from here if there is some; whether time has passed."""
@@ -161,26 +161,27 @@ class Native:
         *,
         limit: int | None = None,
         interrupt_at: int | None = None,
-        progress: Callable[[int], None] | None = None,
+        progress: Callable[[int], bool | None] | None = None,
     ) -> Outcome:
-        """As :meth:`vliwsim.machine.stepper.Machine.run`."""
+        """As :meth:`vliwsim.machine.stepper.Machine.run`; ``progress`` may end it there by returning true."""
         machine = self.machine
         if interrupt_at is not None:
             state.interrupt_at = interrupt_at
         end = FOREVER if limit is None else limit
-        slice_, seen = FIRST_SLICE, state.cycle
+        slice_, seen = FIRST_SLICE, perf_counter()
         try:
             while not state.finished and state.cycle < end:
                 began = perf_counter()
                 self.go_on(state, end, slice_)
-                passed = perf_counter() - began
-                if passed < SHORT:
+                now = perf_counter()
+                if now - began < SHORT:
                     slice_ *= 2
-                elif passed > 2 * SHORT:
+                elif now - began > 2 * SHORT:
                     slice_ = max(FIRST_SLICE, slice_ // 2)
-                if progress and state.cycle - seen >= FIRST_SLICE:
-                    seen = state.cycle
-                    progress(seen)
+                if progress and now - seen >= SHORT:
+                    seen = now
+                    if progress(state.cycle):
+                        return machine.outcome(state, "limit")
         except HazardMet as met:
             return machine.stopped_by(state, met.hazard)
         return machine.run(state, limit=end)
