@@ -13,7 +13,6 @@ from functools import cached_property
 from random import Random
 from typing import Any
 
-import attrs
 import numpy as np
 
 from vliwsim.check.judge import check_kernel
@@ -158,23 +157,23 @@ def neighbours(core: Core, instruction: Instruction) -> Iterator[Instruction]:
 
     def with_place(k: int, place: Place) -> Instruction:
         places = (*instruction.places[:k], place, *instruction.places[k + 1 :])
-        return attrs.evolve(instruction, places=places)
+        return instruction._replace(places=places)
 
     for step in (-1, 1):
         for k, (operand, place) in enumerate(zip(instruction.operation.operands, instruction.places, strict=True)):
             if isinstance(place, Register):
                 other = moved(place.number, 2 * step if operand.pair else step)
                 if other is not None:
-                    yield with_place(k, attrs.evolve(place, number=other))
+                    yield with_place(k, place._replace(number=other))
             elif isinstance(place, Address):
                 if (base := moved(place.base, step)) is not None:
-                    yield with_place(k, attrs.evolve(place, base=base))
+                    yield with_place(k, place._replace(base=base))
                 if isinstance(place.step, Register) and (other := moved(place.step.number, step)) is not None:
-                    yield with_place(k, attrs.evolve(place, step=attrs.evolve(place.step, number=other)))
+                    yield with_place(k, place._replace(step=place.step._replace(number=other)))
             else:
                 assert isinstance(place, Immediate)
         if instruction.guard and (other := moved(instruction.guard.register, step)) is not None:
-            yield attrs.evolve(instruction, guard=attrs.evolve(instruction.guard, register=other))
+            yield instruction._replace(guard=instruction.guard._replace(register=other))
 
 
 class Court:

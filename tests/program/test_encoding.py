@@ -21,7 +21,7 @@ from .encoding_samples import BY_NAME, CORES, HALT, OPERATIONS, PLAIN, add, core
 def resolved(instruction: Instruction, labels: dict[str, int]) -> Instruction:
     """The instruction with labels replaced by addresses."""
     places = tuple(Immediate(labels[p.name]) if isinstance(p, Label) else p for p in instruction.places)
-    return attrs.evolve(instruction, places=places)
+    return instruction._replace(places=places)
 
 
 def again(on: Core, program: Program) -> Image:

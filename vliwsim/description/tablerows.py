@@ -24,7 +24,7 @@ _REQUIRED = ("code", "class", "operands", "does", "summary")
 _LATENCY_ONLY = ("update", "branch", "otherwise")
 
 
-@attrs.define(eq=False)
+@attrs.define(eq=False, repr=False)
 class TableFile:
     """One file: its ``text`` with plain newlines, its rows once known, the ``class`` of rows that name none."""
 
@@ -44,7 +44,7 @@ class TableFile:
         return next(itertools.islice(self.text.split("\n"), number - 1, None), "")
 
 
-@attrs.define(eq=False)
+@attrs.define(eq=False, repr=False)
 class Row:
     """One operation of a file, perhaps not yet built. ``start`` to ``end``: its part of the text, the header first.
 

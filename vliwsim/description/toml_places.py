@@ -6,7 +6,6 @@ key path is a tuple: names of tables and keys, and for elements of an array thei
 
 from __future__ import annotations
 
-import difflib
 import re
 import tomllib
 from bisect import bisect_right
@@ -77,6 +76,8 @@ def listed(words: Iterable[object], most: int = 12) -> str:
 
 def nearest(word: str, known: Iterable[str]) -> str:
     """The known word most like ``word``, or ``""`` where none is."""
+    import difflib  # for mistakes only
+
     found = difflib.get_close_matches(word[:80], list(known), n=1, cutoff=0.55)
     return found[0] if found else ""
 

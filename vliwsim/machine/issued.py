@@ -12,7 +12,7 @@ from vliwsim.machine.memory import Touch
 from vliwsim.machine.state import Batch, NoteSite, State
 
 
-@attrs.define
+@attrs.define(eq=False, repr=False)
 class Issued:
     """What a bundle does in its issue beat, not yet done: results by landing distance, stores, branches, freezes."""
 

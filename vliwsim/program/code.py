@@ -17,8 +17,7 @@ from vliwsim.description.core import Core
 from vliwsim.description.operations import Operation, Role
 
 
-@attrs.frozen
-class Register:
+class Register(NamedTuple):
     """A register operand: its number in the core, and for a half operand which half (0 low, 1 high).
 
     A pair is named by its even register.
@@ -51,8 +50,7 @@ class Mode(enum.Enum):
     BEFORE = "before"  # [+step then base]: base becomes base + step, and that is the address
 
 
-@attrs.frozen
-class Address:
+class Address(NamedTuple):
     """An address operand. ``ring`` is the size in bytes of a power-of-two ring (AFTER only), 0 for none.
 
     In a ring of N bytes the base becomes ``base & ~(N - 1) | (base + step) & (N - 1)``.
@@ -67,16 +65,14 @@ class Address:
 Place = Register | Immediate | Address | Label
 
 
-@attrs.frozen
-class Guard:
+class Guard(NamedTuple):
     """On when the register is not 0, or with ``negated`` when it is 0."""
 
     register: int
     negated: bool = False
 
 
-@attrs.frozen
-class Instruction:
+class Instruction(NamedTuple):
     """One operation in a bundle: its slot index in the core, guard, and one place an operand of the operation.
 
     ``targets``: of a branch to a register, the only places it may go to, where the source names them; in decoded code

@@ -42,7 +42,7 @@ def parse(operands: Sequence[Operand], text: str) -> Parsed:
         raise Faults([fault]) from None
 
 
-@attrs.define
+@attrs.define(eq=False, repr=False)
 class _Target:
     """What an assignment writes: ``lanes`` is None for a whole value, or the lanes written."""
 

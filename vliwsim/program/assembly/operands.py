@@ -32,7 +32,7 @@ _SUM = re.compile(r"\s*([A-Za-z_][\w.]*(?:\{[^}]*\})?)\s*([-+].*)?\Z")
 _WRITTEN = (Role.RESULT, Role.INOUT, Role.STICKY)
 
 
-@attrs.define(eq=False)
+@attrs.define(eq=False, repr=False)
 class Ready:
     """An operation with its places found, not yet in a slot. ``pin``: the slot index it asks for.
 

@@ -21,7 +21,7 @@ MOST_STEPS = 1 << 16
 _NAMES = re.compile(r"[A-Za-z_]\w*")
 
 
-@attrs.define
+@attrs.define(eq=False, repr=False)
 class Section:
     """A labelled stretch: its operations by beat, and its length in beats."""
 

@@ -8,8 +8,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 
-import attrs
-
 from vliwsim.description.core import Core
 from vliwsim.description.operations import Kind, Operation, OperationSet, Role
 from vliwsim.problems import ImageError, Problem, problem
@@ -197,7 +195,7 @@ class _Decoder:
             return instruction
         named = self.named.pop(byte)
         self.targets += [(at, place.value) for place in named]
-        return attrs.evolve(instruction, targets=named)
+        return instruction._replace(targets=named)
 
     def _instruction(self, at: int, word: int, extension: int | None) -> Instruction | None:
         """The instruction of a word not met before; None, with all complaints, when it is bad."""

@@ -29,7 +29,7 @@ MOST_CODE_BYTES = 1 << 24
 """The largest code, in bytes: well inside what an image file may have."""
 
 
-@attrs.define
+@attrs.define(eq=False, repr=False)
 class _Word:
     """An operation word on its way: ``value`` in the field ``short`` or, ``extended``, in the next word."""
 

@@ -80,7 +80,7 @@ class ItemLine(NamedTuple):
     line: Piece
 
 
-@attrs.define
+@attrs.define(eq=False, repr=False)
 class Tree:
     """A parsed source file."""
 
