@@ -68,6 +68,11 @@ class Ahead(Variables):
         self.put(f"store i64 {self.let(f'sub i64 {fuel}, {passes}')}, ptr %fuel")
         for name in ("left", "allotted"):
             self.put(f"store i64 {passes}, ptr {self.variable(name)}")
+        for register in sorted(self.strip_registers[self.region.copy[k]]):
+            bits, mask = self.held_before(register)
+            self.put(f"store i32 {bits}, ptr {self.variable(f's{register}', 'i32')}")
+            if self.masked(register):
+                self.put(f"store i1 {mask or 'false'}, ptr {self.variable(f'm{register}', 'i1')}")
         self.put(f"br label %c{self.region.copy[k]}")
         self.block(f"judged{k}")
         self.slots = {}  # what was loaded on one way here is not known on the other
@@ -130,7 +135,13 @@ class Ahead(Variables):
         self.put(f"store i64 {self.let(f'sub i64 {left}, 1')}, ptr {self.variable('left')}")
 
     def count_strip(self, k: int) -> None:
-        """Count the passes of the strip that ends, and give back those that were not run."""
+        """Count the passes of the strip that ends, give back those that were not run, and write the registers."""
+        for register in sorted(self.copied):
+            held = self.held_before(register)
+            self.put(f"store i32 {held.bits}, ptr %r{register}")
+            if self.masked(register):
+                missing = self.select(held.mask, "i8", "15", "0") if held.mask else "0"
+                self.put(f"store i8 {missing}, ptr %u{register}")
         left, allotted = self.count_of("left"), self.count_of("allotted")
         self.add_to_chain(k, self.let(f"sub i64 {allotted}, {left}"))
         fuel = self.let("load i64, ptr %fuel")

@@ -36,11 +36,8 @@ class Landing(Variables):
             if register in self.zero:
                 continue
             value = self.now[register]
-            kind, none = ("i8", "0") if self.following else ("i1", "false")
-            self.put(f"store i32 {value.bits}, ptr %r{register}")
+            self.put_register(register, value)
             self.put(f"store i32 {value.bits}, ptr {self.value_slot(flight.number, 0)}")
-            if self.masked(register):
-                self.put(f"store {kind} {value.mask or none}, ptr %u{register}")
             if self.following:
                 self.put(f"store i8 {value.mask or '0'}, ptr {self.mask_slot(flight.number, 0)}")
 

@@ -163,7 +163,7 @@ class Loaded:
         state.flight = {}
         sites = self.machine.ready.sites
         for j, flight in enumerate(context.flights):
-            if self.value_on[j]:
+            if flight.sure or self.value_on[j]:
                 lands = state.beat + flight.beats
                 value = value_of(int(self.values[j]), int(self.value_masks[j]))
                 state.flight.setdefault(lands, []).append(((flight.number,), (value,)))
@@ -174,7 +174,7 @@ class Loaded:
         state.last_branch = NEVER
         for j, turn in enumerate(context.turns):
             state.last_branch = max(state.last_branch, state.issue + turn.bundles - latency)
-            if self.turn_on[j]:
+            if turn.sure or self.turn_on[j]:
                 target = self.machine.ready[turn.bundle].parts[turn.part].target
                 state.redirects[state.issue + turn.bundles] = target
         state.busy_until = [0] * len(state.busy_until)

@@ -107,10 +107,6 @@ class Redirecting(Landing, Executing):
         for register in dict.fromkeys(touched):
             if register in self.zero:
                 continue
-            value = self.now[register]
-            self.put(f"store i32 {value.bits}, ptr %r{register}")
-            if self.masked(register):
-                kind, none = ("i8", "0") if self.following else ("i1", "false")
-                self.put(f"store {kind} {value.mask or none}, ptr %u{register}")
+            self.put_register(register, self.now[register])
         self.halted(last)
         self.now, self.slots = kept

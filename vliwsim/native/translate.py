@@ -113,24 +113,16 @@ class Translation(Ahead, Beats):
                 self.put(f"store {kind} {FIRST if variable.startswith('%reach') else 0}, ptr {variable}")
         for cause in STALLS:
             self.put(f"store i64 0, ptr %stall.{cause}")
-        mask = "i8" if self.following else "i1"
         for register in range(len(self.core.register_names)):
-            own = f"%r{register}" in self.variables
-            if not own and register not in self.read:
-                continue
-            value = self.place(at.registers + 4 * register)
-            target = self.name() if own else f"%k{register}"
-            self.put(f"{target} = load i32, ptr {value}")
-            if own:
-                self.put(f"store i32 {target}, ptr %r{register}")
-            if self.masked(register):
-                missing = self.let(f"load i8, ptr {self.place(at.masks + register)}")
-                if not self.following:
-                    missing = self.compare("ne", "i8", missing, "0")
-                if own:
-                    self.put(f"store {mask} {missing}, ptr %u{register}")
-                else:
-                    self.put(f"%q{register} = or {mask} {missing}, {missing}")
+            value, mask = at.registers + 4 * register, at.masks + register
+            if register in self.landing_registers:
+                self.put(f"%r{register} = getelementptr inbounds i8, ptr %io, i64 {value}")
+                self.put(f"%u{register} = getelementptr inbounds i8, ptr %io, i64 {mask}")
+            elif register in self.read:
+                self.put(f"%k{register} = load i32, ptr {self.place(value)}")
+                missing = self.let(f"load i8, ptr {self.place(mask)}")
+                same = f"or i8 {missing}, {missing}" if self.following else f"icmp ne i8 {missing}, 0"
+                self.put(f"%q{register} = {same}")
         self.put(f"%at = load i64, ptr {self.header(CONTEXT)}")
         ways = " ".join(f"i64 {k}, label %enter{k}" for k in self.entries)
         self.put(f"switch i64 %at, label %nowhere [{ways}]")
@@ -140,8 +132,8 @@ class Translation(Ahead, Beats):
             self.block(f"enter{k}")
             context = self.region.steps[k].context
             for j, flight in enumerate(context.flights):
-                value = self.let(f"load i32, ptr {self.place(at.values + 4 * j)}")
-                self.put(f"store i32 {value}, ptr {self.value_slot(flight.number, flight.beats)}")
+                bits = self.let(f"load i32, ptr {self.place(at.values + 4 * j)}")
+                self.put(f"store i32 {bits}, ptr {self.value_slot(flight.number, flight.beats)}")
                 if self.following:
                     missing = self.let(f"load i8, ptr {self.place(at.value_masks + j)}")
                     self.put(f"store i8 {missing}, ptr {self.mask_slot(flight.number, flight.beats)}")
@@ -194,7 +186,7 @@ class Translation(Ahead, Beats):
         self.put(f"store i64 {self.let(f'sub i64 {fuel}, 1')}, ptr %fuel")
 
     def give_back(self, k: int, context: Context) -> None:
-        """The block that hands a context's flights and turns over."""
+        """The block that hands a context's flights and turns over; of those that are sure only the values."""
         at = self.layout
         self.block(f"give{k}")
         self.put(f"store i64 {k}, ptr {self.header(CONTEXT)}")
@@ -204,35 +196,20 @@ class Translation(Ahead, Beats):
             if self.following:
                 missing = self.let(f"load i8, ptr {self.mask_slot(flight.number, flight.beats)}")
                 self.put(f"store i8 {missing}, ptr {self.place(at.value_masks + j)}")
-            else:
-                self.put(f"store i8 0, ptr {self.place(at.value_masks + j)}")
-            on = "1"
             if not flight.sure:
                 on = self.let(f"load i1, ptr {self.on_slot(flight.number, flight.beats)}")
                 on = self.let(f"zext i1 {on} to i8")
-            self.put(f"store i8 {on}, ptr {self.place(at.value_on + j)}")
+                self.put(f"store i8 {on}, ptr {self.place(at.value_on + j)}")
         for j, turn in enumerate(context.turns):
-            on = "1"
             if not turn.sure:
                 on = self.let(f"load i1, ptr {self.turn_slot(turn)}")
                 on = self.let(f"zext i1 {on} to i8")
-            self.put(f"store i8 {on}, ptr {self.place(at.turn_on + j)}")
+                self.put(f"store i8 {on}, ptr {self.place(at.turn_on + j)}")
         self.put("br label %out")
 
     def leave(self) -> None:
-        """The end of the function: registers, fuel and stalls are handed over."""
-        at = self.layout
+        """The end of the function: fuel and stalls are handed over."""
         self.block("out")
-        for register in range(len(self.core.register_names)):
-            if f"%r{register}" not in self.variables:
-                continue
-            value = self.let(f"load i32, ptr %r{register}")
-            self.put(f"store i32 {value}, ptr {self.place(at.registers + 4 * register)}")
-            if self.masked(register):
-                missing = self.let(f"load {'i8' if self.following else 'i1'}, ptr %u{register}")
-                if not self.following:
-                    missing = self.select(missing, "i8", "15", "0")
-                self.put(f"store i8 {missing}, ptr {self.place(at.masks + register)}")
         self.put(f"store i64 {self.let('load i64, ptr %fuel')}, ptr {self.header(FUEL)}")
         for cause, number in STALLS.items():
             value = self.let(f"load i64, ptr %stall.{cause}")

@@ -6,6 +6,7 @@ result in flight has a variable for each beat it may still have to go.
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import NamedTuple
 
 from vliwsim.description.operations import Operation
@@ -57,10 +58,8 @@ class Variables(Text):
             undefined |= may
         self.ever_undefined = undefined
         self.variables: dict[str, str] = {"%fuel": "i64", **{f"%stall.{c}": "i64" for c in STALLS}}
-        for register in sorted(self.landing_registers):
-            self.variables[f"%r{register}"] = "i32"
-            if self.masked(register):
-                self.variables[f"%u{register}"] = "i8" if following else "i1"
+        self.copied: frozenset[int] = frozenset()
+        self.strip_registers = {region.copy[head]: self.written(strip.cycle) for head, strip in region.strips.items()}
         self.read: set[int] = set()
         self.used: set[str] = set()
         self.functions: dict[tuple[Operation, Halves, bool], str] = {}
@@ -70,6 +69,11 @@ class Variables(Text):
     def masked(self, register: int) -> bool:
         """Whether a register has undefined bytes to look after."""
         return self.following or bool(self.ever_undefined >> register & 1)
+
+    def written(self, contexts: Iterable[int]) -> frozenset[int]:
+        """Registers in which something lands in these contexts."""
+        due = (flight for k in contexts for flight in self.region.steps[k].due)
+        return frozenset(self.walker.register(flight) for flight in due) - self.zero
 
     def value_slot(self, n: int, beats: int) -> str:
         self.variables[f"%f{n}.{beats}"] = "i32"
@@ -99,6 +103,7 @@ class Variables(Text):
         self.slots: dict[tuple[int, int], tuple[Held, str | None]] = {}
         self.doubts: list[str] = []
         self.strip = self.region.chain[k] if k >= self.region.own else None
+        self.copied = self.strip_registers[self.strip] if self.strip is not None else frozenset()
         self.ways_out: dict[str, str] = {}
         self.block(f"c{k}")
 
@@ -113,13 +118,41 @@ class Variables(Text):
         """What a register holds at the start of the beat."""
         if register in self.zero:
             return Held("0")
-        self.read.add(register)
-        undefined = self.following or self.region.may[self.k] >> register & 1
-        kind = "i8" if self.following else "i1"
+        undefined = self.following or bool(self.region.may[self.k] >> register & 1)
         if register not in self.landing_registers:
+            self.read.add(register)
             return Held(f"%k{register}", f"%q{register}" if undefined else None)
-        value = self.let(f"load i32, ptr %r{register}")
-        return Held(value, self.let(f"load {kind}, ptr %u{register}") if undefined else None)
+        value, mask = self.register_places(register)
+        bits = self.let(f"load i32, ptr {value}")
+        if not undefined or mask is None:
+            return Held(bits)
+        if register in self.copied:
+            return Held(bits, self.let(f"load i1, ptr {mask}"))
+        bytes_ = self.let(f"load i8, ptr {mask}")
+        return Held(bits, bytes_ if self.following else self.compare("ne", "i8", bytes_, "0"))
+
+    def register_places(self, register: int) -> tuple[str, str | None]:
+        """Where a register's value and its undefined bytes (None: it has none) are kept.
+
+        In a strip, those that the loop writes are variables; all others stand in the block of hand-over all the time,
+        so that nothing need be done with them at the many ways out.
+        """
+        value, mask = ("%s", "%m") if register in self.copied else ("%r", "%u")
+        return f"{value}{register}", f"{mask}{register}" if self.masked(register) else None
+
+    def put_register(self, register: int, held: Held) -> None:
+        """Let a register hold a value."""
+        value, mask = self.register_places(register)
+        self.put(f"store i32 {held.bits}, ptr {value}")
+        if mask is None:
+            return
+        if register in self.copied:
+            self.put(f"store i1 {held.mask or 'false'}, ptr {mask}")
+        else:
+            missing = held.mask or "0"
+            if held.mask is not None and not self.following:
+                missing = self.select(held.mask, "i8", "15", "0")
+            self.put(f"store i8 {missing}, ptr {mask}")
 
     def flown(self, flight: Flight) -> tuple[Held, str | None]:
         """The value of a flight of the context, and its bit (None: it is sure)."""
