@@ -286,6 +286,30 @@ def test_targets() -> None:
     assert (call.guard.register, call.guard.negated) == (40, False)
 
 
+def test_labels_behind_to_are_the_only_targets() -> None:
+    built = kernel("@0 jump g3 to last, middle if g20 on g.flow\nmiddle:\n@0 idle\nlast:\n@0 halt")
+    jump, _ = instructions(built)
+    labels = built.program.labels
+    assert jump.targets == (Immediate(labels["middle"]), Immediate(labels["last"]))
+    assert jump.guard
+    assert lines(built)[0] == "start@0  jump g3 if g20 to middle, last on g.flow"
+
+
+def test_a_label_is_a_number_where_one_of_32_bits_may_stand() -> None:
+    built = kernel("@0 li g3, far ; add h3, h4, far ; sw h5, [h6]\n@1 idle\nfar:\n@0 halt\nlet n = 3\nn:\n@0 li g3, n")
+    li, add, _, _, number = instructions(built)
+    assert li.places[1] == add.places[2] == Immediate(built.program.labels["far"])
+    assert number.places[1] == Immediate(3)  # the let name, as before
+
+
+def test_the_address_of_a_label_far_away_is_its_final_one() -> None:
+    """An address that no longer fits short moves what is behind it."""
+    many = "\n".join(f"@{k} li g4, {1 << 30} ; li h4, {1 << 30} ; add g5, g6, {1 << 30}" for k in range(3000))
+    built = kernel(f"@0 li g3, far ; mul.half h5, h6.lo, h6.hi\nnear:\n{many}\nfar:\n@0 halt")
+    assert built.program.labels["far"] > 1 << 16
+    assert instructions(built)[0].places[1] == Immediate(built.program.labels["far"])
+
+
 # Interface
 
 

@@ -12,6 +12,7 @@ from tests.kernel.sources import SUM
 from tests.robustness.rows_cores import SMALL
 from tests.robustness.workshop import Content, Row, a_folder, a_pipe
 from vliwsim.kernel.loading import assemble_source
+from vliwsim.program.assembler import assemble
 from vliwsim.program.encoding.image import MAGIC
 
 
@@ -33,6 +34,14 @@ def parts(image: bytes) -> tuple[dict[str, object], bytes]:
     """The header and the code of an image."""
     end = image.index(b"\n", len(MAGIC))
     return json.loads(image[len(MAGIC) : end]), image[end + 1 : -32]
+
+
+def with_target(address: int) -> bytes:
+    """A good image whose branch to a register names another address."""
+    text = "kernel back\ncore pair7\nstart:\n@0 jump g3 to start\n@1 halt\n"
+    header, words = parts(assemble("back.vliw", text=text).image)
+    line = json.dumps({**header, "targets": {"0": [address]}}, sort_keys=True, separators=(",", ":"))
+    return sealed(MAGIC + line.encode() + b"\n" + words)
 
 
 def with_header(**changes: object) -> bytes:
@@ -82,6 +91,12 @@ def rows() -> list[Row]:
         refused("words counted in text", "damaged-image", with_header(words="12")),
         refused("labels that are no table", "damaged-image", with_header(labels=[1, 2])),
         refused("a label far outside", "label-nowhere", with_header(labels={"start": 1 << 40})),
+        refused("targets of no branch", "targets-of-nothing", with_header(targets={"0": [0]})),
+        refused("targets that are no table", "damaged-image", with_header(targets=[1])),
+        refused("an empty table of targets", "damaged-image", with_header(targets={})),
+        refused("targets out of order", "damaged-image", with_header(targets={"0": [8, 0]})),
+        refused("targets of a place in words", "damaged-image", with_header(targets={"first": [0]})),
+        refused("a target far outside", "target-nowhere", with_target(1 << 40)),
         refused("a label with a line break", "damaged-image", with_header(labels={"start:\n@0 halt": 0})),
         refused("a digest that is none", "damaged-image", with_header(digest=7)),
         refused("another digest", "other-core", with_header(digest="0" * 64)),
