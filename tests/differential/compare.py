@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import fields, replace
 
 from . import model, real
 from .generator import Trial
@@ -38,21 +38,17 @@ def differences(trial: Trial, *engines: str) -> list[str]:
         if "native" in more and wanted.stop != "limit":
             run["limit"] = 1 << 30  # near a limit the fast engine leaves all to the stepper
         got = plainly(real.run(trial.core, trial.program, trial.registers, trial.regions, **run, **more))
-        for field in (
-            "stop",
-            "hazard",
-            "cycles",
-            "bundles",
-            "stalls",
-            "drain",
-            "registers",
-            "memory",
-            "warnings",
-            "log",
-        ):
-            one, other = getattr(wanted, field), getattr(got, field)
-            if field == "log" and ("log" not in more or wanted.stop == "limit"):
-                continue
-            if one != other:
-                found.append(f"{name}: {field}: model {one!r}, engine {other!r}")
+        if "log" not in more or wanted.stop == "limit":
+            got = replace(got, log=wanted.log)
+        found += [f"{name}: {line}" for line in between(wanted, got)]
+    return found
+
+
+def between(wanted: Outcome, got: Outcome) -> list[str]:
+    """What differs between two outcomes, both with their warnings as :func:`plainly` has them, field by field."""
+    found = []
+    for field in fields(Outcome):
+        one, other = getattr(wanted, field.name), getattr(got, field.name)
+        if one != other:
+            found.append(f"{field.name}: model {one!r}, engine {other!r}")
     return found

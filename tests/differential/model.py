@@ -93,6 +93,9 @@ class Machine:
         self.link_of = {(link.source, link.reader): link for link in core.links}
         self.index_at = {bundle.address: k for k, bundle in enumerate(program)}
         self.address_at = {bundle.position: bundle.address for bundle in program}
+        # What an operation names is asked for again and again: kept by the operation, which the program holds.
+        self.known_reads: dict[int, list[tuple[str, int]]] = {}
+        self.known_writes: dict[int, list[tuple[int, bool, int]]] = {}
         # "registers and memory start with it": undefined.
         self.registers = [UNDEFINED] * len(self.cluster_of)
         for number, value in registers.items():
@@ -121,6 +124,7 @@ class Machine:
         self.fresh_waited = False
         self.beat_cycle = 0  # the cycle at which this beat begins
         self.bundles = self.drain_cycles = 0
+        self.counts = [0] * len(program)
         self.stalls = dict.fromkeys(CAUSES, 0)
         self.warnings: list[tuple[int, int, int]] = []
         self.log: list[Passed] | None = [] if log else None
@@ -147,7 +151,7 @@ class Machine:
         assert self.cycle == self.bundles + sum(self.stalls.values()) + self.drain_cycles
         return Outcome(
             stop, self.cycle, self.bundles, self.stalls, self.drain_cycles, tuple(self.registers), memory, hazard,
-            tuple(dict.fromkeys(self.warnings)), tuple(self.log or ()),
+            tuple(dict.fromkeys(self.warnings)), tuple(self.log or ()), tuple(self.counts),
         )  # fmt: skip
 
     def pass_cycles(self, what: str, count: int = 1) -> None:
@@ -156,6 +160,7 @@ class Machine:
             self.cycle += 1
             if what == "bundle":
                 self.bundles += 1
+                self.counts[self.place] += 1
             elif what == "drain":
                 self.drain_cycles += 1
             else:
@@ -217,6 +222,8 @@ class Machine:
 
     def operands_read(self, operation: PlainOperation) -> list[tuple[str, int]]:
         """(operand name, register) of every register an operation reads; guards are on wires of their own."""
+        if id(operation) in self.known_reads:
+            return self.known_reads[id(operation)]
         read = []
         for name in self.meaning(operation).sources:
             operand = operation.operands[name]
@@ -227,10 +234,13 @@ class Machine:
             read.append(("base", address.base))
             if isinstance(address.step, Reg):
                 read.append(("step", address.step.number))
+        self.known_reads[id(operation)] = read
         return read
 
     def written(self, operation: PlainOperation) -> list[tuple[int, bool, int]]:
         """(register, is it sticky, latency) of every result, updated base and `count` register it names."""
+        if id(operation) in self.known_writes:
+            return self.known_writes[id(operation)]
         meaning, found = self.meaning(operation), []
         latency, update = self.latency(operation), self.update_latency()
         for name in meaning.results:
@@ -243,6 +253,7 @@ class Machine:
             found.append((address.base, False, update))
         if meaning.kind == "count":
             found.append((operation.operands["r"].number, False, update))
+        self.known_writes[id(operation)] = found
         return found
 
     def latency(self, operation: PlainOperation) -> int:

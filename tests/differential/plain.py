@@ -198,3 +198,5 @@ class Outcome:
     warnings: tuple[tuple[int, int, int], ...] = ()
     """Early reads on a core that warns: (beat, bundle, register), each once."""
     log: tuple[Passed, ...] = ()
+    counts: tuple[int, ...] = ()
+    """Of every bundle of the program, the beats it issued in."""

@@ -6,9 +6,9 @@ own business.
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from contextlib import suppress
-from functools import lru_cache
+from functools import lru_cache, partial
 
 from vliwsim.description import core as description
 from vliwsim.description.core import Core
@@ -127,20 +127,36 @@ def run(
     ``native``: with the fast engine, which translates from the first cycle on and again wherever it is left alone;
     ``following``: undefined bytes too.
     """
-    real = core_of(core)
-    machine = Machine(program_of(real, program), careful=careful)
-    regions = tuple(regions)
-    state = start(machine, registers or {}, regions)
-    state.interrupt_at = interrupt_at
+    machine = machine_of(core, program, careful)
+    advance = machine.advance
+    if native:
+        advance = Native(machine, patience=3, effort=0, following=following).advance
     passed: list[Passed] = []
+    if log or snapshots:
+        advance = partial(by_cycles, machine, passed, snapshots)
+    outcome, _ = finish(machine, advance, registers or {}, tuple(regions), interrupt_at, limit, passed if log else None)
+    return outcome
+
+
+def machine_of(core: PlainCore, program: Iterable[PlainBundle], careful: bool = False) -> Machine:
+    return Machine(program_of(core_of(core), program), careful=careful)
+
+
+def finish(
+    machine: Machine,
+    advance: Callable[[State, int], None],
+    registers: Mapping[int, Value | int],
+    regions: tuple[PlainRegion, ...],
+    interrupt_at: int | None,
+    limit: int,
+    passed: list[Passed] | None = None,
+) -> tuple[Outcome, State]:
+    """A run from these data on by ``advance(state, until)``, and the state it ended in. ``passed``: the log."""
+    state = start(machine, registers, regions)
+    state.interrupt_at = interrupt_at
     hazard = None
     try:
-        if log or snapshots:
-            by_cycles(machine, state, limit, passed, snapshots)
-        elif native:
-            Native(machine, patience=3, effort=0, following=following).advance(state, limit)
-        else:
-            machine.advance(state, limit)
+        advance(state, limit)
         if state.halt_beat is not None:  # the model's limit does not cut a drain short
             machine.advance(state)
     except HazardMet as met:
@@ -148,9 +164,9 @@ def run(
         hazard = Hazard(found.name, found.beat, found.cycle, found.bundle)
         before = dict(state.stalls)
         machine._thaw(state, 1 << 62)
-        for cause in CAUSES:
+        for cause in CAUSES if passed is not None else ():
             passed += [Passed(cause, state.at, values_of(machine, state))] * (state.stalls[cause] - before[cause])
-    return outcome_of(machine, state, regions, hazard, passed if log else [])
+    return outcome_of(machine, state, regions, hazard, passed or []), state
 
 
 def start(machine: Machine, registers: Mapping[int, Value | int], regions: tuple[PlainRegion, ...]) -> State:
@@ -163,7 +179,7 @@ def start(machine: Machine, registers: Mapping[int, Value | int], regions: tuple
     return state
 
 
-def by_cycles(machine: Machine, state: State, limit: int, passed: list[Passed], snapshots: bool) -> None:
+def by_cycles(machine: Machine, passed: list[Passed], snapshots: bool, state: State, limit: int) -> None:
     """Run a cycle at a time, logging each."""
     issued = 0  # where the bundle stands that a bank conflict, a wait state or a fresh operand freezes
     while not state.finished and state.cycle < limit:
@@ -212,4 +228,16 @@ def outcome_of(
     early = [(beat, site.bundle, site.register) for site, beat in state.notes.items() if site.name == "early-read"]
     warnings = tuple(sorted((beat, bundle, register) for beat, bundle, register in early if register is not None))
     stop = "hazard" if hazard else "halt" if state.finished else "limit"
-    return Outcome(stop, cycles, bundles, stalls, state.drain, registers, memory, hazard, warnings, tuple(passed))
+    return Outcome(
+        stop,
+        cycles,
+        bundles,
+        stalls,
+        state.drain,
+        registers,
+        memory,
+        hazard,
+        warnings,
+        tuple(passed),
+        tuple(state.counts),
+    )
