@@ -6,7 +6,7 @@ from hypothesis import strategies as st
 
 from vliwsim.description.core import Cluster, Core, Latency, Slot, Words
 from vliwsim.description.operations import Access, Kind, Operand, Operation, OperationSet, Role
-from vliwsim.program.code import Address, Guard, Immediate, Instruction, Label, Mode, Place, Register
+from vliwsim.program.code import Address, Guard, Immediate, Instruction, Label, Mode, Place, Register, indirect
 from vliwsim.program.encoding.decode import named_twice
 from vliwsim.program.encoding.layout import constant_limits, may_be_immediate, takes_immediate
 
@@ -129,6 +129,9 @@ def instructions(draw: st.DrawFn, on: Core, labels: list[str], of: OperationSet)
         free = free and not immediate
     guard = Guard(draw(registers), draw(st.booleans())) if draw(st.booleans()) else None
     found = Instruction(chosen, draw(st.integers(0, len(on.slots) - 1)), tuple(places), guard)
+    if indirect(found) is not None and draw(st.booleans()):
+        named = draw(st.lists(st.sampled_from(labels), min_size=1, unique=True))
+        found = found._replace(targets=tuple(Label(name) for name in named))
     return found if named_twice(chosen, found.places) is None else Instruction(of.by_name["halt"], 0, ())
 
 

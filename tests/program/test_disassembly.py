@@ -159,6 +159,7 @@ def check_back(on: Core, of: OperationSet, drafts: list, labels: dict[str, int])
     text = disassemble(decode(on, of, image))
     once = assembled(on, text, of)
     assert once.words == image.words
+    assert once.targets == image.targets
     assert labels.keys() <= once.labels.keys()
     # What an assembler has made comes back whole, labels included.
     assert disassemble(decode(on, of, once)) == text

@@ -19,9 +19,10 @@ from .encoding_samples import BY_NAME, CORES, HALT, OPERATIONS, PLAIN, add, core
 
 
 def resolved(instruction: Instruction, labels: dict[str, int]) -> Instruction:
-    """The instruction with labels replaced by addresses."""
+    """The instruction with labels replaced by addresses, targets in their order."""
     places = tuple(Immediate(labels[p.name]) if isinstance(p, Label) else p for p in instruction.places)
-    return instruction._replace(places=places)
+    named = sorted({labels[target.name] for target in instruction.targets if isinstance(target, Label)})
+    return instruction._replace(places=places, targets=tuple(map(Immediate, named)))
 
 
 def again(on: Core, program: Program) -> Image:

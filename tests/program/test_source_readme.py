@@ -12,6 +12,7 @@ from vliwsim.program.assembly.legality import Judge
 from vliwsim.program.source import expressions
 from vliwsim.program.source.header import ALLOWED_CLAUSES, HEADER_WORDS
 from vliwsim.program.source.interface import TYPES
+from vliwsim.program.source.parser import OPERAND_WORDS
 
 from .sources import instructions, kernel, operations, shipped
 
@@ -36,6 +37,13 @@ def test_the_sources_on_the_page_assemble() -> None:
     assert [i.operation.name for i in instructions(built)].count("mul") == 4
 
 
+def test_the_table_of_labels_on_the_page_assembles() -> None:
+    block = next(block for block in blocks() if "addr(low)" in block)
+    built = kernel(f"kernel pick\ncore pair7\n{block}\nlow:\nmiddle:\nhigh:\n@0 halt\n")
+    (jump,) = [i for i in instructions(built) if i.operation.name == "jump"]
+    assert len(jump.targets) == 1  # three labels of one place
+
+
 def test_the_diagnostic_on_the_page_is_what_is_said() -> None:
     shown = next(block for block in blocks() if block.startswith("frame.vliw:24:19"))
     with pytest.raises(SourceError) as caught:
@@ -47,7 +55,7 @@ def test_the_diagnostic_on_the_page_is_what_is_said() -> None:
 def test_every_word_of_the_language_is_on_the_page() -> None:
     words = {*HEADER_WORDS, *TYPES, *expressions.FUNCTIONS, *expressions.REFERENCES, *expressions.CONSTANTS}
     words |= {clause for clauses in ALLOWED_CLAUSES.values() for clause in clauses} - {"="}
-    words |= {"repeat", "end", "idle", "if", "not", "on", "then", "ring", "lsb", "lo", "hi"}
+    words |= {"repeat", "end", "idle", "lsb", "lo", "hi", *OPERAND_WORDS}
     assert not {word for word in words if not re.search(rf"(?<![\w]){word}(?!\w)", README)}
 
 
