@@ -120,6 +120,6 @@ def fast(machine: Machine, setup: Setup) -> Native:
     """The fast engine for ``machine``, with a translation from the first beat on."""
     from vliwsim.native.engine import Native
 
-    native = Native(machine)
+    native = Native(machine, quick=True)
     native.begin(setup.registers)
     return native

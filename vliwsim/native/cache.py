@@ -42,6 +42,12 @@ def code_of(text: str, effort: int) -> Code:
     return Code(found)
 
 
+def kept(text: str, effort: int) -> Code | None:
+    """The loaded code of a module's text if it is in the cache."""
+    found = read(key(text, effort))
+    return None if found is None else Code(found)
+
+
 def key(text: str, effort: int) -> str:
     llvm = binding()
     versions = [*llvm.llvm_version_info, effort]

@@ -8,8 +8,7 @@ every path is translated right, one that no data takes included.
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-
-import attrs
+from typing import NamedTuple
 
 from vliwsim.description.core import Core
 from vliwsim.description.operations import Kind
@@ -17,8 +16,7 @@ from vliwsim.machine.parts import Part
 from vliwsim.machine.prepared import Preparation, Prepared
 
 
-@attrs.frozen(order=True)
-class Flight:
+class Flight(NamedTuple):
     """A result, write number ``number``, landing in ``beats`` beats (0: this one): for sure, or if its bit is set."""
 
     beats: int
@@ -30,8 +28,7 @@ class Flight:
         return Flight(self.beats - 1, self.number, self.sure)
 
 
-@attrs.frozen(order=True)
-class Turn:
+class Turn(NamedTuple):
     """A branch in flight: the bundle after ``bundles`` more comes from its target, for sure, or if its bit is set."""
 
     bundles: int
@@ -40,8 +37,7 @@ class Turn:
     sure: bool
 
 
-@attrs.frozen
-class Context:
+class Context(NamedTuple):
     """At the start of a beat, before anything lands; ``busy``: (slot, beats still taken).
 
     ``lap`` and ``trusted``: which copy of the context this is where a loop is unrolled or runs in strips; they mean
@@ -58,8 +54,7 @@ class Context:
     trusted: bool = False
 
 
-@attrs.frozen(eq=False)
-class Step:
+class Step(NamedTuple):
     """What the beat of a context may do.
 
     ``leave``: only the stepper can take it. ``due``: what lands; ``staying``: what is still out. ``guard_holds`` and
@@ -148,7 +143,7 @@ class Contexts:
         held = any(f.sure for f in guard_holds)
         twice, leave = self._twice(parts)
         if not held and leave:
-            return attrs.evolve(step, leave=True)
+            return step._replace(leave=True)
         held = held or any(f.sure for f in holds) or any(p.instruction.slot in busy for p in parts)
         crowds = () if held else self._crowds(parts, step.staying)
         waiting = None
@@ -157,8 +152,8 @@ class Contexts:
         refreshed = None
         if not held and not context.waited and self._may_be_fresh(step):
             refreshed = self._next(step, context.at, context.within, context.turns, step.staying, {}, True)
-        return attrs.evolve(
-            step, leave=False, guard_holds=guard_holds, holds=holds, held=held, crowds=crowds, twice=twice,
+        return step._replace(
+            leave=False, guard_holds=guard_holds, holds=holds, held=held, crowds=crowds, twice=twice,
             waiting=waiting, refreshed=refreshed,
         )  # fmt: skip
 
@@ -219,11 +214,11 @@ class Contexts:
         issued = tuple(Turn(latency, context.at, k, self._sure(parts[k])) for k in branches)
         turns = [*context.turns, *issued]
         landing = tuple(t for t in turns if t.bundles == 1)
-        flying = tuple(attrs.evolve(t, bundles=t.bundles - 1) for t in turns if t.bundles > 1)
+        flying = tuple(t._replace(bundles=t.bundles - 1) for t in turns if t.bundles > 1)
         flights = (*step.staying, *(f for _, f in new))
         taken = {p.instruction.slot: p.effects.busy for p in parts}
-        step = attrs.evolve(
-            step, leave=False, new=tuple(new), issued=issued, landing=landing,
+        step = step._replace(
+            leave=False, new=tuple(new), issued=issued, landing=landing,
             halts=tuple(k for k, p in enumerate(parts) if p.operation.kind is Kind.HALT),
         )  # fmt: skip
         if any(self._on(parts[k]) for k in step.halts):
@@ -238,7 +233,7 @@ class Contexts:
             at, within = (context.at, within) if within < prepared.bundle.beats else (context.at + 1, 0)
             if at < len(self.ready.program.bundles):
                 fallen = self._next(step, at, within, flying, flights, taken, False)
-        return attrs.evolve(step, turned=tuple(turned), fallen=fallen)
+        return step._replace(turned=tuple(turned), fallen=fallen)
 
     @staticmethod
     def _on(part: Part) -> bool:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Collection
+from concurrent.futures import Future, ThreadPoolExecutor
 from time import perf_counter
 
 from vliwsim.description.values import Undefined
@@ -30,13 +31,34 @@ PATIENCE = 4096
 """Cycles the stepper goes on, where no context fits, before a translation from there is made."""
 
 
+LONG = 1.0
+"""Seconds of machine code after which a run is long: it is worth a better translation, made beside it."""
+
+
+class Better:
+    """A translation whose code is made beside a run, in a thread: LLVM does not hold the interpreter up."""
+
+    def __init__(self, translation: Translation, text: str, effort: int) -> None:
+        self.translation, self.text, self.effort = translation, text, effort
+        self.making: Future[Code] | None = None
+
+    def code(self) -> Code | None:
+        """The code once it is there; begins to make it when first asked."""
+        if self.making is None:
+            pool = ThreadPoolExecutor(1)
+            self.making = pool.submit(cache.code_of, self.text, self.effort)
+            pool.shutdown(wait=False)
+        return self.making.result() if self.making.done() else None
+
+
 class Native:
     """One program on its core, run fast.
 
     ``regions``: what has been translated. ``patience``: cycles the stepper goes on, where no context fits, before a
     translation from there is made. ``effort``: LLVM's optimisation level.
     ``following``: carry undefined bytes along, which is slower, instead of leaving them to the stepper. ``most``:
-    contexts of a translation; the ways beyond lead back to the stepper.
+    contexts of a translation; the ways beyond lead back to the stepper. ``quick``: begin with a translation that is
+    made at once, unless a better one is kept from before, and make the better one beside a run that proves to be long.
     """
 
     def __init__(
@@ -47,12 +69,15 @@ class Native:
         effort: int = 2,
         following: bool = False,
         most: int = MOST_CONTEXTS,
+        quick: bool = False,
     ) -> None:
         self.machine, self.most = machine, most
         self.patience, self.effort, self.following = patience, effort, following
         self.walker = Contexts(machine.ready)
         self.regions: list[Loaded] = []
-        self.alone = 0
+        self.alone, self.ran = 0, 0.0
+        self.quick = quick and effort > 0
+        self.better: dict[int, Better] = {}
 
     # -------------------------------------------------------------------------------------------------- translations
 
@@ -72,9 +97,24 @@ class Native:
 
     def _translate(self, seed: Context, undefined: int) -> Loaded:
         translation = Translation(Region(self.walker, seed, undefined, self.most), self.following)
-        made = Loaded(self.machine, translation, self.code(translation.text("run")))
+        text = translation.text("run")
+        code = cache.kept(text, self.effort) if self.quick else self.code(text)
+        if code is None:
+            self.better[len(self.regions)] = Better(translation, text, self.effort)
+            region = Region(self.walker, seed, undefined, self.most, thorough=False)
+            translation = Translation(region, self.following)
+            code = Code(compile_text(translation.text("run"), 0))
+        made = Loaded(self.machine, translation, code)
         self.regions.append(made)
         return made
+
+    def improve(self) -> None:
+        """Take up the better translations that are ready."""
+        for number, better in list(self.better.items()):
+            code = better.code()
+            if code is not None:
+                self.regions[number] = Loaded(self.machine, better.translation, code)
+                del self.better[number]
 
     def code(self, text: str) -> Code:
         """The loaded code of a text; what took effort to compile is kept between runs."""
@@ -149,9 +189,14 @@ class Native:
             # it may first come to a head, and at last leave all heads behind
             fuel = (until - state.cycle - loaded.region.reach) // loaded.region.span - 1
             if fuel < (match[0] in loaded.region.heads):
+                self.alone = 0  # a translation fits: no other is wanted
                 return False
             before = state.cycle
+            began = perf_counter()
             loaded.run(state, match, min(fuel, 1 + most // loaded.region.span, 1 << 60))
+            self.ran += perf_counter() - began
+            if self.better and self.ran > LONG:
+                self.improve()
             return state.cycle > before
         return False
 

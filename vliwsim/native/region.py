@@ -5,8 +5,6 @@ from __future__ import annotations
 from collections import deque
 from collections.abc import Iterator, Mapping
 
-import attrs
-
 from vliwsim.native.contexts import Context, Contexts, Step
 from vliwsim.native.strips import Strip, strip_of
 
@@ -84,7 +82,7 @@ class Region:
 
     def _lapped(self, step: Step) -> Step:
         """The step with its successors in the right lap."""
-        here = self._laps.get(attrs.evolve(step.context, lap=0)) if self._laps else None
+        here = self._laps.get(step.context._replace(lap=0)) if self._laps else None
         if here is None:
             return step
 
@@ -92,7 +90,7 @@ class Region:
         for context in step.successors:
             there = self._laps.get(context)
             if there is not None and there[0] == here[0]:
-                led[context] = attrs.evolve(context, lap=(step.context.lap + there[2]) % there[1])
+                led[context] = context._replace(lap=(step.context.lap + there[2]) % there[1])
         return _led(step, led)
 
     def _loops(self) -> list[list[int]]:
@@ -219,9 +217,9 @@ class Region:
             begins = len(self.steps)
             self.copy.update((k, begins + place) for place, k in enumerate(strip.cycle))
             self.trusted |= {(self.copy[k], part) for k, part in strip.trusted}
-            inside = {self.steps[k].context: attrs.evolve(self.steps[k].context, trusted=True) for k in strip.cycle}
+            inside = {self.steps[k].context: self.steps[k].context._replace(trusted=True) for k in strip.cycle}
             for place, k in enumerate(strip.cycle):
-                step = attrs.evolve(_led(self.steps[k], inside), context=inside[self.steps[k].context])
+                step = _led(self.steps[k], inside)._replace(context=inside[self.steps[k].context])
                 self.index[step.context] = len(self.steps)
                 self.steps.append(step)
                 self.may.append(self.may[k])
@@ -272,7 +270,7 @@ def _led(step: Step, to: Mapping[Context, Context]) -> Step:
     def led(context: Context | None) -> Context | None:
         return to.get(context, context) if context else None
 
-    return attrs.evolve(
-        step, waiting=led(step.waiting), refreshed=led(step.refreshed), fallen=led(step.fallen),
+    return step._replace(
+        waiting=led(step.waiting), refreshed=led(step.refreshed), fallen=led(step.fallen),
         turned=tuple(map(led, step.turned)),
     )  # fmt: skip

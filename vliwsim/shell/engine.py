@@ -65,4 +65,4 @@ class Swift:
         except ImportError:
             self._given_up = True
             return
-        self._native, self.reach = Native(self.machine), 1 << 16
+        self._native, self.reach = Native(self.machine, quick=True), 1 << 16
