@@ -42,6 +42,7 @@ def same(found: FramesRun, runs: list[KernelRun]) -> None:
     """Everything that single runs say of the whole."""
     assert (found.reason, found.frames, found.wanted) == ("halt", len(runs), len(runs))
     assert found.cycles.tolist() == [run.cycles for run in runs]
+    assert found.spread["median"] == np.median([run.cycles for run in runs])
     items = {item.name: item for item in found.kernel.items}
     for name, array in found.outputs.items():
         singles = [np.atleast_1d(run.outputs[name]) for run in runs]
@@ -264,9 +265,35 @@ def test_a_frame_over_its_budget(tmp_path: Path) -> None:
     x[[100, 200]] = 3
     for engine in ENGINES:
         run = total.run_frames({"x": x}, n=4, engine=engine)
-        assert (run.over.tolist(), run.ok, run.matches) == ([25, 50], False, True)
+        assert (run.over, run.first_over, run.ok, run.matches) == (2, 25, False, True)
         assert "2 over budget" in run.verdict
         assert run.account.budget == 100 * 22 - 2
+
+
+COUNT = """
+kernel  count_down
+core    pair7
+given   more : i32 in g1
+returns y    : i32 in g2
+start:
+@0 li g2, 0
+loop:
+@0 count g1, loop
+@1 add g2, g2, 1
+@3 idle
+finish:
+@0 halt
+"""
+
+
+def test_frames_of_many_lengths(tmp_path: Path) -> None:
+    count_down = load_kernel(str(write(tmp_path, COUNT, "def count_down(more):\n    return more + 1\n")))
+    more = np.random.default_rng(2).integers(0, 8, 301)
+    more[:70] = 3
+    run = count_down.run_frames({"more": more}, engine="native")
+    same(run, one_by_one(count_down, [{"more": one} for one in more], {}))
+    assert run.matches
+    assert (run.spread["minimum"], run.spread["maximum"]) == (6, 34)
 
 
 def test_a_frame_that_does_not_end(tmp_path: Path) -> None:

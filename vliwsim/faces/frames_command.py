@@ -190,16 +190,16 @@ def _frame_lines(run: FramesRun) -> Iterator[str]:
     else:
         slowest = int(run.cycles.argmax())
         yield f"  A frame takes {low} to {high} cycles, median {median:g}; frame {slowest} takes most{_budget(run)}."
-    if len(run.over):
-        first = int(run.over[0])
+    if run.first_over is not None:
         assert run.budgets is not None
-        yield f"  Frame {first} is the first over budget: {run.cycles[first]} cycles of {run.budgets[first]:.10g}."
+        took, allowed = run.cycles[run.first_over], run.budgets[run.first_over]
+        yield f"  Frame {run.first_over} is the first over budget: {took} cycles of {allowed:.10g}."
 
 
 def _budget(run: FramesRun) -> str:
-    if run.budgets is None:
+    if run.allowed is None:
         return ""
-    low, high = run.budgets.min(), run.budgets.max()
+    low, _, high = run.allowed.spread
     return f", budget {low:.10g}" if low == high else f", budgets {low:.10g} to {high:.10g}"
 
 

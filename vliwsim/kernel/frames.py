@@ -29,6 +29,7 @@ from vliwsim.kernel.reference import Reference, call_reference
 from vliwsim.kernel.runner import LIMIT, KernelRun, budget_of, judged
 from vliwsim.kernel.runner import whole_number as within_of
 from vliwsim.kernel.stacked import Stack, layout_names, of_case
+from vliwsim.kernel.tallies import Tally
 from vliwsim.machine.stepper import Machine
 from vliwsim.problems import InterfaceError, Problem, problem
 from vliwsim.program.kernel import Kernel
@@ -111,8 +112,9 @@ class _Frames:
         self.carried: dict[str, Any] = {}
         self.total = Total(kernel)
         self.crew: Crew | None = None
-        self.cycles: list[np.ndarray] = []
-        self.budgets: list[np.ndarray] = []
+        self.cycles, self.budgets = Tally(), Tally()
+        self.over = 0
+        self.first_over: int | None = None
         self.kept: dict[str, list[np.ndarray]] = {name: [] for name in self.interface.outputs}
         self.wrong = 0
         self.differences: dict[str, tuple[int, Difference]] = {}
@@ -192,12 +194,22 @@ class _Frames:
             return 0
         self.total.add_simulation(simulation)
         self._differ({name: d for name, d in run.differences.items() if d})
-        self.cycles.append(np.array([run.cycles], np.int64))
-        if self.budgeted:
-            self.budgets.append(np.array([run.budget]))
+        self._account(np.array([run.cycles]), [run.budget])
         self._keep({name: np.asarray(value)[None] for name, value in run.outputs.items()})
         self._next(run.outputs)
         return run.cycles
+
+    def _account(self, cycles: np.ndarray, budgets: list[Any]) -> None:
+        """Note what frames took and might have taken; before it is gone on to the next ones."""
+        begun = self.cycles.count
+        self.cycles.add(cycles)
+        if self.budgeted:
+            allowed = np.array(budgets)
+            self.budgets.add(allowed)
+            over = np.flatnonzero(cycles > allowed)
+            self.over += len(over)
+            if len(over) and self.first_over is None:
+                self.first_over = begun + int(over[0])
 
     def _next(self, outputs: Mapping[str, Any]) -> None:
         """Go on to the next frame, with what this one left."""
@@ -274,9 +286,7 @@ class _Frames:
             if count:
                 self.carried = {name: outputs[name][count - 1] for name in self.carried}
         self.crew.take(found if count == len(found.rows) else self.crew.again(job, count, before))
-        self.cycles.append(found.cycles[:count])
-        if self.budgeted:
-            self.budgets.append(np.array(budgets))
+        self._account(found.cycles[:count], budgets)
         self._keep({name: array[:count] for name, array in outputs.items()})
 
     def _judge(
@@ -314,8 +324,6 @@ class _Frames:
     # ------------------------------------------------------------------------------------------------------- the end
 
     def _gathered(self, first: Setup) -> FramesRun:
-        cycles = np.concatenate([*self.cycles, np.zeros(0, np.int64)]).astype(np.int64)
-        budgets = np.concatenate([*self.budgets, np.zeros(0)]) if self.budgeted else None
         outputs = {}
         for name, arrays in self.kept.items():
             if not self.take:
@@ -326,16 +334,17 @@ class _Frames:
         if self.stopped and self.done < self.cut.count and ending is None:
             reason = "stopped"
         problems = [of_case(p, f"frame {self.done}") for p in ending.problems] if ending else []
-        total = None if budgets is None else float(budgets.sum())
-        whole = int(total) if total is not None and total.is_integer() else total
+        budgets = self.budgets if self.budgeted else None
         return FramesRun(
             self.kernel,
             first,
             self.cut.count,
             reason,
-            self.total.account(self.crew.counted() if self.crew else None, whole),
-            cycles,
+            self.total.account(self.crew.counted() if self.crew else None, budgets.total if budgets else None),
+            self.cycles,
             budgets,
+            self.over,
+            self.first_over,
             outputs,
             self.wrong if self.reference else None,
             self.differences,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import cached_property
 
 import attrs
 import numpy as np
@@ -12,6 +13,7 @@ from vliwsim.kernel.binding import Setup
 from vliwsim.kernel.compare import Difference
 from vliwsim.kernel.interface import interface_of
 from vliwsim.kernel.recording import Signal
+from vliwsim.kernel.tallies import Tally
 from vliwsim.problems import Problem
 from vliwsim.program.kernel import Kernel
 
@@ -21,8 +23,9 @@ class FramesRun:
     """A kernel run on ``wanted`` frames of a recording, of which ``frames`` were carried out whole.
 
     ``reason``: how it ended (``halt``: all of them; ``hazard``, ``limit``, ``undefined``: in frame number ``frames``;
-    ``stopped``). ``account``: of all whole frames together, its budget the sum of theirs. ``cycles`` and ``budgets`` of
-    each frame (None where there is no budget). ``outputs`` by name: arrays that the kernel returns one behind the
+    ``stopped``). ``account``: of all whole frames together, its budget the sum of theirs. ``passed`` and ``allowed``:
+    cycles of each frame, and its budget (None where there is none); ``over``: frames that took more, ``first_over`` the
+    first of them. ``outputs`` by name: arrays that the kernel returns one behind the
     other, values an entry a frame, ``changes`` what each frame left, a row each; empty where they were given away.
     ``wrong``: frames that differ from the reference, None where nothing was compared. ``differences``: for each output
     that ever does, the first frame that does and its first difference. ``signals``: how the arrays were cut.
@@ -34,8 +37,10 @@ class FramesRun:
     wanted: int
     reason: str
     account: Account
-    cycles: np.ndarray
-    budgets: np.ndarray | None
+    passed: Tally
+    allowed: Tally | None
+    over: int
+    first_over: int | None
     outputs: Mapping[str, np.ndarray]
     wrong: int | None
     differences: Mapping[str, tuple[int, Difference]]
@@ -44,18 +49,22 @@ class FramesRun:
 
     @property
     def frames(self) -> int:
-        return len(self.cycles)
+        return self.passed.count
+
+    @cached_property
+    def cycles(self) -> np.ndarray:
+        """Of each frame."""
+        return self.passed.array()
+
+    @cached_property
+    def budgets(self) -> np.ndarray | None:
+        """Of each frame; None where there is no budget."""
+        return None if self.allowed is None else self.allowed.array()
 
     @property
     def first_wrong(self) -> int | None:
         """Number of the first frame that is wrong."""
         return min((frame for frame, _ in self.differences.values()), default=None)
-
-    @property
-    def over(self) -> np.ndarray:
-        """Numbers of the frames over their budget."""
-        none = np.zeros(0, np.int64)
-        return none if self.budgets is None else np.flatnonzero(self.cycles > self.budgets)
 
     @property
     def legal(self) -> bool:
@@ -71,7 +80,7 @@ class FramesRun:
     @property
     def ok(self) -> bool:
         """All frames finished, legal, not wrong, not over budget."""
-        return self.reason == "halt" and self.legal and self.matches is not False and not len(self.over)
+        return self.reason == "halt" and self.legal and self.matches is not False and not self.over
 
     @property
     def notes(self) -> tuple[Problem, ...]:
@@ -115,21 +124,20 @@ class FramesRun:
         return ", ".join([*said, *self._budget_words()])
 
     def _budget_words(self) -> list[str]:
-        if self.budgets is None or not self.frames:
+        if self.allowed is None or not self.frames:
             return []
-        if len(self.over):
-            return [f"{len(self.over)} over budget"]
-        spare = int((self.budgets - self.cycles).min())
-        return ["on budget" if spare == 0 else f"at least {many(spare, 'cycle')} under budget"]
+        if self.over:
+            return [f"{self.over} over budget"]
+        spare = int(self.allowed.spread[0] - self.passed.spread[2])  # at least
+        return [f"at least {many(spare, 'cycle')} under budget" if spare > 0 else "on budget"]
 
     @property
     def spread(self) -> dict[str, float]:
         """Least, median and greatest number of cycles a frame took; empty where none ran."""
         if not self.frames:
             return {}
-        median = float(np.median(self.cycles))
-        low, high = int(self.cycles.min()), int(self.cycles.max())
-        return {"minimum": low, "median": int(median) if median.is_integer() else median, "maximum": high}
+        low, median, high = self.passed.spread
+        return {"minimum": low, "median": int(median) if float(median).is_integer() else median, "maximum": high}
 
     def as_json(self) -> dict[str, object]:
         """Plain JSON data, in the shape of ``run --json`` and with ``frames`` beside it."""
@@ -144,7 +152,7 @@ class FramesRun:
             "stalls": dict(account.stalls),
             "drain": account.drain,
             "budget": account.budget,
-            "within_budget": not len(self.over) if halted and self.budgets is not None else None,
+            "within_budget": not self.over if halted and self.allowed is not None else None,
             "code_bytes": account.code_bytes,
             "matches": self.matches,
             "outputs": {name: self._output_json(name) for name in interface_of(self.kernel).outputs},
@@ -156,8 +164,8 @@ class FramesRun:
                 "cycles": self.spread or None,
                 "wrong": self.wrong,
                 "first_wrong": self.first_wrong,
-                "over_budget": len(self.over),
-                "first_over_budget": int(self.over[0]) if len(self.over) else None,
+                "over_budget": self.over,
+                "first_over_budget": self.first_over,
                 "signals": {s.name: self._signal_json(s) for s in self.signals},
             },
         }
