@@ -12,6 +12,7 @@ import inspect
 import sys
 import types
 from collections.abc import Callable, Iterator, Mapping
+from functools import cached_property
 from pathlib import Path
 from typing import Any
 
@@ -35,6 +36,11 @@ class Reference:
     function: Callable[..., Any]
     cases: Callable[..., Any] | None
     source: str
+
+    @cached_property
+    def parameters(self) -> tuple[inspect.Parameter, ...]:
+        """What the function takes."""
+        return tuple(inspect.signature(self.function).parameters.values())
 
 
 def reference_path(kernel: Kernel) -> Path:
@@ -135,7 +141,7 @@ def _arguments(reference: Reference, setup: Setup) -> dict[str, Any]:
     given |= {name: setup.values[name] for name in interface.inputs if name in setup.values}
     given |= setup.sizes
     known = {**setup.kernel.constants, **setup.values, **given}
-    parameters = inspect.signature(reference.function).parameters.values()
+    parameters = reference.parameters
     named = [p for p in parameters if p.kind in (p.POSITIONAL_OR_KEYWORD, p.KEYWORD_ONLY)]
     wrong = [p.name for p in parameters if p.kind is p.POSITIONAL_ONLY]
     wrong += [p.name for p in named if p.name not in known and p.default is p.empty]
