@@ -39,6 +39,8 @@ class Tally:
     proved: dict[str, int] = field(default_factory=dict)
     violated: int = 0
     confirmed: int = 0
+    behind: int = 0
+    unmet: list[str] = field(default_factory=list)
     interrupted: int = 0
     missed: list[str] = field(default_factory=list)
 
@@ -101,6 +103,7 @@ def examine(seed: int, tally: Tally) -> None:
     machine = Machine(program, careful=True)
     stretches = [piece for region in made.regions for piece in defined_pieces(region)]
     met: set[str] = set()
+    clean = 0
     for k in range(INPUTS):
         given = registers_of(made, r, pointers, facts)
         if k == 0:
@@ -108,6 +111,7 @@ def examine(seed: int, tally: Tally) -> None:
         pieces = [(a, r.randbytes(n) if r.random() < 0.7 else bytes(n)) for a, n in stretches]
         tally.runs += 1
         hazard = run(machine, started(machine, made, given, pieces), verdict, tally, seed)
+        clean += hazard is None
         if hazard:
             met.add(hazard)
             tally.hazards[hazard] = tally.hazards.get(hazard, 0) + 1
@@ -119,6 +123,9 @@ def examine(seed: int, tally: Tally) -> None:
     for judgement in verdict.violated:
         tally.violated += 1
         tally.confirmed += judgement.rule in met
+        tally.behind += judgement.rule not in met and not clean
+        if judgement.rule not in met and clean:
+            tally.unmet.append(f"seed {seed}: {judgement.rule}")
 
 
 def run(machine: Machine, state: State, verdict: Verdict, tally: Tally, seed: int) -> str | None:
@@ -131,7 +138,7 @@ def run(machine: Machine, state: State, verdict: Verdict, tally: Tally, seed: in
     except HazardMet as found:
         hazard = found.hazard.name
     early = {(read.site, read.register) for read in verdict.early}
-    told = verdict.complete and verdict.outcome("indirect-target") == PROVED
+    told = verdict.complete and not verdict.astray
     for note in state.notes:
         if told and note.name == "early-read" and ((note.bundle, note.instruction), note.register) not in early:
             tally.missed.append(f"seed {seed}: early read of {note} not told")
@@ -143,7 +150,7 @@ def interrupt(machine: Machine, states: list[State], verdict: Verdict, tally: Ta
     assert verdict.interrupts
     plain, state = states
     machine.advance(plain, LIMIT)
-    if not plain.finished or plain.cycle < 2 or verdict.outcome("indirect-target") != PROVED:
+    if not plain.finished or plain.cycle < 2 or verdict.astray:
         return
     state.interrupt_at = r.randrange(plain.cycle)
     taken = None
@@ -176,4 +183,5 @@ def lines(tally: Tally) -> Iterator[str]:
     yield f"hazards met: {dict(sorted(tally.hazards.items()))}"
     yield f"proved on a core that could break it: {dict(sorted(tally.proved.items()))}"
     yield f"violated {tally.violated}, of which {tally.confirmed} met on one of {INPUTS} inputs"
+    yield f"of the rest {tally.behind} in programs that met another hazard on each, {len(tally.unmet)} not met at all"
     yield f"{tally.interrupted} interrupts taken by safe bundles"
