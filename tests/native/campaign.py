@@ -23,14 +23,19 @@ from tests.differential.loops import loop_trials
 from tests.differential.plain import Outcome
 from vliwsim.machine.prepared import Preparation
 from vliwsim.machine.state import State
-from vliwsim.machine.stepper import Machine
+from vliwsim.machine.stepper import FOREVER, Machine
 from vliwsim.native.contexts import Context, Contexts, Step
-from vliwsim.native.region import MOST_CONTEXTS
+from vliwsim.native.loaded import Loaded
+from vliwsim.native.region import MOST_CONTEXTS, Region
+from vliwsim.native.translate import Translation
 
 from .together import Job, Shared, together
 
 BATCH = 100
 """Programs compiled together."""
+
+MOST_FOUND = 1_000
+"""Lines of differences after which a campaign is given up."""
 
 LONG = 10_000
 """Cycles from which on a run is held to the stepper alone: the model takes too long."""
@@ -68,26 +73,35 @@ class Tally:
 class How(NamedTuple):
     """How a seed's program is run: LLVM's effort, undefined bytes carried along, contexts of a translation.
 
-    ``whole``: contexts are translated that no run comes to, too. ``patience``: cycles that the stepper goes on before
-    there is another translation.
+    ``whole``: contexts are translated that no run comes to, too. ``thorough``: with unrolled loops and strips, as the
+    better translation of a long run is. ``begin``: the first translation knows only which registers are given.
+    ``patience``: cycles that the stepper goes on before there is another translation. ``slice``: cycles after which
+    machine code is asked to come back, 0 for never.
     """
 
     effort: int
     following: bool
     most: int
     whole: bool
+    thorough: bool
+    begin: bool
     patience: int
+    slice: int
 
 
 def how(seed: int) -> How:
     """Most at LLVM's lowest effort, and without what no run comes to, which LLVM would take most of the time for."""
-    few = SOME if looping(seed) else FEW
+    r = Random(f"how {seed}")
+    whole = r.random() < 0.06
     return How(
-        effort=2 if seed % 32 == 5 else 0,
-        following=seed % 8 == 3,
-        most=MOST_CONTEXTS if seed % 32 == 1 else few,
-        whole=seed % 16 == 1,
-        patience=3 if seed % 8 == 2 else 30,
+        effort=2 if r.random() < 0.03 else 0,
+        following=r.random() < 0.12,
+        most=MOST_CONTEXTS if whole and r.random() < 0.5 else SOME if looping(seed) else FEW,
+        whole=whole,
+        thorough=r.random() < (0.8 if looping(seed) else 0.3),
+        begin=r.random() < 0.5,
+        patience=r.choice((3, 30, 30, 30)),
+        slice=r.choice((0, 0, 0, 0, 1, 10)),
     )
 
 
@@ -111,11 +125,19 @@ class Needed(Contexts):
 
 
 class Counted(Shared):
-    """Counts the cycles that machine code passes."""
+    """Counts the cycles that machine code passes, and is led as ``way`` says."""
 
-    passed = 0
-    last = -1
-    """The cycle that machine code led to last."""
+    def __init__(self, job: Job[Tally], machine: Machine, way: How) -> None:
+        super().__init__(job, machine, patience=way.patience, effort=way.effort, following=way.following, most=way.most)
+        self.way = way
+        self.passed, self.last = 0, -1
+        """Cycles, and the one that machine code led to last."""
+
+    def _translate(self, seed: Context, undefined: int) -> Loaded:
+        region = Region(self.walker, seed, undefined, self.most, thorough=self.way.thorough)
+        translation = Translation(region, self.following)
+        self.regions.append(Loaded(self.machine, translation, self.code(translation.text("run"))))
+        return self.regions[-1]
 
     def leap(self, state: State, *limits: int) -> bool:
         before = state.cycle
@@ -125,6 +147,12 @@ class Counted(Shared):
             self.last = state.cycle
         return done
 
+    def advance(self, state: State, until: int = FOREVER) -> None:
+        if not self.way.slice:
+            super().advance(state, until)
+        while not state.finished and state.cycle < until:
+            self.go_on(state, until, self.way.slice)
+
 
 def examine(seed: int) -> Callable[[Job[Tally]], Tally]:
     def work(job: Job[Tally]) -> Tally:
@@ -133,10 +161,12 @@ def examine(seed: int) -> Callable[[Job[Tally]], Tally]:
         machine = real.machine_of(trials[0].core, trials[0].program)
         way = how(seed)
         wanted = [by_model_and_stepper(seed, made, machine, tally) for made in trials]
-        native = Counted(job, machine, patience=way.patience, effort=way.effort, following=way.following, most=way.most)
+        native = Counted(job, machine, way)
         if not way.whole:
             gone = [sum(counts) for counts in zip(*(state.counts for _, state in wanted))]
             native.walker = Needed(machine.ready, {k for k, n in enumerate(gone) if n} | {s.at for _, s in wanted})
+        if way.begin:
+            native.begin([n for n, value in trials[0].registers.items() if not value.unknown])
         for made, end in zip(trials, wanted, strict=True):
             by_machine_code(seed, made, *end, machine, native, tally)
         return tally
@@ -216,11 +246,14 @@ def main() -> int:
         for seed, line in part.found:
             print(f"seed {seed}: {line}", flush=True)
         tally.add(part)
+        if len(tally.found) > MOST_FOUND:
+            print("enough is wrong to stop")
+            break
         if time.monotonic() - told > 20:
             told = time.monotonic()
             pace = 1000 * (told - began) / max(1, tally.programs)
             print(f"up to seed {seeds[-1]}: {tally}, {pace:.1f} ms a program", flush=True)
-    print(f"seeds {asked.first} to {asked.first + asked.count - 1}: {tally}, {len(tally.found)} differences")
+    print(f"seeds {asked.first} to {seeds[-1]}: {tally}, {len(tally.found)} differences")
     print("ends:", ", ".join(f"{name} {n}" for name, n in tally.ends.most_common()))
     print("met behind machine code:", ", ".join(f"{name} {n}" for name, n in tally.late.most_common()))
     return 1 if tally.found else 0
