@@ -5,8 +5,9 @@ from __future__ import annotations
 from vliwsim.machine.parts import Input, Part
 from vliwsim.native.accessing import Accessing
 from vliwsim.native.contexts import always_taken
-from vliwsim.native.meanings import result_type, widths
+from vliwsim.native.meanings import result_type
 from vliwsim.native.text import number
+from vliwsim.native.values import widths
 from vliwsim.native.variables import Held
 
 

@@ -12,9 +12,9 @@ from typing import NamedTuple
 from vliwsim.description.operations import Operation
 from vliwsim.machine.parts import Part
 from vliwsim.native.contexts import Context, Flight, Turn
-from vliwsim.native.meanings import Halves
 from vliwsim.native.region import Region
 from vliwsim.native.text import UNLIKELY, Text, number
+from vliwsim.native.values import Halves
 
 STALLS = ("bank", "wait", "penalty", "straddle", "fresh")
 """Causes of cycles that the code itself counts."""
