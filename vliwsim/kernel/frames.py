@@ -8,8 +8,6 @@ later ones wrong.
 
 from __future__ import annotations
 
-import contextlib
-import sys
 import time
 from collections.abc import Callable, Iterator, Mapping
 from typing import TYPE_CHECKING, Any
@@ -66,7 +64,6 @@ def run_frames(
     engine: str = "auto",
     look: Callable[[int], bool | None] | None = None,
     take: Take | None = None,
-    quiet: bool = False,
     batch: Callable[[], Batch] | None = None,
 ) -> FramesRun:
     """Run ``kernel`` on every frame of a recording.
@@ -79,17 +76,13 @@ def run_frames(
     are cut or by name. ``lead``: zeros before the first sample. ``pad``: fill the last frame up with zeros; without it
     samples behind the last whole frame are left out. ``limit``: cycles a frame. ``engine``: ``auto``, ``step``,
     ``native``. ``look`` is called with the number of frames done now and then, and stops the run by returning true.
-    ``take`` gets the outputs as they come, which are then not kept. ``quiet`` sends what the reference prints to the
-    standard error. ``batch`` makes the kernel's code for many runs.
+    ``take`` gets the outputs as they come, which are then not kept. ``batch`` makes the kernel's code for many runs.
 
     Raises :class:`~vliwsim.problems.InterfaceError` for inputs that do not fit, and
     :class:`~vliwsim.problems.ReferenceFailure`.
     """
-    output = contextlib.redirect_stdout(sys.stderr) if quiet else contextlib.nullcontext()
-    with output:
-        cut = Cut(kernel, frames, given, hop, lead, pad)
-        run = _Frames(kernel, cut, reference, limit, look, take, batch or (lambda: batch_of(kernel)))
-        return run.run(engine)
+    cut = Cut(kernel, frames, given, hop, lead, pad)
+    return _Frames(kernel, cut, reference, limit, look, take, batch or (lambda: batch_of(kernel))).run(engine)
 
 
 class _Frames:
