@@ -88,7 +88,8 @@ class Text:
 
     def let(self, code: str) -> str:
         """A new value."""
-        name = self.name()
+        self.count += 1
+        name = f"%v{self.count}"
         self.lines.append(f"  {name} = {code}")
         return name
 

@@ -76,16 +76,19 @@ class Variables(Text):
         return frozenset(self.walker.register(flight) for flight in due) - self.zero
 
     def value_slot(self, n: int, beats: int) -> str:
-        self.variables[f"%f{n}.{beats}"] = "i32"
-        return f"%f{n}.{beats}"
+        name = f"%f{n}.{beats}"
+        self.variables[name] = "i32"
+        return name
 
     def mask_slot(self, n: int, beats: int) -> str:
-        self.variables[f"%w{n}.{beats}"] = "i8"
-        return f"%w{n}.{beats}"
+        name = f"%w{n}.{beats}"
+        self.variables[name] = "i8"
+        return name
 
     def on_slot(self, n: int, beats: int) -> str:
-        self.variables[f"%o{n}.{beats}"] = "i1"
-        return f"%o{n}.{beats}"
+        name = f"%o{n}.{beats}"
+        self.variables[name] = "i1"
+        return name
 
     def turn_slot(self, turn: Turn) -> str:
         name = f"%t{turn.bundle}.{turn.part}.{turn.bundles}"
