@@ -8,6 +8,7 @@ from random import Random
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from vliwsim.machine.memory import Region
 from vliwsim.machine.recorder import Record, record
 from vliwsim.machine.stepper import Machine
 from vliwsim.program.assembler import assemble
@@ -136,3 +137,20 @@ def test_the_comparison_of_issue_rules_is_not_empty() -> None:
     core_of = {seed: replace(trial(Random(seed)).core, interlocked=False, early="reject") for seed in range(200)}
     ended = [seed for seed, core in core_of.items() if run(trial(Random(seed)), core).stop == "halt"]
     assert sum(not overlapping_writes(trial(Random(seed)), core_of[seed]) for seed in ended) >= 8
+
+
+def test_the_hot_loop_notes_what_the_definition_notes() -> None:
+    """An undefined value that is only passed on, by a copy and by a choice, when its bundle has long been hot."""
+    kernel = assemble("passed.vliw", text=(
+        "kernel passed\ncore pair7\nstart:\n@0 idle\nloop:\n@0 lw g2, [g10 then +4]\n@4 mv g3, g2\n"
+        "   select g4, g5, g2, g2\n@8 count g16, loop\n@12 idle\nfinish:\n@0 halt\n"
+    ))  # fmt: skip
+    machine, names = Machine(kernel.program), kernel.core.register_numbers
+    notes = []
+    for advance in (machine.advance, lambda state: [machine.step(state) for _ in iter(lambda: state.finished, True)]):
+        given = {names["g10"]: 0, names["g5"]: 0, names["g16"]: 30}
+        state = machine.start(given, [(0, bytes(100))], [Region("x", 0, 200)])
+        advance(state)
+        notes.append({(site.name, site.bundle, site.instruction): beat for site, beat in state.notes.items()})
+    assert notes[0] == notes[1]
+    assert [name for name, _, _ in notes[0]] == ["undefined-read"] * 3

@@ -3,7 +3,7 @@
 The text is made from :class:`~vliwsim.machine.rows.Rows` and the operations' own Python text, registered under a stable
 name (``<bundle 12>``) so that a debugger or a profiler shows it. It decides nothing by itself: at an undefined operand,
 a misaligned or foreign address, an undefined byte or a store it cannot make at once it declines (returns None or raises
-``UndefinedOperand``), and the beat is taken by definition.
+``UndefinedOperand``), and the beat is taken by definition; so it does where an undefined operand is only passed on.
 """
 
 from __future__ import annotations
@@ -15,7 +15,7 @@ from itertools import pairwise
 from typing import Any
 
 from vliwsim.description.core import Core
-from vliwsim.description.values import join
+from vliwsim.description.values import Undefined, join
 from vliwsim.machine.memory import ALL_DEFINED, ALL_OWNED, SIZES, Memory, Touch
 from vliwsim.machine.rows import (
     LOAD,
@@ -61,10 +61,12 @@ class _Writer:
         self.lines: list[str] = []
         self.depth = 1
         self.count = 0
-        self.names: dict[str, object] = {"join": join, "charge": charge, "overlap": overlap}
+        self.names: dict[str, object] = {"join": join, "charge": charge, "overlap": overlap, "Undefined": Undefined}
         self.charged = rows.accesses > 1 or bool(core.memory.waits)
         """Whether the accesses may cost cycles."""
         self.touches: list[str] = []
+        self.passed: list[str] = []
+        """Results that may be an undefined operand passed on: the definition makes a note of it."""
         self.gathered = rows.guarded_access
         """Whether guards decide which accesses there are, so that they are gathered as the bundle runs."""
 
@@ -79,6 +81,8 @@ class _Writer:
             else:
                 values = [self.result(row, None) for row in group.rows]
                 results.append(f"({group.latency}, {group.numbers!r}, ({', '.join(values)},))")
+        if self.passed:
+            self.add(f"if {' or '.join(self.passed)}: return None")
         stores = [self.store(row) for row in rows.stores]
         touched = "touched" if self.gathered else f"({' '.join(self.touches)})"
         if len(rows.stores) > 1:
@@ -131,6 +135,12 @@ class _Writer:
             value = self.applied(row.function, [self.operand(k) for k in indices])
         result = self.fresh("r")
         self.add(f"{result} = {value}")
+        if row.shape != LOAD:
+            test = f"Undefined in map(type, {result})" if many else f"{result}.__class__ is Undefined"
+            if gather:
+                self.add(f"if {test}: return None")
+            else:
+                self.passed.append(test)
         if gather:
             numbers, values = gather
             put = (
