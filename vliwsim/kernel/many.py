@@ -32,6 +32,9 @@ CHUNK_BYTES = 1 << 22
 MOST_KEPT = 1000
 """Runs of exceptions that are kept whole."""
 
+MOST_KEPT_BYTES = 1 << 27
+"""Bytes of inputs in those."""
+
 MOST_STACKS = 256
 """Layouts that are remembered."""
 
@@ -44,8 +47,8 @@ class ManyRuns:
     each, drain included. ``finished``: did it halt with all outputs defined; where it did not its outputs hold what
     there is, zeros where nothing is.
 
-    ``exceptions``: the runs of those that did not, by case number, the first thousand of them. ``account``: all that
-    finished, added up. ``stopped``: somebody stopped it, and these are the cases until then.
+    ``exceptions``: the runs of those that did not, by case number, a thousand at most, fewer large ones. ``account``:
+    all that finished, added up. ``stopped``: somebody stopped it, and these are the cases until then.
     """
 
     kernel: Kernel
@@ -106,7 +109,7 @@ class _Many:
         self.stacks: dict[object, Stack] = {}
         self.alone = Total(kernel)
         self.stopped = False
-        self.done = 0
+        self.done = self.kept = 0
         self.parts: list[tuple[np.ndarray, dict[str, np.ndarray]]] = []
         self.cycles: list[np.ndarray] = []
         self.finished: list[np.ndarray] = []
@@ -233,8 +236,9 @@ class _Many:
         run = judged(setup, simulation, case=_label(number), expected=None, limit=self.limit)
         if run.reason == "halt" and not run.problems:
             self.alone.add_simulation(simulation)
-        elif len(self.exceptions) < MOST_KEPT:
+        elif not self.exceptions or (len(self.exceptions) < MOST_KEPT and self.kept < MOST_KEPT_BYTES):
             self.exceptions[number] = run
+            self.kept += sum(len(data) for _, data in setup.memory)
         return run
 
     def _gathered(self, crew: Crew) -> ManyRuns:

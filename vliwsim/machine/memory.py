@@ -8,6 +8,7 @@ definition.
 
 from __future__ import annotations
 
+import mmap
 from collections.abc import Iterable, Sequence
 from typing import Literal
 
@@ -29,6 +30,13 @@ ALL_OWNED = {size: status & 0x0202020202020202 for size, status in ALL_DEFINED.i
 _FORMATS: tuple[Literal["B", "H", "I", "Q"], ...] = ("B", "H", "I", "Q")
 
 
+LARGE = 1 << 20
+"""Bytes from which on a memory is mapped, so that pages nobody touches cost nothing."""
+
+BLOCK = 1 << 20
+"""Bytes whose status is written at once."""
+
+
 @attrs.frozen
 class Region:
     """``bytes`` of an array or of scratch from ``start``, then ``over`` bytes that may be read but are undefined."""
@@ -37,6 +45,17 @@ class Region:
     start: int
     bytes: int
     over: int = 0
+
+
+def zeros(count: int) -> bytearray | mmap.mmap:
+    """So many zero bytes that can be changed. Raises MemoryError where there is no room."""
+    if count < LARGE:
+        return bytearray(count)
+    private = {"flags": mmap.MAP_PRIVATE | mmap.MAP_ANONYMOUS} if hasattr(mmap, "MAP_ANONYMOUS") else {}
+    try:
+        return mmap.mmap(-1, count, **private)
+    except OSError as error:
+        raise MemoryError(f"{count} bytes of data memory: {error.strerror}") from None
 
 
 @attrs.frozen
@@ -58,21 +77,27 @@ class Memory:
         self.parameters = parameters
         self.regions = tuple(regions)
         whole = -(-parameters.size // 8) * 8  # a multiple of 8, so that every view covers every byte
-        self.bytes = bytearray(whole)
-        self.status = bytearray(whole)
+        self.bytes = zeros(whole)
+        self.status = zeros(whole)
         for region in regions:
             last = min(region.start + region.bytes + region.over, parameters.size)
-            self.status[region.start + region.bytes : last] = bytes([OVER]) * max(0, last - region.start - region.bytes)
+            self._mark(region.start + region.bytes, last, OVER)
         for region in regions:
-            self.status[region.start : region.start + region.bytes] = bytes([UNDEFINED]) * region.bytes
+            self._mark(region.start, region.start + region.bytes, UNDEFINED)
         data, status = memoryview(self.bytes), memoryview(self.status)
         self.views = tuple(data.cast(code) for code in _FORMATS)
         self.status_views = tuple(status.cast(code) for code in _FORMATS)
 
+    def _mark(self, first: int, last: int, status: int) -> None:
+        """Give the bytes from ``first`` to ``last``, the end excluded, a status."""
+        for block in range(first, last, BLOCK):
+            count = min(BLOCK, last - block)
+            self.status[block : block + count] = bytes([status]) * count
+
     def define(self, address: int, data: bytes) -> None:
         """Put defined bytes into memory before a run, inside some region."""
         self.bytes[address : address + len(data)] = data
-        self.status[address : address + len(data)] = bytes([DEFINED]) * len(data)
+        self._mark(address, address + len(data), DEFINED)
 
     def read(self, address: int, count: int) -> tuple[bytes, bytes]:
         """``count`` bytes and for each 1 if it is undefined (or outside), else 0."""
@@ -101,7 +126,7 @@ class Memory:
         status = self.status[address : address + size]
         little = self.parameters.endianness == "little"
         if not little:
-            status.reverse()
+            status = status[::-1]
         unknown = sum(1 << k for k, s in enumerate(status) if s != DEFINED)
         return value_of(int.from_bytes(data, "little" if little else "big"), unknown, size)
 

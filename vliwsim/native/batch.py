@@ -20,11 +20,15 @@ from vliwsim.machine.stepper import Machine
 from vliwsim.native import cache, driver, exchange
 from vliwsim.native.contexts import Context, Contexts
 from vliwsim.native.loaded import Loaded
+from vliwsim.native.region import MOST_CONTEXTS
 from vliwsim.native.region import Region as Contextual
 from vliwsim.native.translate import Translation
 
 SLICE = 1 << 23
 """Cycles of a case between two looks at whether to go on, at most: well below a tenth of a second."""
+
+NEAR = 256
+"""Bytes between two regions whose status is copied in one go all the same."""
 
 FOLLOWING_EFFORT = 0
 """LLVM's optimisation level for code that follows undefined bytes: three times the text, mostly run for a few beats."""
@@ -198,15 +202,18 @@ class _Side:
 
 
 class Batch:
-    """A program made ready for many cases, of any sizes. ``given``: numbers of the registers every case gives."""
+    """A program made ready for many cases, of any sizes.
 
-    def __init__(self, machine: Machine, given: Collection[int]) -> None:
+    ``given``: numbers of the registers every case gives. ``most``: contexts of the translation.
+    """
+
+    def __init__(self, machine: Machine, given: Collection[int], most: int = MOST_CONTEXTS) -> None:
         self.machine = machine
         core = machine.core
         self.registers = len(core.register_names)
         self.defined = {*given, *(core.register_numbers[name] for name in core.zero_registers)}
         undefined = sum(1 << r for r in range(self.registers) if r not in self.defined)
-        self.region = Contextual(Contexts(machine.ready), Context(0), undefined)
+        self.region = Contextual(Contexts(machine.ready), Context(0), undefined, most)
         self.plain = _Side(machine, Translation(self.region))
         self.code = cache.code_of(driver.Driver().text(), 2)
         self.origin = np.arange(self.plain.contexts)
@@ -259,17 +266,18 @@ class Worker:
     def __init__(self, batch: Batch, plan: Plan, stop: np.ndarray, *, chained: bool = False) -> None:
         self.batch, self.plan, self.chained = batch, plan, chained
         memory = Memory(batch.machine.core.memory, plan.regions)
-        low = min((r.start for r in plan.regions), default=0)
-        high = max((min(r.start + r.bytes + r.over, len(memory.status)) for r in plan.regions), default=0)
+        spans = _spans(plan.regions, len(memory.status))
         for address, size, _, _ in plan.pieces:
             memory.define(address, bytes(size))
+        template = b"".join(bytes(memory.status[start : start + size]) for start, size, _ in spans)
         self.memory = np.zeros(len(memory.bytes), np.uint8)
         self.status = np.zeros(len(memory.status), np.uint8)
         self.stop = stop
         tables: dict[str, np.ndarray] = {
             "memory": self.memory,
             "status": self.status,
-            "template": np.frombuffer(bytes(memory.status[low:high]), np.uint8),
+            "template": np.frombuffer(template or b"\0", np.uint8),
+            "spans": _table(spans, 3),
             "shared": np.frombuffer(plan.shared or b"\0", np.uint8),
             "image": plan.image,
             "masks": np.array([0 if r in batch.defined else 15 for r in range(batch.registers)], np.uint8),
@@ -283,7 +291,7 @@ class Worker:
         }
         layout = batch.plain.loaded.layout
         numbers = {
-            "low": low, "span": max(0, high - low), "row": plan.row, "result": plan.result,
+            "spans.number": len(spans), "row": plan.row, "result": plan.result,
             "image.bytes": 4 * batch.registers, "masks.bytes": batch.registers,
             "registers.place": layout.registers, "masks.place": layout.masks, "handed": layout.counts,
             "registers.number": len(plan.registers), "pieces.number": len(plan.pieces),
@@ -357,6 +365,19 @@ class Worker:
             for key in TOTALS:
                 made[key][:] = 0
         return taken
+
+
+def _spans(regions: Sequence[Region], size: int) -> list[tuple[int, int, int]]:
+    """(address, bytes, bytes of those before) that hold all regions, near ones in one."""
+    found: list[tuple[int, int, int]] = []
+    for region in sorted(regions, key=lambda region: region.start):
+        end = min(region.start + region.bytes + region.over, size)
+        start, bytes_, before = found[-1] if found else (0, 0, 0)
+        if found and region.start - (start + bytes_) <= NEAR:
+            found[-1] = start, max(bytes_, end - start), before
+        else:
+            found.append((region.start, max(0, end - region.start), before + bytes_))
+    return found
 
 
 def _table(rows: Sequence[Sequence[int]], width: int) -> np.ndarray[Any, Any]:

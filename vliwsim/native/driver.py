@@ -21,14 +21,15 @@ back, the counter that a head counts too much when fuel runs out (-1: it cannot 
 given back, halted in, and the drain there."""
 
 PLAN = (*(f"plain.{name}" for name in SIDE), *(f"following.{name}" for name in SIDE),
-        "memory", "status", "template", "low", "span", "rows", "row", "results", "result", "shared", "before",
+        "memory", "status", "template", "spans", "spans.number", "rows", "row", "results", "result", "shared", "before",
         "image", "image.bytes", "masks", "masks.bytes", "registers.place", "masks.place", "handed", "origin",
         "registers", "registers.number", "pieces", "pieces.number", "values", "values.number",
         "arrays", "arrays.number", "ones", "chained", "stop", "slice", "fuel", "rest", "limit", "wanted")  # fmt: skip
-"""The plan's 64-bit numbers, in order. Addresses of tables: ``registers`` (number, offset, source), ``pieces``
-(address, bytes, offset, source), ``values`` (register, mask of the bytes that matter, offset in the result), ``arrays``
-(address, bytes, offset in the result). A source is 0 for the case's row, 1 for what all share, 2 for the result
-before. ``origin``: for each of the plain code's contexts the one that the following code has for it."""
+"""The plan's 64-bit numbers, in order. Addresses of tables: ``spans`` of memory whose status is that of ``template``
+(address, bytes, offset there), ``registers`` (number, offset, source), ``pieces`` (address, bytes, offset, source),
+``values`` (register, mask of the bytes that matter, offset in the result), ``arrays`` (address, bytes, offset in the
+result). A source is 0 for the case's row, 1 for what all share, 2 for the result before. ``origin``: for each of the
+plain code's contexts the one that the following code has for it."""
 
 INDEX = {name: k for k, name in enumerate(PLAN)}
 
@@ -220,7 +221,10 @@ class Driver(Text):
             value = self.get(self.at(self.get("%bases", source, "ptr"), offset), 0, "i32")
             self.set(registers, register, value, "i32")
         status, memory = self.plan("status", "ptr"), self.plan("memory", "ptr")
-        self.copy(self.at(status, self.plan("low")), self.plan("template", "ptr"), self.plan("span"))
+        template, table = self.plan("template", "ptr"), self.plan("spans", "ptr")
+        with self.each(self.plan("spans.number")) as j:
+            address, size, offset = self.columns(table, j, 3)
+            self.copy(self.at(status, address), self.at(template, offset), size)
         table = self.plan("pieces", "ptr")
         with self.each(self.plan("pieces.number")) as j:
             address, size, offset, source = self.columns(table, j, 4)
