@@ -250,9 +250,9 @@ ACCEPTED = [
 
 @pytest.mark.parametrize(("operands", "does", "name"), SYNTAX + TYPES + INTERVALS)
 def test_refused(operands: str, does: str, name: str) -> None:
-    start = time.perf_counter()
+    start = time.process_time()
     assert fault_names(operands, does) == [name]
-    assert time.perf_counter() - start < 2
+    assert time.process_time() - start < 20  # against hanging, no benchmark
 
 
 @pytest.mark.parametrize(("operands", "does"), ACCEPTED)

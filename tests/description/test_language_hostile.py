@@ -54,7 +54,7 @@ def test_spoilt_meanings(block: int) -> None:
             operands = spoil(operands, draw)
         else:
             does = spoil(does, draw)
-        start = time.perf_counter()
+        start = time.process_time()
         told = ""
         try:
             made = meaning(operands, does)
@@ -64,7 +64,7 @@ def test_spoilt_meanings(block: int) -> None:
         else:
             agree(made, draw, 3)
         assert len(told) < 20_000
-        assert time.perf_counter() - start < 5, does
+        assert time.process_time() - start < 20, does  # against hanging, no benchmark
 
 
 def _written(operand) -> str:

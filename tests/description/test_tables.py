@@ -221,7 +221,7 @@ def test_no_such_file(name: str) -> None:
 
 
 def test_hostile_files_are_refused_soon(tmp_path: Path) -> None:
-    start = time.perf_counter()
+    start = time.process_time()
     slow = row(does='"c = a; d = iterate(60, c, iterate(60, c, wrap(c + 1, 32)))"')
     slow += "examples = [" + "[[1], [3601]]," * 64 + "]\n"
     many = "".join(slow.replace("[copy]", f"[copy{k}]").replace("0x300", str(k + 1)) for k in range(60))
@@ -231,7 +231,7 @@ def test_hostile_files_are_refused_soon(tmp_path: Path) -> None:
     wrong = "".join(row(does='"d = "').replace("[copy]", f"[copy{k}]") for k in range(900))
     assert len(refused(tmp_path, wrong)) == 100
     assert refused(tmp_path, "#" * 600_000)[0].name == "cannot-read"
-    assert time.perf_counter() - start < 12
+    assert time.process_time() - start < 30  # against hanging, no benchmark
 
 
 @pytest.mark.parametrize("family", FAMILIES)
