@@ -1,7 +1,7 @@
 """The benchmark: ratios of one run, never a verdict. Machines are noisy: quote the medians.
 
 tools/bench            everything
-tools/bench stepper    one part: stepper, start, assemble, growth, native, shell
+tools/bench stepper    one part: stepper, start, assemble, check, growth, shell, native
 """
 
 from __future__ import annotations
@@ -184,6 +184,45 @@ def assembling() -> None:
 
     seconds = statistics.median(interleaved(ours, rounds=3)[0])
     line(f"assembling {count:,} lines", f"{seconds:.2f} s", "asked: at most 2 s")
+
+
+# --------------------------------------------------------------------------------------------------------------- check
+
+STRAIGHT = """kernel long
+core pair7
+given x : i32[n] at g1
+returns y : i32 in g2
+needs n == 1000
+start:
+@0 li g2, 0
+repeat 999 as i
+@i lw g{4 + i % 4}, [g1 + 4 * i] ; li h2, i
+end
+@1002 add g2, g4, g5 ; halt
+"""
+
+
+def checking() -> None:
+    from vliwsim.check.judge import check_kernel
+    from vliwsim.description.corefile import load_core
+    from vliwsim.program.assembler import assemble
+
+    def seconds(kernel: object) -> float:
+        def ours() -> float:
+            started = time.perf_counter()
+            check_kernel(kernel)
+            return time.perf_counter() - started
+
+        return statistics.median(interleaved(ours, rounds=3)[0])
+
+    taken = {}
+    for path in sorted((ROOT / "programs").glob("*/*.vliw")):
+        for core in assemble(path).cores_named:
+            taken[f"{path.stem} on {core}"] = seconds(assemble(path, load_core(core)))
+    slowest = max(taken, key=lambda name: taken[name])
+    line(f"check, slowest of {len(taken)} shipped", f"{taken[slowest]:.2f} s", f"{slowest}; asked: at most 0.5 s")
+    straight = assemble("long.vliw", text=STRAIGHT)
+    line(f"check, {len(straight.program.bundles)} straight bundles", f"{seconds(straight):.2f} s", "asked: at most 1 s")
 
 
 # -------------------------------------------------------------------------------------------------------------- growth
@@ -426,7 +465,10 @@ def many_cases(count: int = 100_000) -> None:
     line("cases of energy, n = 64", f"{rates:,.0f}/s", f"asked: 200,000/s; NumPy's reference alone {slower:.0f} x")
 
 
-PARTS = {"stepper": stepper, "start": start, "assemble": assembling, "growth": growth, "shell": shell, "native": native}
+PARTS = {
+    "stepper": stepper, "start": start, "assemble": assembling, "check": checking, "growth": growth, "shell": shell,
+    "native": native,
+}  # fmt: skip
 
 
 def main() -> int:

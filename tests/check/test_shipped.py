@@ -1,8 +1,7 @@
-"""The shipped kernels and some large programs: decided completely, in little time."""
+"""The shipped kernels and some large programs: decided completely; `tools/bench check` says how fast."""
 
 from __future__ import annotations
 
-import time
 from pathlib import Path
 
 import pytest
@@ -22,10 +21,7 @@ PAIRS = [(source, core) for source in SOURCES for core in assemble(source).cores
 @pytest.mark.parametrize(("source", "core"), PAIRS, ids=lambda part: getattr(part, "stem", part))
 def test_every_shipped_kernel_is_decided(source: Path, core: str) -> None:
     kernel = assemble(source, load_core(core))
-    check_kernel(kernel)  # warm: functions of operations, networkx
-    before = time.process_time()
     verdict = check_kernel(kernel)
-    assert time.process_time() - before <= 0.5
     assert verdict.complete
     assert not verdict.violated
     assert not [j for j in verdict.judgements.values() if j.outcome == UNDECIDED]
@@ -61,12 +57,10 @@ end
 """
 
 
-def test_a_thousand_bundles_in_a_second() -> None:
+def test_a_thousand_straight_bundles() -> None:
     kernel = assemble("long.vliw", text=STRAIGHT.replace("add h2, h3, h4", "li h2, i"))
     assert len(kernel.program.bundles) >= 1000
-    before = time.process_time()
     verdict = check_kernel(kernel)
-    assert time.process_time() - before <= 1.0
     assert verdict.ok
     assert verdict.outcome("out-of-array") == PROVED
 
