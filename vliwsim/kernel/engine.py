@@ -25,7 +25,7 @@ SLICE = 1 << 12
 SHORT = 0.05
 """Seconds between two looks, about: as many cycles as are done in that time, whatever runs them."""
 
-LONG = 1 << 17
+LONG = 1 << 15
 """Cycles after which ``auto`` takes a run for a long one and goes on with machine code."""
 
 ENGINES = ("auto", "step", "native")
