@@ -3,6 +3,7 @@
 What a file is called is a hash of the very text it was compiled from, the processor and the compiler's version: so
 nothing stale is ever found. A file carries a hash of its content; one that is cut short or spoilt is ignored and
 written again. Files appear whole (written aside, then renamed), so that any number of processes may share the folder.
+What is in it is run: a folder that others may write into is not used.
 """
 
 from __future__ import annotations
@@ -10,6 +11,7 @@ from __future__ import annotations
 import contextlib
 import hashlib
 import os
+import stat
 import tempfile
 from functools import lru_cache
 from pathlib import Path
@@ -29,6 +31,17 @@ def folder() -> Path:
     """Where the code is kept: ``vliwsim/native`` in the user's cache folder."""
     base = os.environ.get("XDG_CACHE_HOME") or os.environ.get("LOCALAPPDATA")
     return (Path(base) if base else Path.home() / ".cache") / "vliwsim" / "native"
+
+
+def ours(place: Path) -> bool:
+    """Whether a folder is there that belongs to this user and that nobody else may write into."""
+    try:
+        found = place.stat()
+    except OSError:
+        return False
+    if not stat.S_ISDIR(found.st_mode):
+        return False
+    return not hasattr(os, "getuid") or (found.st_uid == os.getuid() and not found.st_mode & 0o022)
 
 
 @lru_cache(maxsize=64)
@@ -58,6 +71,8 @@ def key(text: str, effort: int) -> str:
 def read(name: str) -> bytes | None:
     """What is kept under ``name``; None if nothing is, or it is spoilt."""
     path = folder() / (name + ENDING)
+    if not ours(path.parent):
+        return None
     try:
         content = path.read_bytes()
         os.utime(path)
@@ -72,6 +87,8 @@ def write(name: str, code: bytes) -> None:
     place = folder()
     try:
         place.mkdir(mode=0o700, parents=True, exist_ok=True)
+        if not ours(place):
+            return
         number, aside = tempfile.mkstemp(prefix=name[:16], suffix=".part", dir=place)
     except (OSError, RuntimeError):
         return
@@ -105,9 +122,14 @@ def shrink(most: int = MOST_BYTES) -> None:
 
 
 def clear() -> int:
-    """Drop everything; the number of files there were."""
-    files = list(folder().iterdir()) if folder().is_dir() else []
+    """Drop everything; the number of files that are gone."""
+    gone = 0
+    try:
+        files = list(folder().iterdir())
+    except OSError:
+        return 0
     for path in files:
         with contextlib.suppress(OSError):
             path.unlink()
-    return len(files)
+            gone += 1
+    return gone
