@@ -10,7 +10,7 @@ import pytest
 
 import vliwsim
 from vliwsim.kernel.runner import KernelRun, run_kernel
-from vliwsim.problems import InterfaceError, ReferenceFailure, VliwsimError
+from vliwsim.problems import InterfaceError, OptionError, ReferenceFailure, VliwsimError
 
 from .sources import DOUBLE, REFERENCES, SUM, write
 
@@ -349,3 +349,11 @@ class TestFormulas:
         one = run(tmp_path, SUM.replace("5 * n + 2", "5.25 * n + 1.25"), x=[1, 2])
         assert one.budget == 11.75
         assert one.verdict.endswith("right, legal, 0.25 cycles over budget.")
+
+
+def test_every_engine_gives_the_same_run() -> None:
+    kernel = vliwsim.load_kernel("energy")
+    runs = [kernel.run(n=4096, engine=engine) for engine in ("auto", "step", "native")]
+    assert all(run.ok and run.account == runs[0].account for run in runs)
+    with pytest.raises(OptionError, match="one of auto, step, native"):
+        kernel.run(n=4096, engine="fastest")

@@ -84,7 +84,7 @@ def _clear(context: click.Context, _: click.Parameter, wanted: bool) -> None:
     "--engine",
     type=click.Choice(["auto", "step", "native"]),
     default=None,
-    help="What runs it: the stepper, machine code, or machine code once a run is long (auto).",
+    help="What runs it: the stepper, machine code, or machine code once a run is long (auto, unless told otherwise).",
 )
 @click.option(
     "--clear-code",

@@ -15,6 +15,7 @@ from vliwsim.kernel.outputs import ReadMemory
 from vliwsim.machine.memory import Region
 from vliwsim.machine.recorder import Record, record
 from vliwsim.machine.stepper import Machine
+from vliwsim.problems import OptionError, problem
 
 if TYPE_CHECKING:
     from vliwsim.native.engine import Native
@@ -70,7 +71,11 @@ def simulate(
     ``engine``: ``step``; ``native``, machine code wherever there is some; ``auto``, that only once a run is long.
     ``interrupt_at``: the cycle, from 0, at or after which one interrupt is taken. ``listen`` gets a record
     of every beat. ``machine``: one of the program that is there already.
+
+    Raises :class:`~vliwsim.problems.OptionError` for any other engine.
     """
+    if engine not in ENGINES:
+        raise OptionError(problem("unknown-engine", f"engine {engine!r}", f"one of {', '.join(ENGINES)}"))
     machine = machine or Machine(setup.kernel.program)
     regions = [Region(a.name, a.start, a.bytes, a.over) for a in setup.areas]
     state = machine.start(dict(setup.registers), setup.memory, regions)

@@ -13,7 +13,7 @@ from vliwsim.kernel.crew import batch_of
 from vliwsim.kernel.interface import interface_of
 from vliwsim.kernel.loading import Changes, assemble_source
 from vliwsim.kernel.reference import Reference, load_reference
-from vliwsim.kernel.runner import LIMIT, KernelRun, run_kernel
+from vliwsim.kernel.runner import ENGINE, LIMIT, KernelRun, run_kernel
 from vliwsim.program.kernel import Kernel
 
 if TYPE_CHECKING:
@@ -56,13 +56,15 @@ class LoadedKernel:
         limit: int = LIMIT,
         interrupt_at: int | None = None,
         trace: bool = False,
+        engine: str = ENGINE,
         **arrays: Any,
     ) -> KernelRun:
         """Run the kernel on ``arrays``: arrays, scalars and sizes by name.
 
         ``case`` names a case to start from; with nothing given the first one is run. ``given`` takes inputs whose names
         are those of options here. ``reference``: compare with the reference, if there is one. ``limit`` in cycles.
-        ``interrupt_at``: cycle, from 0. ``trace``: keep a record of every beat up to the halt.
+        ``interrupt_at``: cycle, from 0. ``trace``: keep a record of every beat up to the halt. ``engine``: ``step``,
+        ``native`` (machine code) or ``auto`` (that once a run is long).
 
         A run that is wrong, illegal or over budget is a result, not an exception: look at ``ok`` and ``diagnostics``.
         Raises :class:`~vliwsim.problems.VliwsimError` for inputs that do not fit and a reference that fails.
@@ -77,6 +79,7 @@ class LoadedKernel:
             limit=limit,
             interrupt_at=interrupt_at,
             trace=trace,
+            engine=engine,
         )
 
     @cached_property

@@ -23,7 +23,7 @@ from vliwsim.machine.recorder import Record
 from vliwsim.problems import InterfaceError, Problem, problem
 from vliwsim.program.kernel import Formula, Kernel
 
-ENGINE = "step"
+ENGINE = "auto"
 """The engine unless told otherwise."""
 
 LIMIT = 10_000_000
