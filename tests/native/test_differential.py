@@ -10,7 +10,7 @@ from concurrent.futures import ProcessPoolExecutor
 
 import pytest
 
-from .campaign import run
+from .campaign import PINNED, run
 
 PROGRAMS, PART = 5_000, 250
 LONG_PROGRAMS, CHUNK = 20_000, 1_000
@@ -23,6 +23,12 @@ def test_native_equals_model(first: int) -> None:
     assert tally.found == []
     assert tally.programs == PART
     assert tally.cycles["machine code"] > tally.cycles["all"] / 2
+
+
+def test_native_keeps_every_pinned_rule() -> None:
+    tally = run(PINNED)
+    assert tally.found == []
+    assert tally.programs == len(PINNED)
 
 
 @pytest.mark.long

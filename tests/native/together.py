@@ -19,6 +19,9 @@ from vliwsim.native.engine import Native
 
 T = TypeVar("T")
 
+KEPT: dict[tuple[str, int], Share] | None = None
+"""Code by text and effort, where it is to be kept for programs that are run again and again."""
+
 
 class Share:
     """One text's part of a module's code."""
@@ -107,11 +110,22 @@ def provide(jobs: Sequence[Job[Any]]) -> None:
 
 
 def compile_jobs(jobs: Sequence[Job[Any]], effort: int) -> None:
-    texts = [renamed(job.wanted[0], f"p{k}.") for k, job in enumerate(jobs) if job.wanted]
+    """Give every job its part of one module's code; what is kept is not made again."""
+    new = []
+    for job in jobs:
+        assert job.wanted is not None
+        job.made = None if KEPT is None else KEPT.get(job.wanted)
+        if job.made is None:
+            new.append((job, job.wanted))
+    texts = [renamed(text, f"p{k}.") for k, (_, (text, _)) in enumerate(new)]
+    if not texts:
+        return
     with verifying():
         code = Code(compile_text("\n".join(texts), effort))
-    for k, job in enumerate(jobs):
+    for k, (job, wanted) in enumerate(new):
         job.made = Share(code, f"p{k}.")
+        if KEPT is not None:
+            KEPT[wanted] = job.made
 
 
 @contextmanager
