@@ -135,3 +135,15 @@ def test_opposite_guards_of_two_branches() -> None:
     assert ("two", 0) in reached
     ends = [context for context in graph.contexts if kernel.map.bundle_at[context.at] == ("two", 0)]
     assert len(ends) == 1
+
+
+@pytest.mark.parametrize("seed", [*range(120), 15898])
+def test_a_fork_leads_somewhere_else(seed: int) -> None:
+    """Each side knows more than was known before, so that what comes behind it is looked at."""
+    made = trial(Random(seed))
+    graph = Graph(program_of(core_of(made.core), made.program))
+    graph.walk(600)
+    for context, beat in zip(graph.contexts, graph.beats, strict=True):
+        if beat is not None and beat.did == "fork":
+            assert beat.successors
+            assert context not in beat.successors
