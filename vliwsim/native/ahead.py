@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections import Counter
+
 from vliwsim.machine.memory import DEFINED, UNDEFINED
 from vliwsim.native.strips import Walk
 from vliwsim.native.text import number
@@ -126,7 +128,7 @@ class Ahead(Variables):
         left = self.count_of("left")
         self.put(f"br i1 {self.compare('eq', 'i64', left, '0')}, label %end{k}, label %more{k}{self.unlikely}")
         self.block(f"end{k}")
-        self.count_strip(k)
+        self.count_strip(k, whole=True)
         more = self.let(f"shl i64 {self.count_of('allotted')}, 2")
         more = self.let(f"call i64 @llvm.umin.i64(i64 {more}, i64 {MOST})")
         self.put(f"store i64 {more}, ptr {self.variable(f'reach{head}')}")
@@ -134,7 +136,7 @@ class Ahead(Variables):
         self.block(f"more{k}")
         self.put(f"store i64 {self.let(f'sub i64 {left}, 1')}, ptr {self.variable('left')}")
 
-    def count_strip(self, k: int) -> None:
+    def count_strip(self, k: int, whole: bool) -> None:
         """Count the passes of the strip that ends, give back those that were not run, and write the registers."""
         for register in sorted(self.copied):
             held = self.held_before(register)
@@ -143,13 +145,28 @@ class Ahead(Variables):
                 missing = self.select(held.mask, "i8", "15", "0") if held.mask else "0"
                 self.put(f"store i8 {missing}, ptr %u{register}")
         left, allotted = self.count_of("left"), self.count_of("allotted")
-        self.add_to_chain(k, self.let(f"sub i64 {allotted}, {left}"))
+        passes = self.let(f"sub i64 {allotted}, {left}")
+        self.add_to_chain(k, passes)
+        self.count_turning(k, passes, whole)
         fuel = self.let("load i64, ptr %fuel")
         self.put(f"store i64 {self.let(f'add i64 {fuel}, {left}')}, ptr %fuel")
 
+    def count_turning(self, k: int, passes: str, whole: bool) -> None:
+        """Count what taken branches cost in so many passes, the last of them run up to context ``k`` or whole."""
+        first = self.region.chain[k]
+        cycle = range(first, first + len(self.region.strips[self.head_of(k)].cycle))
+        a_pass, last = Counter[str](), Counter[str]()
+        for one in cycle:
+            for cause, cycles in self.turning_costs(one):
+                a_pass[cause] += cycles
+                last[cause] += cycles * (whole or one < k)
+        for cause, cycles in sorted(a_pass.items()):
+            before = self.let(f"mul i64 {self.let(f'sub i64 {passes}, 1')}, {cycles}")
+            self.stall(cause, self.let(f"add i64 {before}, {last[cause]}"))
+
     def leave_strip(self, k: int) -> None:
         """Out of a trusted copy in mid pass, from its context ``k``: behind it the pass is not run."""
-        self.count_strip(k)
+        self.count_strip(k, whole=False)
         head = self.head_of(k)
         left = self.count_of("left")
         run = self.let(f"sub i64 {self.count_of('allotted')}, {left}")

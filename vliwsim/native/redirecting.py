@@ -84,8 +84,11 @@ class Redirecting(Landing, Executing):
                 taken, other = self.label("taken"), self.label("on")
                 self.put(f"br i1 {bit}, label %{taken}, label %{other}")
                 self.block(taken)
-            for cause, cycles in redirect_freezes(self.ready, target.at):
-                self.stall(cause, str(cycles))
+            there = self.region.index.get(target)
+            within = self.strip is not None and there is not None and self.region.chain[there] == self.strip
+            if not (within and self.turning_costs(self.k)):  # what a pass costs is counted where the strip ends
+                for cause, cycles in redirect_freezes(self.ready, target.at):
+                    self.stall(cause, str(cycles))
             self.put(f"br label %{self.way_to(target)}")
             if turn.sure:
                 return

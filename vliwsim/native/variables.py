@@ -11,6 +11,7 @@ from typing import NamedTuple
 
 from vliwsim.description.operations import Operation
 from vliwsim.machine.parts import Part
+from vliwsim.machine.redirecting import redirect_freezes
 from vliwsim.native.contexts import Context, Flight, Turn
 from vliwsim.native.region import Region
 from vliwsim.native.text import UNLIKELY, Text, number
@@ -69,6 +70,21 @@ class Variables(Text):
     def masked(self, register: int) -> bool:
         """Whether a register has undefined bytes to look after."""
         return self.following or bool(self.ever_undefined >> register & 1)
+
+    def turning_costs(self, k: int) -> list[tuple[str, int]]:
+        """(cause, cycles) of the taken branch that alone leads from context ``k`` on within its strip, if one does."""
+        if k < self.region.own:
+            return []
+        step, chain = self.region.steps[k], self.region.chain
+
+        def inside(context: Context | None) -> bool:
+            index = self.region.index.get(context) if context else None
+            return index is not None and chain[index] == chain[k]
+
+        turned = [target for target in step.turned if inside(target)]
+        if len(turned) != 1 or turned[0] is None or any(map(inside, (step.waiting, step.refreshed, step.fallen))):
+            return []
+        return redirect_freezes(self.ready, turned[0].at)
 
     def written(self, contexts: Iterable[int]) -> frozenset[int]:
         """Registers in which something lands in these contexts."""
