@@ -459,7 +459,7 @@ class TestProcesses:
         """An endless run, its progress on a terminal, interrupted once that is seen; its report in a pipe."""
         path = write(tmp_path, SUM.replace("count g16, loop", "jump loop").replace("g10 then +2", "g10 + 0"))
         main, other = pty.openpty()
-        command = [sys.executable, "-m", "vliwsim", "run", str(path), "--limit", "1000000000"]
+        command = [sys.executable, "-m", "vliwsim", "run", str(path), "--limit", "1000000000000000"]
         process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=other, env={**os.environ, "TERM": "xterm"})
         os.close(other)
         seen = b""
