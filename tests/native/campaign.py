@@ -12,7 +12,7 @@ import argparse
 import sys
 import time
 from collections import Counter
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from random import Random
 from typing import NamedTuple
@@ -35,7 +35,7 @@ from .together import Job, Shared, together
 BATCH = 100
 """Programs compiled together."""
 
-AHEAD = 1 << 17
+AHEAD = 1 << 14
 """Cycles beyond a run's end at which its limit is."""
 
 MOST_FOUND = 1_000
@@ -249,7 +249,7 @@ def rest(one: State, other: State) -> Iterator[str]:
             yield f"{name}: stepper {a!r}, native {b!r}"
 
 
-def run(seeds: range) -> Tally:
+def run(seeds: Sequence[int]) -> Tally:
     """All programs of these seeds."""
     tally = Tally()
     for first in range(0, len(seeds), BATCH):

@@ -27,7 +27,7 @@ SPLIT = replace(BENCH, misaligned="split")
 ONE_LOCKED = replace(ONE_PORT, interlocked=True)
 SHARED = replace(BENCH, broadcast=True)
 WAITS = replace(BENCH, waits=(PlainWait(8, 4, 2),))
-PAYS = replace(BENCH, taken_penalty=3, service=2)
+PAYS = replace(BENCH, taken_penalty=3, straddle_freeze=2, service=2)
 
 NUMBERS = (words(0, *range(1, 12)),)
 """Eleven words from 0 on."""
@@ -54,7 +54,7 @@ def pinned(
 
 def loop(first: str, second: str, *end: str, passes: int = 24, core: PlainCore = BENCH, **more: object) -> Trial:
     """A loop of two bundles, with its count in the first (the branch's latency is 2)."""
-    code = f"top: {first} ; g.flow count g15, top", second, *end, "g.flow halt"
+    code = f"!top: {first} ; g.flow count g15, top", second, *end, "end: g.flow halt"
     return pinned(*code, core=core, **{"g15": passes - 1, "g1": 0, "g3": 0, **more})  # type: ignore[arg-type]
 
 
@@ -129,6 +129,12 @@ OWN = (
     loop("g.mem lw g1, [g2 then +4] ; h.mem lw h1, [h2 then +8]", "idle 1", regions=MANY, g2=0, h2=8, at=31),
     loop(PAIR_OF_LOADS, SUM, core=FAR, regions=MANY, g2=0, h2=8, at=100, passes=45),
     *(
+        loop("g.mem lw g1, [g2 then +4]", second, core=PAYS, regions=GAP, g2=g2, h5=0, h6=9, g15=passes)
+        for second in (SUM, "h.sum add h5, h5, 1 ; h.flow beq h5, h6, end", "h.flow beq h5, h5, end")
+        for g2 in (0, 40)
+        for passes in (15, 30)
+    ),
+    *(
         loop(f"g.mem lw g1, [{address}] if g8", AWAKE, regions=NUMBERS, g2=at, g8=0, g9=14, g10=0, g11=1)
         for address in ("g2", "g2 then +4 in ring 16", "g2 then +4")
         for at in (0, 2, 40, 42, 44)
@@ -141,6 +147,14 @@ OWN = (
         )
         for to in (0, 96, 192, 240)
         for address in ("g2", "g2 then +4", "g2 then +-4", "g2 then +4 in ring 32", "g2 then +4 in ring 16")
+    ),
+    *(
+        pinned(
+            f"top: h.flow halt if g8 ; {AWAKE}", "g.mem lw g1, [g2 then +4] ; g.flow count g15, top", "g.flow halt",
+            core=replace(core, branch_latency=1), regions=NUMBERS, g1=0, g2=0, g8=0, g9=times, g10=0, g11=1, g15=30,
+        )
+        for core in (BENCH, PAYS, LOCKED)
+        for times in (3, 8, 9)
     ),
 )  # fmt: skip
 
