@@ -205,7 +205,8 @@ class Words:
         if incident.rule == "ran-off-the-end":
             return "halt in the last bundle"
         if incident.rule == "undefined-used" and incident.register is not None:
-            return f"a value in {self.core.register_names[incident.register]} first, or a given item there"
+            name = self.core.register_names[incident.register]
+            return f"a later stamp where a value for {name} is still in flight; else a value in it first, or a `given`"
         if incident.rule == WRONG_ITEM:
             return self._right_stamp(incident)
         return ""

@@ -287,9 +287,9 @@ def judged(
 
 
 def _limit_problem(kernel: Kernel, simulation: Simulation, limit: int) -> Problem:
-    hottest = max(range(len(simulation.counts)), key=lambda k: simulation.counts[k])
-    found = f"no halt in {limit} cycles; {where(kernel, hottest)} issued {simulation.counts[hottest]} times"
-    return problem("cycle-limit", found, f"a halt within {limit} cycles", "--limit CYCLES", kind="illegal")
+    hottest = max(range(len(simulation.begun)), key=lambda k: simulation.begun[k])
+    found = f"no halt in {limit} cycles; {where(kernel, hottest)} issued {simulation.begun[hottest]} times"
+    return problem("cycle-limit", found, f"a halt within {limit} cycles", "a greater --limit", kind="illegal")
 
 
 def whole_number(setup: Setup, formula: Formula | None) -> int | None:
