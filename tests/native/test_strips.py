@@ -34,7 +34,7 @@ def source(r: Random, core: str) -> str:
         step = r.choice((1, 1, 1, 2, -1)) * size if r.random() < 0.9 else r.choice((1, 2, 6))
         address = r.choice((
             f"[{register} then {step:+}]", f"[{step:+} then {register}]", f"[{register} + {r.randrange(4) * size}]",
-            f"[{register} then {abs(step):+} in ring {r.choice((16, 64, 256))}]", f"[{register} + g14]",
+            f"[{register} then {abs(step):+} in ring {r.choice((2, 4, 16, 64, 256))}]", f"[{register} + g14]",
         ))  # fmt: skip
         guard = r.choice(("", "", " if g21", " if not g21"))
         lines.append(f"{operation} {'g16' if operation == 'ld' else result}, {address}{guard}")
@@ -109,6 +109,23 @@ def test_strips_equal_the_stepper(core: str, long: bool) -> None:
         strips += strip
         assert not text, (seed, text)
     assert strips > 40
+
+
+def test_an_access_longer_than_its_ring_is_judged() -> None:
+    """It reaches behind the ring, where there may be no array."""
+    kernel = assemble("walk.vliw", text=(
+        "kernel walk\ncore pair7\nstart:\n@0 idle\nloop:\n@0 sw g2, [g10 then +4 in ring 2]\n@4 count g20, loop\n"
+        "@9 idle\nfinish:\n@0 halt\n"
+    ))  # fmt: skip
+    machine, names = Machine(kernel.program), kernel.core.register_numbers
+    ends = []
+    for engine in (machine, Native(machine, effort=0)):
+        given = {names["g10"]: 64, names["g20"]: 40, names["g2"]: 1}
+        state = machine.start(given, [(0, bytes(512))], [Region("x", 0, 512)])
+        state.memory.status[66] = 0
+        ends.append(end(machine, state, engine))
+    assert "out-of-array" in str(ends[0][0])
+    assert ends[0] == ends[1]
 
 
 def test_what_is_trusted() -> None:

@@ -129,7 +129,7 @@ class _Moves:
     def added(self, reach: Reach, size: int) -> tuple[int | None, int] | None:
         """A register and bytes that an address adds to its base; None where the address cannot be known ahead."""
         steps = self.steps(reach.base) if reach.base < self.first_constant else None
-        if steps is None or any(by % size for by, _ in steps):
+        if steps is None or any(by % size or 0 < ring < size for by, ring in steps):
             return None
         if reach.mode is Mode.AFTER:
             return None, 0
