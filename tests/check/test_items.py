@@ -173,3 +173,16 @@ last:
     assert verdict.outcome("wrong-item") in (PROVED, VIOLATED)
     wrong = [i for j in [verdict.judgements["wrong-item"]] for i in j.incidents]
     assert not [i for i in wrong if i.register == kernel.core.register_numbers["g4"]]
+
+
+def test_a_section_made_too_short_is_named() -> None:
+    """The last beat of a five-beat loop moved to @3: the loop has four beats now, and the stamp to give is @4."""
+    kernel = assemble("short.vliw", text=(
+        "kernel short\ncore pair7\ngiven x : i32[n] at g1\ngiven again : i32 = n - 2 in g16\nreturns y : i32[n] at g9\n"
+        "needs n >= 2\nfirst:\n@0 lw g3, [g1 then +4] item 1\n@4 mul g4, g3, 3 item 1\nloop:\n"
+        "@0 lw g3, [g1 then +4] item 0\n@3 mul g4, g3, 3 item 0\n@2 add g5, g4, 1 item 1\n"
+        "@3 sw g5, [g9 then +4] item 1\n@1 count g16, loop\nfin:\n@2 add g5, g4, 1 item 0\n"
+        "@3 sw g5, [g9 then +4] item 0\n   halt\n"
+    ))  # fmt: skip
+    told = [p.remedy for p in Words(kernel, check_kernel(kernel)).problems() if p.name == "wrong-item"]
+    assert told[0] == "@4, for which loop has become too short"

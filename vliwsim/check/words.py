@@ -221,7 +221,12 @@ class Words:
         if same or right:
             nearest = min(same or right, key=lambda b: (abs(b - site[0]), b))
             label, beat = self.kernel.map.bundle_at[nearest]
-            return f"@{beat}, where it is of the item said" if label == section else f"{label}@{beat}"
+            if label == section:
+                return f"@{beat}, where it is of the item said"
+            if beat == 0 and nearest > site[0]:  # just behind a section that an earlier stamp has made too short
+                beats = sum(self.bundles[k].beats for k in range(site[0], nearest))
+                return f"@{self.kernel.map.bundle_at[site[0]][1] + beats}, for which {section} has become too short"
+            return f"{label}@{beat}"
         return f"item {found}, or an earlier or later stamp for what sends it"
 
     def notes(self) -> tuple[Problem, ...]:
